@@ -1,0 +1,1 @@
+"""The linear relaxation: one dictionary, dual simplex, rows added to a solved problem."""
