@@ -173,6 +173,11 @@ class Dictionary:
         other._view(self.table.copy())
         return other
 
+    def shed(self) -> None:
+        """Give up the table and keep the basis; `refactor` computes the table again."""
+        self.table = self._transposed = self.entries = self.reduced = None
+        self.values = self.rooms = None
+
     def _take_table(self, entries: np.ndarray) -> None:
         """Make the table from its first n columns, (m + 1, n); the others are not yet valid."""
         table = np.zeros((len(entries), self.columns + 3))

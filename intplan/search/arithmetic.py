@@ -1,0 +1,274 @@
+"""Exact checks of plans and bounds against the integers of a `Problem`."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Sequence
+from fractions import Fraction
+
+import numpy as np
+
+from intplan.relaxation.rows import RowStore
+from intplan.search.exact import ExactAnswer, ExactSystem, solve_exactly
+from intplan.sheet.problem import ExactRow, Number, Problem, lowest
+
+SAFE = 2.0**52  # sums of integers below this are exact in doubles
+GUESS = 10**6  # greatest denominator guessed for a divisible amount
+MULTIPLIER_GUESS = 10**7  # greatest denominator guessed for a multiplier
+
+
+class Arithmetic:
+    """The exact side of one search.
+
+    Parameters
+    ----------
+    problem : the sheet's integers
+    rows : the store of the search; rules first (limits possibly tightened), then cuts
+    """
+
+    def __init__(self, problem: Problem, rows: RowStore) -> None:
+        self.problem = problem
+        self.rows = rows
+        self.rules = len(problem.rows)
+        self.divisible = (~problem.whole).nonzero()[0].tolist()
+        self.largest_shift = max((row.shift for row in problem.rows), default=0)
+        self.sizes = np.abs(problem.matrix)
+        self.limits = [self._written_limits(row) for row in problem.rows]
+        self.plain = all(
+            max(map(abs, row.coefficients), default=0) < SAFE
+            and _is_integer(row.least)
+            and _is_integer(row.most)
+            for row in problem.rows
+        )
+
+    # ------------------------------------------------------------------ plans
+
+    def complete(self, x: np.ndarray) -> list[Number] | None:
+        """Return an exact plan near a point whose whole activities are (nearly) whole.
+
+        Divisible amounts are first guessed as the nearest fractions of small denominator; where
+        that breaks a rule, the problem that is left once the whole activities are fixed is
+        solved in rationals.  None if no divisible amounts fit.
+        """
+        problem = self.problem
+        whole = np.rint(x)
+        plan: list[Number] = [int(v) for v in whole.tolist()]
+        if not self.divisible:
+            return plan if self.fits(plan, whole) else None
+        for j in self.divisible:
+            plan[j] = lowest(self._clipped(j, Fraction(x.item(j)).limit_denominator(GUESS)))
+        if self.fits(plan):
+            return plan
+        answer = solve_exactly(self._divisible_system(plan))
+        if answer.status != "optimal":
+            return None
+        for j, value in zip(self.divisible, answer.point, strict=True):
+            plan[j] = lowest(value)
+        return plan if self.fits(plan) else None
+
+    def _clipped(self, column: int, value: Fraction) -> Number:
+        low, high = self.problem.exact_least[column], self.problem.exact_most[column]
+        if low is not None and value < low:
+            return low
+        return high if high is not None and value > high else value
+
+    def _divisible_system(self, plan: Sequence[Number]) -> ExactSystem:
+        """Return the problem over the divisible activities with the whole ones fixed."""
+        problem = self.problem
+        place = {j: k for k, j in enumerate(self.divisible)}
+        entries, least, most = [], [], []
+        for row in problem.rows:
+            line = [0] * len(place)
+            fixed: Number = 0
+            for j, c in zip(row.columns, row.coefficients, strict=True):
+                if j in place:
+                    line[place[j]] = c
+                else:
+                    fixed += c * plan[j]
+            if any(line):
+                entries.append(line)
+                least.append(None if row.least is None else row.least - fixed)
+                most.append(None if row.most is None else row.most - fixed)
+        cost = np.zeros(len(place), object)
+        for j, c in problem.exact_cost:
+            if j in place:
+                cost[place[j]] = c
+        return ExactSystem(
+            np.array(entries, object).reshape(len(entries), len(place)),
+            least,
+            most,
+            cost,
+            [problem.exact_least[j] for j in self.divisible],
+            [problem.exact_most[j] for j in self.divisible],
+        )
+
+    def fits(self, plan: Sequence[Number], doubles: np.ndarray | None = None) -> bool:
+        """Tell whether a plan meets every bound and rule exactly.
+
+        Parameters
+        ----------
+        plan : one exact amount a column
+        doubles : the same plan where every amount is whole; checked in doubles when every sum
+            is then exact
+        """
+        problem = self.problem
+        for value, low, high in zip(
+            plan, problem.exact_least, problem.exact_most, strict=True
+        ):
+            if (low is not None and value < low) or (high is not None and value > high):
+                return False
+        if doubles is not None and self.plain and len(problem.rows):
+            reach = (self.sizes @ np.abs(doubles)).max()
+            if reach * 2.0**self.largest_shift < SAFE:
+                values = problem.matrix @ doubles
+                return bool(
+                    (values >= problem.row_least).all() and (values <= problem.row_most).all()
+                )
+        return all(self._row_fits(row, plan) for row in problem.rows)
+
+    @staticmethod
+    def _row_fits(row: ExactRow, plan: Sequence[Number]) -> bool:
+        value = sum((c * plan[j] for j, c in zip(row.columns, row.coefficients, strict=True)), 0)
+        return (row.least is None or value >= row.least) and (
+            row.most is None or value <= row.most
+        )
+
+    # ------------------------------------------------------------------ bounds
+
+    def row_terms(self, number: int) -> tuple[list[tuple[int, Number]], Number | None, Number | None]:
+        """Return one row of the store exactly, in the store's scale: its terms and limits."""
+        if number < self.rules:
+            row = self.problem.rows[number]
+            unit = Fraction(1, 1 << row.shift)
+            terms = [(j, c * unit) for j, c in zip(row.columns, row.coefficients, strict=True)]
+            return terms, *self.limits[number]
+        line = self.rows.matrix[number]
+        terms = [(int(j), Fraction(line.item(j))) for j in line.nonzero()[0]]
+        return terms, _exact(self.rows.least[number]), _exact(self.rows.most[number])
+
+    @staticmethod
+    def _written_limits(row: ExactRow) -> tuple[Number | None, Number | None]:
+        unit = Fraction(1, 1 << row.shift)
+        return (
+            None if row.least is None else row.least * unit,
+            None if row.most is None else row.most * unit,
+        )
+
+    def bound_of(self, column: int, side: int, value: float) -> Number | None:
+        """Return a node's bound exactly: the written one where the double stands for it."""
+        problem = self.problem
+        if side:
+            written, double = problem.exact_most[column], problem.most[column]
+        else:
+            written, double = problem.exact_least[column], problem.least[column]
+        return written if value == double else _exact(value)
+
+    def exact_bound(
+        self,
+        weight: int,
+        multipliers: dict[int, Fraction],
+        least: np.ndarray,
+        most: np.ndarray,
+    ) -> Fraction | None:
+        """Return the bound that exact multipliers prove, None for minus infinity.
+
+        Parameters
+        ----------
+        weight, multipliers : as in `intplan.search.evidence`
+        least, most : (columns,) bounds of the node, taken as exact
+        """
+        reduced: dict[int, Number] = {}
+        if weight:
+            scale = Fraction(1, 1 << self.problem.cost_shift)
+            reduced = {j: c * scale for j, c in self.problem.exact_cost}
+        total: Number = 0
+        for number, y in multipliers.items():
+            terms, low, high = self.row_terms(number)
+            limit = low if y > 0 else high
+            if limit is None:
+                return None
+            total += y * limit
+            for j, c in terms:
+                reduced[j] = reduced.get(j, 0) - y * c
+        for j, d in reduced.items():
+            if d == 0:
+                continue
+            limit = self.bound_of(j, 0, least[j]) if d > 0 else self.bound_of(j, 1, most[j])
+            if limit is None:
+                return None
+            total += d * limit
+        return Fraction(total)
+
+    def guess_multipliers(
+        self, numbers: Iterable[int], values: Iterable[float]
+    ) -> dict[int, Fraction]:
+        """Return multipliers as the nearest fractions of small denominator."""
+        return {
+            int(i): Fraction(float(v)).limit_denominator(MULTIPLIER_GUESS)
+            for i, v in zip(numbers, values, strict=True)
+        }
+
+    def solve_node(
+        self,
+        held: np.ndarray,
+        basis: Sequence[int],
+        least: np.ndarray,
+        most: np.ndarray,
+        stop: Callable[[], bool],
+    ) -> ExactAnswer:
+        """Solve a node's relaxation in rationals, from the basis that doubles ended with.
+
+        Parameters
+        ----------
+        held : numbers of the rows to hold
+        basis : variable numbers, rows counted by the store
+        least, most : (columns,) bounds of the node
+
+        Returns
+        -------
+        ExactAnswer
+            Its value is in the engine's cost and its multipliers are by the store's rows.
+        """
+        n = len(least)
+        numbers = held.tolist()
+        place = {number: k for k, number in enumerate(numbers)}
+        entries = np.zeros((len(numbers), n), object)
+        scales, row_least, row_most = [], [], []
+        for k, number in enumerate(numbers):
+            terms, low, high = self.row_terms(number)
+            scale = 1
+            for _, c in terms:
+                scale = max(scale, Fraction(c).denominator)
+            for j, c in terms:
+                entries[k, j] = int(c * scale)
+            scales.append(scale)
+            row_least.append(None if low is None else low * scale)
+            row_most.append(None if high is None else high * scale)
+        cost = np.zeros(n, object)
+        for j, c in self.problem.exact_cost:
+            cost[j] = c
+        system = ExactSystem(
+            entries, row_least, row_most, cost,
+            [self.bound_of(j, 0, v) for j, v in enumerate(least)],
+            [self.bound_of(j, 1, v) for j, v in enumerate(most)],
+        )  # fmt: skip
+        start = [v if v < n else n + place[v - n] for v in basis]
+        answer = solve_exactly(system, start, stop)
+        weight = Fraction(1, 1 << self.problem.cost_shift) if answer.status == "optimal" else 1
+        answer.multipliers = {
+            numbers[k]: y * scales[k] * weight for k, y in answer.multipliers.items()
+        }
+        if answer.value is not None:
+            answer.value *= weight
+        return answer
+
+
+def _exact(limit: float) -> Number | None:
+    """Return a double limit as an exact number, None if it is infinite."""
+    limit = float(limit)
+    if limit in (np.inf, -np.inf):
+        return None
+    return int(limit) if limit.is_integer() else Fraction(limit)
+
+
+def _is_integer(limit: Number | None) -> bool:
+    return limit is None or (Fraction(limit).denominator == 1 and abs(limit) < SAFE)

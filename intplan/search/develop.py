@@ -1,0 +1,398 @@
+"""One node: re-optimised, tightened, and closed or given the activity to branch on."""
+
+from __future__ import annotations
+
+import math
+from fractions import Fraction
+from typing import Any, NamedTuple
+
+import numpy as np
+
+from intplan.relaxation.dictionary import DRIFT, Dictionary, Multipliers, Status
+from intplan.relaxation.start import cold_start
+from intplan.search import branching
+from intplan.search.context import Context
+from intplan.search.evidence import LEAST, MOST, Proof
+from intplan.search.exact import ExactAnswer
+from intplan.search.node import Branch
+from intplan.search.tightening import Bounds, tighten_by_cost
+from intplan.sheet.problem import lowest
+
+FRACTION = 1e-6  # distance from a whole value that counts as fractional
+CHECK_DRIFT_AFTER = 30  # pivots
+ATTEMPTS = 6  # times a node is solved again after its own tightenings
+ROUND_ALWAYS = 64  # nodes at which rounding is tried; later at every eighth
+
+
+class Split(NamedTuple):
+    """The activity to branch on at a value that is not whole, and what each side may gain."""
+
+    column: int
+    value: float
+    down_gain: float
+    up_gain: float
+
+
+class NodeWork:
+    """A node being solved.
+
+    Parameters
+    ----------
+    context : the search
+    number, depth : of the node
+    inherited : safe bound of its parent
+    dictionary : the parent's last dictionary, owned
+    bounds : the node's bounds, owned
+    steps : receives the node's tightenings; see `intplan.search.record`
+    """
+
+    def __init__(
+        self,
+        context: Context,
+        number: int,
+        inherited: float,
+        dictionary: Dictionary,
+        bounds: Bounds,
+        steps: list[dict[str, Any]],
+    ) -> None:
+        self.context = context
+        self.number = number
+        self.bound = inherited
+        self.dictionary = dictionary
+        self.bounds = bounds
+        self.steps = steps
+        self._closure_of: tuple[Proof, dict[str, Any]] | None = None
+
+    # ------------------------------------------------------------------ the steps in order
+
+    def enter(self, branch: Branch) -> bool:
+        """Apply the branching bound and what the rules make of it; False if that closed it."""
+        self.bounds.set(branch.column, branch.side, branch.value, False)
+        return self._spread([branch.column])
+
+    def develop(self, branch: Branch | None = None) -> Split | None:
+        """Solve the node as far as a decision: None once it is closed, else where to branch."""
+        context, dictionary = self.context, self.dictionary
+        for attempt in range(ATTEMPTS):
+            proof = self.relax()
+            if not isinstance(proof, Proof):
+                return proof
+            if branch is not None and not attempt:
+                context.costs.record(branch.column, branch.side, branch.fraction,
+                                     dictionary.value - branch.parent_cost)  # fmt: skip
+            rows = self.fractional_rows()
+            if not len(rows):
+                return self._whole_point(proof)
+            if self.try_rounding() and context.best.beats(proof.bound):
+                return self.close("beaten", proof)
+            if self.tighten(proof):
+                if self.closed:
+                    return None
+                continue
+            choice = branching.choose(dictionary, rows, context.best.cutoff, context.costs)
+            context.pivots += choice.pivots
+            if attempt + 1 < ATTEMPTS and choice.closed and self._use_trials(choice):
+                if self.closed:
+                    return None
+                continue
+            self._keep_open(proof)
+            return Split(choice.column, choice.value, choice.down_gain, choice.up_gain)
+        raise AssertionError("the last attempt returns")
+
+    @property
+    def closed(self) -> bool:
+        """Whether the node's end has been recorded."""
+        return self.context.record.tree.nodes[self.number]["outcome"] != "waiting"
+
+    # ------------------------------------------------------------------ relaxation
+
+    def relax(self) -> Proof | Split | None:
+        """Re-optimise; return the bound's proof if the node stays open, None if it closed.
+
+        Where doubles do not settle it, a second run on a fresh table follows, then rationals;
+        those may name the activity to branch on at once (a `Split`).
+        """
+        context = self.context
+        for fresh in (False, True):
+            cutoff = math.inf if fresh else context.best.cutoff
+            if fresh:
+                self._refactor()
+            status = self._reoptimise(cutoff)
+            if status is Status.BEATEN:
+                proof = self._cost_proof()
+                if context.best.beats(proof.bound):
+                    return self.close("beaten", proof)
+                status = self._reoptimise(math.inf)
+            if status is Status.EMPTY:
+                proof = context.prover.prove(
+                    0, self.dictionary.row_multipliers(self.dictionary.failing_row),
+                    self.bounds.least, self.bounds.most,
+                )  # fmt: skip
+                if proof.bound > 0:
+                    return self.close("empty", proof)
+                continue
+            proof = self._cost_proof()
+            if context.best.beats(proof.bound):
+                return self.close("beaten", proof)
+            if proof.bound == -math.inf:
+                continue
+            if not context.best.ties(proof.bound):
+                self.bound = max(self.bound, proof.bound)
+                return proof
+            if self._settle_tie(proof, "beaten"):
+                return None
+        return self.solve_exactly()
+
+    def _reoptimise(self, cutoff: float) -> Status:
+        dictionary = self.dictionary
+        try:
+            status = dictionary.reoptimise(cutoff)
+            if (
+                status is Status.OPTIMAL
+                and dictionary.since_refactored > CHECK_DRIFT_AFTER
+                and dictionary.drift() > DRIFT
+            ):
+                dictionary.refactor()
+                status = dictionary.reoptimise(cutoff)
+        except np.linalg.LinAlgError:
+            self._start_again()
+            status = self.dictionary.reoptimise(cutoff)
+        return status
+
+    def _refactor(self) -> None:
+        try:
+            self.dictionary.refactor()
+        except np.linalg.LinAlgError:
+            self._start_again()
+
+    def _start_again(self) -> None:
+        """Replace a basis that is singular in doubles by a cold start with the same rows."""
+        old = self.dictionary
+        self.dictionary = cold_start(
+            old.rows, old.cost, self.bounds.least, self.bounds.most, old.held_rows()
+        )
+        self.dictionary.pivots += old.pivots
+
+    def _cost_proof(self) -> Proof:
+        return self.context.prover.prove(
+            1, self.dictionary.cost_multipliers(), self.bounds.least, self.bounds.most
+        )
+
+    def fractional_rows(self) -> np.ndarray:
+        """Return the dictionary rows of whole activities away from a whole value, (k,)."""
+        dictionary = self.dictionary
+        values = dictionary.values
+        rows = (np.abs(values - np.rint(values)) > FRACTION).nonzero()[0]
+        rows = rows[dictionary.basic[rows] < dictionary.columns]
+        return rows[self.context.problem.whole[dictionary.basic[rows]]]
+
+    # ------------------------------------------------------------------ tightening
+
+    def _spread(self, changed: list[int]) -> bool:
+        """Propagate changed bounds and hand all of them to the dictionary; False if closed."""
+        bounds = self.bounds
+        touched, failed = self.context.propagator.run(bounds, changed, self.steps)
+        if failed is not None and self._refuted_by_rule(failed):
+            return False
+        for j in touched:
+            if bounds.least[j] > bounds.most[j]:
+                self._finish("empty", math.inf, {"column": j, "leans": bool(bounds.leans.any())})
+                return False
+        self.dictionary.set_bounds({*changed, *touched}, bounds.least, bounds.most)
+        return True
+
+    def _refuted_by_rule(self, row: int) -> bool:
+        """Close the node if one rule alone cannot be met, proven either way round."""
+        for sign in (1.0, -1.0):
+            multipliers = Multipliers(np.array([row]), np.array([sign]))
+            proof = self.context.prover.prove(
+                0, multipliers, self.bounds.least, self.bounds.most
+            )
+            if proof.bound > 0:
+                self.close("empty", proof)
+                return True
+        return False
+
+    def tighten(self, proof: Proof) -> bool:
+        """Tighten by reduced costs; tell whether the node must be solved again (or closed)."""
+        context = self.context
+        if context.best.value is None:
+            return False
+        changes = tighten_by_cost(
+            proof, context.best.threshold, self.bounds, context.problem.whole
+        )
+        if not changes:
+            return False
+        self.steps.append(
+            {"by": "cost", "changes": changes, "closure": self._closure(proof), "leans": True,
+             "target": context.best.threshold}
+        )  # fmt: skip
+        if not self._spread([j for j, _, _ in changes]):
+            return True
+        return self._outside()
+
+    def _outside(self) -> bool:
+        rooms = self.dictionary.rooms
+        return bool(rooms.size and rooms.min() < -self.dictionary.tolerance)
+
+    def _use_trials(self, choice: branching.Choice) -> bool:
+        """Take over what trial children showed; tell whether a bound was tightened."""
+        used = []
+        for column, side, value, trial in choice.closed:
+            closure = self._trial_closure(column, side, value, trial)
+            if closure is None:
+                continue
+            change = (
+                (column, MOST, float(math.floor(value)))
+                if side
+                else (column, LEAST, float(math.ceil(value)))
+            )
+            leans = closure["leans"] or closure["weight"] == 1
+            self.steps.append(
+                {"by": "trial", "changes": [change], "closure": closure, "leans": leans}
+            )
+            self.bounds.set(*change, leans)
+            used.append(column)
+        if used:
+            if (self.bounds.least[used] > self.bounds.most[used]).any():
+                self._finish(
+                    "empty", math.inf,
+                    {"column": used[0], "leans": bool(self.bounds.leans[:, used[0]].any())},
+                )  # fmt: skip
+            else:
+                self._spread(used)
+        return bool(used)
+
+    def _trial_closure(
+        self, column: int, side: int, value: float, trial: branching.Trial
+    ) -> dict[str, Any] | None:
+        """Return the record of a trial child that is closed, None if it is not proven."""
+        bounds, prover = self.bounds, self.context.prover
+        array = bounds.least if side else bounds.most
+        kept = array.item(column)
+        array[column] = math.ceil(value) if side else math.floor(value)
+        child = trial.dictionary
+        if trial.status is Status.EMPTY:
+            proof = prover.prove(
+                0, child.row_multipliers(child.failing_row), bounds.least, bounds.most
+            )
+            proven = proof.bound > 0
+        else:
+            proof = prover.prove(1, child.cost_multipliers(), bounds.least, bounds.most)
+            proven = self.context.best.beats(proof.bound)
+        closure = None
+        if proven:
+            closure = self.context.record.closure(proof, prover.used_bounds(proof), bounds)
+        array[column] = kept
+        return closure
+
+    # ------------------------------------------------------------------ plans
+
+    def try_rounding(self) -> bool:
+        """Look for a plan near the point; tell whether a better one was found."""
+        context = self.context
+        if context.nodes > ROUND_ALWAYS and context.nodes % 8:
+            return False
+        found = False
+        for point in context.rounder.round(self.dictionary.activities(), self.bounds):
+            plan = context.arithmetic.complete(point)
+            found |= plan is not None and context.best.offer(plan)
+        return found
+
+    def _whole_point(self, proof: Proof) -> Split | None:
+        """Take the plan at a point with whole values and close the node by it."""
+        context = self.context
+        plan = context.arithmetic.complete(self.dictionary.activities())
+        if plan is None:
+            return self.solve_exactly()
+        context.best.offer(plan)
+        if context.best.beats(proof.bound):
+            return self.close("plan", proof)
+        if context.best.ties(proof.bound) and self._settle_tie(proof, "plan"):
+            return None
+        return self.solve_exactly()
+
+    # ------------------------------------------------------------------ exact arithmetic
+
+    def _settle_tie(self, proof: Proof, outcome: str) -> bool:
+        """Close a node whose bound equals the best value, if guessed exact multipliers show it."""
+        context = self.context
+        multipliers = context.arithmetic.guess_multipliers(proof.rows, proof.multipliers)
+        bound = context.arithmetic.exact_bound(
+            1, multipliers, self.bounds.least, self.bounds.most
+        )
+        if bound is None or not context.best.beats_exactly(bound):
+            return False
+        closure = context.record.exact_closure(1, multipliers, bound, self.bounds)
+        self._finish(outcome, _rounded_down(bound), closure)
+        return True
+
+    def solve_exactly(self) -> Split | None:
+        """Settle the node in rationals: closed, or the activity to branch on."""
+        context, bounds, dictionary = self.context, self.bounds, self.dictionary
+        answer = context.arithmetic.solve_node(
+            dictionary.held_rows(), dictionary.basic.tolist(), bounds.least, bounds.most,
+            context.limits.out_of_time,
+        )  # fmt: skip
+        if answer.status == "empty":
+            proven = context.arithmetic.exact_bound(
+                0, answer.multipliers, bounds.least, bounds.most
+            )
+            if proven is None or proven <= 0:
+                raise AssertionError("an exact contradiction is positive")
+            closure = context.record.exact_closure(0, answer.multipliers, proven, bounds)
+            return self._finish("empty", math.inf, closure)
+        if answer.value is None:
+            raise AssertionError("a node has a limit wherever its root has")
+        return self._exact_optimum(answer, answer.value)
+
+    def _exact_optimum(self, answer: ExactAnswer, value: Fraction) -> Split | None:
+        context = self.context
+        closure = context.record.exact_closure(1, answer.multipliers, value, self.bounds)
+        bound = _rounded_down(value)
+        if context.best.beats_exactly(value):
+            return self._finish("beaten", bound, closure)
+        whole = context.problem.whole
+        for j, x in enumerate(answer.point):
+            if whole[j] and x.denominator != 1:
+                self.bound = max(self.bound, bound)
+                self._finish("split", self.bound, closure)
+                return Split(j, _inside(x), 0.0, 0.0)
+        plan = [lowest(x) for x in answer.point]
+        if not context.arithmetic.fits(plan):
+            raise AssertionError("an exact optimum of the relaxation meets every rule")
+        context.best.offer(plan)
+        return self._finish("plan", bound, closure)
+
+    # ------------------------------------------------------------------ closing
+
+    def close(self, outcome: str, proof: Proof) -> None:
+        """Record that the node is closed by a proof."""
+        bound = proof.bound if proof.weight else math.inf
+        self._finish(outcome, bound, self._closure(proof))
+
+    def _keep_open(self, proof: Proof) -> None:
+        self._finish("split", self.bound, self._closure(proof))
+
+    def _closure(self, proof: Proof) -> dict[str, Any]:
+        """Return the record of a proof, made once."""
+        if self._closure_of is None or self._closure_of[0] is not proof:
+            used = self.context.prover.used_bounds(proof)
+            self._closure_of = (proof, self.context.record.closure(proof, used, self.bounds))
+        return self._closure_of[1]
+
+    def _finish(self, outcome: str, bound: float, closure: dict[str, Any]) -> None:
+        self.context.record.close(self.number, outcome, bound, self.steps, closure)
+
+
+def _rounded_down(value: Fraction) -> float:
+    """Return a double that is at most an exact value."""
+    nearest = float(value)
+    return nearest if Fraction(nearest) <= value else math.nextafter(nearest, -math.inf)
+
+
+def _inside(value: Fraction) -> float:
+    """Return a double strictly between the whole numbers around an exact fractional value."""
+    floor = math.floor(value)
+    near = float(value)
+    return near if floor < near < floor + 1 else floor + 0.5

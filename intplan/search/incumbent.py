@@ -1,0 +1,71 @@
+"""The best plan so far and what a node must show to be closed by it."""
+
+from __future__ import annotations
+
+import math
+from fractions import Fraction
+
+from intplan.sheet.problem import Number, Problem
+
+
+class Incumbent:
+    """The best plan so far, in the engine's cost.
+
+    Attributes
+    ----------
+    plan, value : the plan and its exact cost; None before the first
+    target : a plan worth finding costs at most this (exact); a node whose bound passes it is
+        beaten.  With an aim of whole activities only, one step of the aim below `value`.
+    threshold : a double that is at least `target`
+    cutoff : where the dual simplex method stops; so far past the target that the safe bound
+        passes it as well
+    """
+
+    def __init__(self, problem: Problem, gap: Fraction) -> None:
+        self.problem = problem
+        self.gap = gap
+        self.step = problem.cost_step or Fraction(0)
+        self.plan: list[Number] | None = None
+        self.value: Fraction | None = None
+        self.target: Fraction | None = None
+        self.threshold = math.inf
+        self.cutoff = math.inf
+
+    def offer(self, plan: list[Number]) -> bool:
+        """Take a checked plan if it is better; tell whether it was."""
+        value = self.problem.exact_cost_of(plan)
+        if self.value is not None and value >= self.value:
+            return False
+        self.plan, self.value = plan, value
+        allowance = Fraction(0)
+        if self.gap:
+            aim = abs(Fraction(self.problem.aim_from_cost(value)))
+            allowance = aim * self.gap / 100 * abs(self.problem.cost_factor)
+        self.target = value - max(self.step, allowance)
+        size = 1.0 + abs(float(value))
+        self.threshold = math.nextafter(float(self.target), math.inf)
+        margin = max(1e-11 * size, 1e-6 * float(self.step))
+        self.cutoff = self.threshold + margin
+        return True
+
+    def beats(self, bound: float) -> bool:
+        """Tell whether a safe bound closes a node."""
+        return bound > self.threshold
+
+    def ties(self, bound: float) -> bool:
+        """Tell whether a bound is so near the best value that only exact arithmetic can tell."""
+        if self.value is None or self.step:
+            return False
+        value = float(self.value)
+        return bound > self.threshold - 1e-9 * (1.0 + abs(value))
+
+    def beats_exactly(self, bound: Fraction) -> bool:
+        """Tell whether an exact bound closes a node: nothing in it improves on the plan."""
+        if self.target is None:
+            return False
+        return bound > self.target or (not self.step and bound >= self.target)
+
+    def rounded_up(self, bound: float) -> Fraction:
+        """Return a bound in the engine's cost, lifted to the next cost a plan can have."""
+        exact = Fraction(bound)
+        return math.ceil(exact / self.step) * self.step if self.step else exact

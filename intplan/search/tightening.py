@@ -1,0 +1,252 @@
+"""Bounds tightened by the rules (propagation) and by reduced costs.
+
+Every tightening is a branch whose other side is closed at once: an activity is not above k
+because being at least k + 1 is refuted by the multipliers that are recorded.
+
+References
+----------
+M. W. P. Savelsbergh, Preprocessing and probing techniques for mixed integer programming problems,
+ORSA J. Computing 6:445-454, 1994.
+G. B. Dantzig, D. R. Fulkerson, S. M. Johnson, Solution of a large-scale traveling-salesman
+problem, Operations Research 2:393-410, 1954 (reduced-cost tightening).
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from intplan.search.evidence import LEAST, MOST, Proof
+
+MARGIN = 1e-7  # share of a unit by which a rounded bound must be proven
+HUGE = 1e100  # stands for infinity where infinities would multiply zeros
+ROUNDS = 3  # rounds of propagation at a node
+
+
+class Bounds:
+    """The bounds of a node: values and whether they lean on the cut-off.
+
+    Attributes
+    ----------
+    least, most : (columns,) doubles
+    leans : (2, columns) bool, by side
+    """
+
+    __slots__ = ("least", "leans", "most")
+
+    def __init__(self, least: np.ndarray, most: np.ndarray, leans: np.ndarray) -> None:
+        self.least = least
+        self.most = most
+        self.leans = leans
+
+    def copy(self) -> Bounds:
+        """Return an independent copy."""
+        return Bounds(self.least.copy(), self.most.copy(), self.leans.copy())
+
+    def set(self, column: int, side: int, value: float, leans: bool) -> None:
+        """Tighten one bound."""
+        (self.most if side else self.least)[column] = value
+        self.leans[side, column] = leans
+
+
+class Propagator:
+    """Bound propagation over the rules.
+
+    Parameters
+    ----------
+    matrix : (rows, columns) coefficients of the rules
+    row_least, row_most : (rows,) limits
+    whole : (columns,) bool
+    """
+
+    def __init__(
+        self,
+        matrix: np.ndarray,
+        row_least: np.ndarray,
+        row_most: np.ndarray,
+        whole: np.ndarray,
+    ) -> None:
+        self.matrix = matrix
+        self.positive = np.maximum(matrix, 0.0)
+        self.negative = np.minimum(matrix, 0.0)
+        self.sizes = np.abs(matrix)
+        self.row_least = row_least
+        self.row_most = row_most
+        self.whole = whole
+        self.rows_of = [column.nonzero()[0] for column in matrix.T]
+
+    def run(
+        self, bounds: Bounds, changed: list[int], log: list[dict], first: bool = False
+    ) -> tuple[list[int], int | None]:
+        """Propagate from changed activities until little more comes of it.
+
+        Parameters
+        ----------
+        bounds : tightened in place
+        changed : the activities whose bounds have just changed
+        log : receives one record a row and activity that tightened a bound
+        first : also tighten divisible activities, and look at every row
+
+        Returns
+        -------
+        touched, empty
+            the activities tightened here, and a row that cannot be met (None if there is none)
+        """
+        touched: set[int] = set()
+        for _ in range(ROUNDS if not first else 4 * ROUNDS):
+            if first:
+                rows = np.arange(len(self.matrix))
+            elif len(changed) == 1:
+                rows = self.rows_of[changed[0]]
+            else:
+                rows = np.unique(np.concatenate([self.rows_of[j] for j in changed]))
+            if not len(rows):
+                break
+            changed, empty = self._round(bounds, rows, log, first)
+            touched.update(changed)
+            if empty is not None:
+                return list(touched), empty
+            if not changed:
+                break
+        return list(touched), None
+
+    def _round(
+        self, bounds: Bounds, rows: np.ndarray, log: list[dict], divisible: bool
+    ) -> tuple[list[int], int | None]:
+        least = np.maximum(bounds.least, -HUGE)
+        most = np.minimum(bounds.most, HUGE)
+        positive, negative = self.positive[rows], self.negative[rows]
+        lowest = positive @ least + negative @ most
+        highest = positive @ most + negative @ least
+        below = self.row_most[rows] - lowest
+        above = highest - self.row_least[rows]
+        scale = 1e-9 * (1.0 + np.minimum(np.abs(lowest), np.abs(highest)))
+        failed = ((below < -scale) | (above < -scale)).nonzero()[0]
+        if len(failed):
+            return [], rows.item(failed[0])
+        spare = np.minimum(below, above)
+        ranges = most - least
+        room = self.sizes[rows] * ranges
+        open_rows = (room.max(axis=1) > spare + scale).nonzero()[0]
+        changed: list[int] = []
+        for i in open_rows:
+            columns = (room[i] > spare[i] + scale[i]).nonzero()[0]
+            for side, slack in ((MOST, below[i]), (LEAST, above[i])):
+                if slack < HUGE / 1e6:
+                    self._tighten_row(
+                        rows.item(i), columns, side, float(slack), bounds, log, changed, divisible
+                    )
+        return changed, None
+
+    def _tighten_row(
+        self,
+        row: int,
+        columns: np.ndarray,
+        limit: int,
+        slack: float,
+        bounds: Bounds,
+        log: list[dict],
+        changed: list[int],
+        divisible: bool,
+    ) -> None:
+        """Tighten activities by one limit of one row, the others at their most helpful bounds."""
+        entries = self.matrix[row]
+        for j in columns:
+            a = entries.item(j) if limit else -entries.item(j)
+            side = MOST if a > 0 else LEAST
+            low, high = bounds.least.item(j), bounds.most.item(j)
+            anchor = low if side else high
+            if abs(a) * (high - low) <= slack or abs(anchor) == math.inf:
+                continue
+            value = self._rounded(j, anchor, slack / a, side, divisible, low, high)
+            if value is None:
+                continue
+            leans = self._leans(row, j, limit, bounds)
+            bounds.set(j, side, value, leans)
+            log.append(
+                {"by": "rule", "row": row, "limit": limit, "changes": [(int(j), side, value)],
+                 "leans": leans}
+            )  # fmt: skip
+            changed.append(int(j))
+
+    def _rounded(
+        self,
+        column: int,
+        anchor: float,
+        step: float,
+        side: int,
+        divisible: bool,
+        low: float,
+        high: float,
+    ) -> float | None:
+        """Return the bound ``anchor + step`` rounded to what is proven; None if no better."""
+        if self.whole[column]:
+            if side:
+                value = math.floor(anchor + step + MARGIN)
+                return float(value) if value < high else None
+            value = math.ceil(anchor + step - MARGIN)
+            return float(value) if value > low else None
+        if not divisible:
+            return None
+        value = anchor + step
+        margin = 1e-9 * (1.0 + abs(value) + abs(anchor))
+        if side:
+            value += margin
+            gain = high - value
+        else:
+            value -= margin
+            gain = value - low
+        return value if gain > 1e-3 * (1.0 + min(high - low, HUGE)) or gain == math.inf else None
+
+    def _leans(self, row: int, column: int, limit: int, bounds: Bounds) -> bool:
+        """Tell whether the other activities' helpful bounds lean on the cut-off."""
+        if not bounds.leans.any():
+            return False
+        helpful_least = self.matrix[row] > 0 if limit else self.matrix[row] < 0
+        helpful_most = self.matrix[row] < 0 if limit else self.matrix[row] > 0
+        helpful_least[column] = helpful_most[column] = False
+        return bool(
+            (helpful_least & bounds.leans[LEAST]).any() or (helpful_most & bounds.leans[MOST]).any()
+        )
+
+
+def tighten_by_cost(
+    proof: Proof, target: float, bounds: Bounds, whole: np.ndarray
+) -> list[tuple[int, int, float]]:
+    """Tighten whole activities that would lift the cost past what a better plan may have.
+
+    Parameters
+    ----------
+    proof : a bound on the cost over `bounds`, weight 1
+    target : a better plan costs at most this
+    bounds : tightened in place; the new bounds lean on the cut-off
+    whole : (columns,) bool
+
+    Returns
+    -------
+    The changes (column, side, value).
+    """
+    spare = target - proof.bound
+    if not (0 <= spare < math.inf):
+        return []
+    ranges = bounds.most - bounds.least
+    sizes = np.abs(proof.reduced) - proof.error
+    columns = (whole & (sizes * ranges > spare + MARGIN * sizes)).nonzero()[0]
+    changes = []
+    for j in columns:
+        size = sizes.item(j)
+        if size <= 0:
+            continue
+        units = spare / size
+        if proof.reduced[j] > 0:
+            value = math.floor(bounds.least.item(j) + units + MARGIN)
+            if value < bounds.most[j]:
+                bounds.set(j, MOST, float(value), True)
+                changes.append((int(j), MOST, float(value)))
+        else:
+            value = math.ceil(bounds.most.item(j) - units - MARGIN)
+            if value > bounds.least[j]:
+                bounds.set(j, LEAST, float(value), True)
+                changes.append((int(j), LEAST, float(value)))
+    return changes
