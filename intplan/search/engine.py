@@ -44,6 +44,7 @@ from intplan.search.tightening import Propagator
 from intplan.sheet.problem import Number, Problem
 
 RANGE = 1e9  # a whole activity without a bound is not branched on past this
+DIVE = 40  # levels a dive may go beyond twice the number of activities
 SHELF = 96 << 20  # bytes of tables kept for waiting nodes
 
 
@@ -71,14 +72,51 @@ def branch_and_cut(
     -------
     SearchResult
     """
-    return Search(problem, gap, Limits(time_limit, node_limit, stop, progress)).run()
+    limits = Limits(time_limit, node_limit, stop, progress)
+    has_ends = np.isfinite(problem.least) & np.isfinite(problem.most)
+    if not problem.exact_cost and not has_ends.all():
+        return find_plan(problem, limits)
+    return Search(problem, gap, limits).run()
+
+
+def find_plan(problem: Problem, limits: Limits) -> SearchResult:
+    """Find any whole-unit plan, whatever the aim: optimal means that one was found.
+
+    The search is given an aim that draws activities without a bound towards the bound they
+    have, so that it does not wander off.
+    """
+    pull = np.isfinite(problem.least) * 1 - np.isfinite(problem.most) * 1
+    columns = [int(j) for j in pull.nonzero()[0]]
+    stand_in = replace(
+        problem,
+        cost=pull.astype(float),
+        exact_cost=tuple((j, int(pull[j])) for j in columns),
+        cost_shift=0,
+        cost_factor=Fraction(1),
+        cost_step=Fraction(1) if problem.whole[columns].all() else None,
+    )
+    result = Search(stand_in, Fraction(0), limits, first_plan=True).run()
+    result.bound = None
+    if result.plan is not None:
+        result.outcome, result.ended_by = "optimal", None
+        result.value = problem.aim_from_cost(problem.exact_cost_of(result.plan))
+        result.bound = result.value
+    return result
 
 
 class Search:
-    """One run of branch and cut; see `branch_and_cut`."""
+    """One run of branch and cut; see `branch_and_cut`.
 
-    def __init__(self, problem: Problem, gap: Fraction, limits: Limits) -> None:
+    Parameters
+    ----------
+    first_plan : stop at the first plan
+    """
+
+    def __init__(
+        self, problem: Problem, gap: Fraction, limits: Limits, first_plan: bool = False
+    ) -> None:
         self.problem = problem
+        self.first_plan = first_plan
         self.limits = limits
         rows = RowStore(problem.matrix, problem.row_least, problem.row_most)
         record = Recorder(problem.least, problem.most)
@@ -98,6 +136,7 @@ class Search:
         )
         self.best = self.context.best
         self.tree = record.tree
+        self.longest_dive = 2 * len(problem.cost) + DIVE
         self.heap: list[Node] = []
         self.shelf = Shelf(SHELF)
         self.numbered = 0
@@ -128,14 +167,21 @@ class Search:
 
     def _explore(self, node: Node | None) -> None:
         """Solve the waiting nodes, best bound first, diving from each."""
+        dive = 0
         while node is not None or self.heap:
+            if self.first_plan and self.best.value is not None:
+                return
+            if node is not None and dive > self.longest_dive:
+                heapq.heappush(self.heap, node)
+                node = None
             self.ended_by = self.limits.reached(self.context.nodes)
             if self.ended_by:
                 if node is not None:
                     heapq.heappush(self.heap, node)
                 return
             if node is None:
-                node = heapq.heappop(self.heap)
+                node, dive = heapq.heappop(self.heap), 0
+            dive += 1
             if self.best.beats(node.bound):
                 self._close_unsolved(node)
                 node = None
@@ -234,17 +280,10 @@ class Search:
         one whole-unit plan exists (R. R. Meyer, On the existence of optimal solutions to integer
         and mixed-integer programming problems, Mathematical Programming 7:223-235, 1974).
         """
-        free = replace(
-            self.problem, cost=np.zeros_like(self.problem.cost), exact_cost=(), cost_shift=0,
-            cost_step=Fraction(1),
-        )  # fmt: skip
-        result = Search(free, Fraction(0), self.limits).run()
-        result.bound = None
+        result = find_plan(self.problem, self.limits)
         result.seconds = self.limits.seconds()
         if result.plan is not None:
-            result.outcome, result.ray, result.ended_by = "unbounded", ray, None
-            cost = self.problem.exact_cost_of(result.plan)
-            result.value = self.problem.aim_from_cost(cost)
+            result.outcome, result.ray, result.bound = "unbounded", ray, None
         return result
 
     # ------------------------------------------------------------------ answers
