@@ -1,0 +1,1 @@
+"""The tests and benchmarks of intplan."""
