@@ -172,9 +172,7 @@ def assignment(agents: int, jobs: int, seed: int) -> Instance:
     return assignment_of(f"assignment-{agents}x{jobs}-{seed}", gain, load, capacity)
 
 
-def assignment_of(
-    name: str, gain: np.ndarray, load: np.ndarray, capacity: np.ndarray
-) -> Instance:
+def assignment_of(name: str, gain: np.ndarray, load: np.ndarray, capacity: np.ndarray) -> Instance:
     """Return the generalised assignment problem of the given tables, each (agents, jobs)."""
     gain, load = np.asarray(gain), np.asarray(load)
     agents, jobs = gain.shape

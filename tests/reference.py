@@ -102,9 +102,7 @@ def reference_linprog(instance: Instance) -> Reference:
     bounds = np.c_[instance.least, instance.most]
     with silenced():
         started = time.perf_counter()
-        answer = linprog(
-            cost, matrix, limits, equalities, instance.row_most[equal], bounds=bounds
-        )
+        answer = linprog(cost, matrix, limits, equalities, instance.row_most[equal], bounds=bounds)
         seconds = time.perf_counter() - started
     value = None if answer.status != OPTIMAL else float(sign * answer.fun)
     return Reference(answer.status, value, answer.x, seconds, 0)
