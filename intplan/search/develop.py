@@ -85,13 +85,14 @@ class NodeWork:
                 return self._whole_point(proof)
             if self.try_rounding() and context.best.beats(proof.bound):
                 return self.close("beaten", proof)
-            if self.tighten(proof):
+            last = attempt + 1 == ATTEMPTS
+            if not last and self.tighten(proof):
                 if self.closed:
                     return None
                 continue
             choice = branching.choose(dictionary, rows, context.best.cutoff, context.costs)
             context.pivots += choice.pivots
-            if attempt + 1 < ATTEMPTS and choice.closed and self._use_trials(choice):
+            if not last and choice.closed and self._use_trials(choice):
                 if self.closed:
                     return None
                 continue

@@ -8,12 +8,25 @@ from typing import Any
 
 import numpy as np
 
-from intplan.relaxation.dictionary import Dictionary
+from intplan.relaxation.dictionary import Dictionary, Multipliers
 from intplan.relaxation.start import NoDualBasis, cold_start
 from intplan.search.context import Context
+from intplan.search.cuts.candidate import choose
+from intplan.search.cuts.cover import cover_cut
+from intplan.search.cuts.gomory import Rounding, gomory_cut
 from intplan.search.develop import NodeWork, Split
+from intplan.search.evidence import Proof
+from intplan.search.result import Added, Cut
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import ExactRow
+
+
+CUT_ROUNDS = 12
+GOMORY_ROWS = 30  # dictionary rows tried in a round
+CUTS_A_ROUND = 20
+STALL = 0.02  # a round that adds less than this share of the gain so far is a stalled one
+PATIENCE = 2  # stalled rounds in a row that end the cutting
+SLACK_CUT = 1e-6  # room at which a cut no longer binds
 
 
 class RootWork(NodeWork):
@@ -63,7 +76,121 @@ class RootWork(NodeWork):
         )
 
     def develop_root(self) -> Split | None:
-        return self.develop()
+        """Solve the root with rounds of cuts; None once it is closed, else where to branch."""
+        opened = self._open_relaxation()
+        if not isinstance(opened, Proof):
+            return opened
+        self.cut()
+        return None if self.closed else self.develop()
+
+    def _open_relaxation(self) -> Proof | Split | None:
+        """Solve the relaxation and tighten by a first plan, where rounding finds one."""
+        proof = self.relax()
+        if not isinstance(proof, Proof):
+            return proof
+        if self.try_rounding() and len(self.context.prover.open):
+            self._bound_by_cost()
+        if not self.closed:
+            self.tighten(proof)
+        self.context.prover.set_box(self.bounds.least, self.bounds.most)
+        return None if self.closed else proof
+
+    def _bound_by_cost(self) -> None:
+        """Bound activities by what a better plan may cost at all: no multipliers, own bounds."""
+        nothing = Multipliers(np.arange(0), np.zeros(0))
+        proof = self.context.prover.prove(1, nothing, self.bounds.least, self.bounds.most)
+        self.tighten(proof)
+
+    # ------------------------------------------------------------------ cuts
+
+    def cut(self) -> None:
+        """Add cuts in rounds while they lift the bound; keep those that bind."""
+        started, stalled = self.dictionary.value, 0
+        for _ in range(CUT_ROUNDS):
+            rows = self.fractional_rows()
+            if not len(rows) or self.context.limits.out_of_time():
+                break
+            before = self.dictionary.value
+            numbers = self._separate(rows)
+            if not len(numbers):
+                break
+            self.dictionary.add_rows(numbers)
+            proof = self.relax()
+            if not isinstance(proof, Proof):
+                break
+            self._drop_slack_cuts()
+            self.try_rounding()
+            if self.context.best.beats(proof.bound):
+                self.close("beaten", proof)
+                break
+            if self.tighten(proof) and self.closed:
+                break
+            gain = self.dictionary.value - before
+            total = self.dictionary.value - started
+            stalled = stalled + 1 if gain < STALL * max(total, 1e-9) else 0
+            if stalled >= PATIENCE:
+                break
+        held = self.dictionary.held_rows()
+        self.context.record.tree.nodes[0]["added"] = tuple(
+            Added("cut", int(i) - self.context.record.rules, float(self.context.rows.least[i]))
+            for i in held
+            if i >= self.context.record.rules
+        )
+
+    def _separate(self, rows: np.ndarray) -> np.ndarray:
+        """Find cuts at the dictionary's point and put the chosen ones into the store."""
+        context, dictionary, bounds = self.context, self.dictionary, self.bounds
+        x = dictionary.activities()
+        rounding = self._rounding()
+        leaning = np.concatenate(
+            (np.zeros(context.record.rules, bool), context.record.leaning_rows)
+        )
+        values = dictionary.values[rows]
+        order = (-np.abs(values - np.floor(values) - 0.5)).argsort(kind="stable")[::-1]
+        candidates = [
+            gomory_cut(rounding, dictionary, row, x, bounds, leaning)
+            for row in rows[order[:GOMORY_ROWS]].tolist()
+        ]
+        for number, row in enumerate(context.problem.rows):
+            for limit in (0, 1):
+                candidates.append(
+                    cover_cut(number, row, limit, x, bounds, context.problem.whole)
+                )
+        chosen = choose([c for c in candidates if c is not None], CUTS_A_ROUND)
+        if not chosen:
+            return np.arange(0)
+        for candidate in chosen:
+            columns = candidate.coefficients.nonzero()[0]
+            context.record.note_cut(
+                Cut(
+                    candidate.kind, tuple(columns.tolist()),
+                    tuple(candidate.coefficients[columns].tolist()), candidate.least, math.inf,
+                    candidate.leans, candidate.evidence,
+                )
+            )  # fmt: skip
+        least = np.array([c.least for c in chosen])
+        return context.rows.append(
+            np.array([c.coefficients for c in chosen]), least, np.full(len(chosen), np.inf)
+        )
+
+    def _rounding(self) -> Rounding:
+        """Gather what mixed-integer rounding needs under the root's present bounds."""
+        context, problem = self.context, self.context.problem
+        grain = np.zeros(context.rows.count)
+        for i, row in enumerate(problem.rows):
+            if row.columns and problem.whole[list(row.columns)].all():
+                grain[i] = 2.0**-row.shift
+        return Rounding(
+            context.rows, problem.whole, grain, context.prover.reach, context.prover.open
+        )
+
+    def _drop_slack_cuts(self) -> None:
+        """Let cuts that do not bind leave the dictionary."""
+        dictionary = self.dictionary
+        first = dictionary.columns + self.context.record.rules
+        places = ((dictionary.basic >= first) & (dictionary.rooms[:, 0] > SLACK_CUT)).nonzero()[0]
+        if len(places):
+            dictionary.drop_rows(places)
 
     # ------------------------------------------------------------------ tightening
 

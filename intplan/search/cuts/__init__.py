@@ -1,0 +1,1 @@
+"""Cuts: rows that every whole-unit plan meets and the relaxation's point does not."""
