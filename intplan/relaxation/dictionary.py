@@ -344,7 +344,7 @@ class Dictionary:
         Parameters
         ----------
         cutoff : stop as soon as the cost passes this value
-        limit : most pivots to make
+        limit : most pivots to make; a run with a small limit does not refactorise
 
         Returns
         -------
@@ -372,7 +372,7 @@ class Dictionary:
                 best, standing = value + 1e-12 * abs(value), 0
             else:
                 standing += 1
-            if self.since_refactored >= REFACTOR_AFTER:
+            if self.since_refactored >= REFACTOR_AFTER and limit > REFACTOR_AFTER:
                 self.refactor()
         raise AssertionError("the loop returns before its range ends")
 

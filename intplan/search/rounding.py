@@ -41,7 +41,8 @@ class Rounder:
         self.up_locks = (rising & has_most).sum(axis=0) + (falling & has_least).sum(axis=0)
         self.down_locks = (falling & has_most).sum(axis=0) + (rising & has_least).sum(axis=0)
         self.tolerance = 1e-9 * (1.0 + np.abs(matrix).sum(axis=1))
-        self.columns = np.argsort(-np.abs(cost), kind="stable")
+        self.direction = -np.sign(cost)
+        self.sizes = np.abs(cost)
 
     def round(self, x: np.ndarray, bounds: Bounds) -> list[np.ndarray]:
         """Return whole points near x that meet the rules, improved; for all-whole problems.
@@ -67,35 +68,39 @@ class Rounder:
         return found
 
     def _improve(self, point: np.ndarray, values: np.ndarray, bounds: Bounds) -> np.ndarray:
-        """Move activities one after the other as far as the aim and the rules allow."""
+        """Move activities one after the other as far as the aim and the rules allow.
+
+        A row that gains room does not lengthen the steps found before: what is moved stays
+        feasible, and only the rows that changed are looked at again.
+        """
         point = point.copy()
         below = np.where(np.isfinite(self.row_most), self.row_most - values, np.inf)
         above = np.where(np.isfinite(self.row_least), values - self.row_least, np.inf)
+        rows = np.arange(len(values))
+        steps = np.full(len(point), np.inf)
         for _ in range(STEPS):
-            steps = self._steps(point, below, above, bounds)
-            gains = steps * np.abs(self.cost)
+            steps = np.minimum(steps, self._steps(rows, below, above))
+            room = np.where(self.direction > 0, bounds.most - point, point - bounds.least)
+            units = np.floor(np.minimum(steps, room) + NEAR)
+            units[~np.isfinite(units) | (self.direction == 0)] = 0.0
+            gains = units * self.sizes
             j = gains.argmax()
             if gains[j] <= 0:
                 break
-            step = steps[j] if self.cost[j] < 0 else -steps[j]
+            step = units[j] * self.direction[j]
             point[j] += step
-            change = self.matrix[:, j] * step
-            below -= change
-            above += change
+            steps[j] -= units[j]
+            rows = self.matrix[:, j].nonzero()[0]
+            change = self.matrix[rows, j] * step
+            below[rows] -= change
+            above[rows] += change
         return point
 
-    def _steps(
-        self, point: np.ndarray, below: np.ndarray, above: np.ndarray, bounds: Bounds
-    ) -> np.ndarray:
-        """Return how many units each activity could move in its improving direction, (columns,)."""
-        direction = -np.sign(self.cost)
-        moves = self.matrix * direction
+    def _steps(self, rows: np.ndarray, below: np.ndarray, above: np.ndarray) -> np.ndarray:
+        """Return how many units some rows let each activity move as its cost asks, (columns,)."""
+        moves = self.matrix[rows] * self.direction
+        below, above = np.maximum(below[rows], 0.0), np.maximum(above[rows], 0.0)
         with np.errstate(divide="ignore", invalid="ignore"):
-            rising = np.where(moves > 0, np.maximum(below, 0.0)[:, None] / moves, np.inf)
-            falling = np.where(moves < 0, np.maximum(above, 0.0)[:, None] / -moves, np.inf)
-        steps = np.minimum(rising, falling).min(axis=0, initial=np.inf)
-        room = np.where(direction > 0, bounds.most - point, point - bounds.least)
-        steps = np.minimum(steps, room)
-        steps[direction == 0] = 0.0
-        steps[~np.isfinite(steps)] = 0.0
-        return np.floor(steps + NEAR)
+            steps = np.where(moves > 0, below[:, None], above[:, None]) / np.abs(moves)
+        steps[moves == 0] = np.inf
+        return steps.min(axis=0, initial=np.inf)
