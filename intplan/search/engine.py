@@ -41,7 +41,7 @@ from intplan.search.result import SearchResult
 from intplan.search.root import RootWork
 from intplan.search.rounding import Rounder
 from intplan.search.tightening import Propagator
-from intplan.sheet.problem import Number, Problem
+from intplan.sheet.problem import ExactRow, Number, Problem
 
 RANGE = 1e9  # a whole activity without a bound is not branched on past this
 DIVE = 40  # levels a dive may go beyond twice the number of activities
@@ -118,7 +118,10 @@ class Search:
         self.problem = problem
         self.first_plan = first_plan
         self.limits = limits
-        rows = RowStore(problem.matrix, problem.row_least, problem.row_most)
+        rows = RowStore(
+            problem.matrix, problem.row_least, problem.row_most,
+            np.array([row.shift if _in_doubles(row) else -1 for row in problem.rows], int),
+        )  # fmt: skip
         record = Recorder(problem.least, problem.most)
         record.rules = len(problem.rows)
         rules = (problem.matrix, problem.row_least.copy(), problem.row_most.copy())
@@ -333,3 +336,8 @@ class Search:
             ray=None, tree=self.tree, cuts=context.record.cuts, nodes=context.nodes,
             pivots=context.pivots, seconds=self.limits.seconds(),
         )  # fmt: skip
+
+
+def _in_doubles(row: ExactRow) -> bool:
+    """Tell whether a rule's integers are exact in doubles."""
+    return max(map(abs, row.coefficients), default=0) < 1 << 53

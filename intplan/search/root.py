@@ -11,9 +11,10 @@ import numpy as np
 from intplan.relaxation.dictionary import Dictionary, Multipliers
 from intplan.relaxation.start import NoDualBasis, cold_start
 from intplan.search.context import Context
-from intplan.search.cuts.candidate import choose
+from intplan.search.cuts.candidate import Candidate, choose
 from intplan.search.cuts.cover import cover_cut
 from intplan.search.cuts.gomory import Rounding, gomory_cut
+from intplan.search.cuts.integers import integer_gomory_cut
 from intplan.search.develop import NodeWork, Split
 from intplan.search.evidence import Proof
 from intplan.search.result import Added, Cut
@@ -147,10 +148,15 @@ class RootWork(NodeWork):
         )
         values = dictionary.values[rows]
         order = (-np.abs(values - np.floor(values) - 0.5)).argsort(kind="stable")[::-1]
-        candidates = [
-            gomory_cut(rounding, dictionary, row, x, bounds, leaning)
-            for row in rows[order[:GOMORY_ROWS]].tolist()
-        ]
+        exactly = context.problem.cost_step is None
+        candidates: list[Candidate | None] = []
+        for row in rows[order[:GOMORY_ROWS]].tolist():
+            cut = None
+            if exactly:
+                cut = integer_gomory_cut(rounding, dictionary, row, x, bounds, leaning)
+            candidates.append(
+                cut or gomory_cut(rounding, dictionary, row, x, bounds, leaning)
+            )
         for number, row in enumerate(context.problem.rows):
             for limit in (0, 1):
                 candidates.append(
@@ -170,7 +176,10 @@ class RootWork(NodeWork):
             )  # fmt: skip
         least = np.array([c.least for c in chosen])
         return context.rows.append(
-            np.array([c.coefficients for c in chosen]), least, np.full(len(chosen), np.inf)
+            np.array([c.coefficients for c in chosen]),
+            least,
+            np.full(len(chosen), np.inf),
+            np.array([c.shift for c in chosen]),
         )
 
     def _rounding(self) -> Rounding:

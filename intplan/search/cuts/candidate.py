@@ -22,6 +22,7 @@ class Candidate:
     least : double, exact as given
     evidence : what it was derived from
     leans : whether a bound it used leans on the cut-off
+    shift : the row times ``2**shift`` is in integers, -1 where that is not known
     efficacy : distance from the relaxation's point
     """
 
@@ -30,6 +31,7 @@ class Candidate:
     least: float
     evidence: dict[str, Any]
     leans: bool
+    shift: int = -1
     efficacy: float = 0.0
 
     def measure(self, x: np.ndarray) -> bool:

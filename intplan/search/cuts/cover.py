@@ -62,7 +62,8 @@ def cover_cut(
         else:
             coefficients[item.column] = -coefficient
     largest = max(coefficient for _, coefficient in lifted)
-    scale = 2.0 ** -(largest.bit_length() - 1)
+    shift = largest.bit_length() - 1
+    scale = 2.0**-shift
     candidate = Candidate(
         "cover", coefficients * scale, least * scale,
         {"row": number, "limit": limit, "cover": [i.column for i in cover],
@@ -70,6 +71,7 @@ def cover_cut(
          "flipped": [i.column for i, _ in lifted if i.flipped],
          "bounds": others, "values": _values(others, bounds)},
         bool(bounds.leans[others & 1, others >> 1].any()),
+        shift,
     )  # fmt: skip
     return candidate if candidate.measure(x) else None
 
