@@ -1,4 +1,4 @@
-"""Seeded families of planning problems for the benchmark and the tests.
+"""Families of planning problems for the benchmark and the tests: seeded, published and demo.
 
 Every generator draws small integers from its own `numpy.random.Generator`, so that an instance is
 the same on every machine and its data are exact in doubles.  The sizes were chosen so that the
@@ -7,10 +7,18 @@ reference of `tests.reference` needs some milliseconds up to about a second for 
 
 from __future__ import annotations
 
+import tomllib
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
+
+if TYPE_CHECKING:
+    from intplan.sheet import Sheet
+
+INSTANCES = Path(__file__).parent.parent / "instances"
 
 
 @dataclass(frozen=True, eq=False)
@@ -26,6 +34,7 @@ class Instance:
     least, most : (activities,) bounds, infinite where there is none
     whole : (activities,) bool
     maximize : whether the aim is maximised
+    constant : what the aim adds to its terms
     """
 
     name: str
@@ -38,6 +47,7 @@ class Instance:
     most: np.ndarray
     whole: np.ndarray
     maximize: bool
+    constant: float = 0.0
 
     @property
     def shape(self) -> tuple[int, int]:
@@ -89,6 +99,49 @@ def build(
         whole=spread(whole, aim.size, bool),
         maximize=maximize,
     )
+
+
+def instance_of(sheet: Sheet, name: str, family: str) -> Instance:
+    """Return the arrays of a sheet in its own units, with a column for each bend of a soft rule."""
+    bends = sheet.problem().bends
+    activities = len(sheet.activities)
+    aim = np.zeros(activities + len(bends))
+    for column, coefficient in sheet.aim.terms:
+        aim[column] = coefficient
+    rows = np.zeros((len(sheet.rules), aim.size))
+    for i, rule in enumerate(sheet.rules):
+        for column, coefficient in rule.terms:
+            rows[i, column] = coefficient
+    maximize = sheet.aim.sense == "maximize"
+    bend_most = []
+    for bend in bends:
+        rule = sheet.rules[bend.rule]
+        rows[bend.rule, bend.column] = -1.0 if bend.side == "most" else 1.0
+        aim[bend.column] = -float(rule.give) if maximize else float(rule.give)
+        bend_most.append(_limit(rule.give_most, np.inf))
+    return Instance(
+        name=name,
+        family=family,
+        aim=aim,
+        rows=rows,
+        row_least=np.array([_limit(rule.least, -np.inf) for rule in sheet.rules]),
+        row_most=np.array([_limit(rule.most, np.inf) for rule in sheet.rules]),
+        least=np.array([_limit(a.least, -np.inf) for a in sheet.activities] + [0.0] * len(bends)),
+        most=np.array([_limit(a.most, np.inf) for a in sheet.activities] + bend_most),
+        whole=np.array([a.whole for a in sheet.activities] + [False] * len(bends)),
+        maximize=maximize,
+        constant=float(sheet.aim.constant),
+    )
+
+
+def _limit(value: Any, missing: float) -> float:
+    return missing if value is None else float(value)
+
+
+def index_of(folder: str) -> list[dict[str, Any]]:
+    """Return the entries of ``instances/FOLDER/index.toml``, each with its `path` filled in."""
+    entries = tomllib.loads((INSTANCES / folder / "index.toml").read_text("utf-8"))["instance"]
+    return [entry | {"path": INSTANCES / folder / entry["file"]} for entry in entries]
 
 
 def product_mix(

@@ -85,7 +85,7 @@ def reference_milp(instance: Instance, time_limit: float | None = None) -> Refer
             cost, integrality=integrality, bounds=bounds, constraints=constraints, options=options
         )
         seconds = time.perf_counter() - started
-    value = None if answer.x is None else float(sign * answer.fun)
+    value = None if answer.x is None else float(sign * answer.fun) + instance.constant
     return Reference(answer.status, value, answer.x, seconds, int(answer.mip_node_count or 0))
 
 
@@ -104,7 +104,7 @@ def reference_linprog(instance: Instance) -> Reference:
         started = time.perf_counter()
         answer = linprog(cost, matrix, limits, equalities, instance.row_most[equal], bounds=bounds)
         seconds = time.perf_counter() - started
-    value = None if answer.status != OPTIMAL else float(sign * answer.fun)
+    value = None if answer.status != OPTIMAL else float(sign * answer.fun) + instance.constant
     return Reference(answer.status, value, answer.x, seconds, 0)
 
 
