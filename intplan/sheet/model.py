@@ -1,0 +1,371 @@
+"""The sheet in exact numbers: activities, rules and an aim, and the problem they make."""
+
+from __future__ import annotations
+
+import math
+import os
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING, Any, Literal
+
+from intplan.errors import SheetError
+from intplan.sheet.algebra import Terms, write_rule, write_sum
+from intplan.sheet.numbers import Number, lowest, show
+
+if TYPE_CHECKING:
+    from intplan.sheet.checking import CheckResult
+    from intplan.sheet.problem import Bend, Problem
+
+MOST_CELLS = 25_000_000
+
+Sense = Literal["maximize", "minimize"]
+
+
+@dataclass(frozen=True, slots=True)
+class Activity:
+    """A quantity to decide.
+
+    Attributes
+    ----------
+    name : unique in its sheet
+    least, most : exact bounds, None where there is none
+    whole : in whole units only
+    unit : free text for reports
+    """
+
+    name: str
+    least: Number | None = 0
+    most: Number | None = None
+    whole: bool = True
+    unit: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Rule:
+    """A linear condition, every activity on the left and every number on the right.
+
+    Attributes
+    ----------
+    name : unique among the rules of its sheet
+    terms : (activity index, coefficient) pairs, merged, without zeros, sorted by index
+    least, most : limits of the sum of the terms, None where there is none
+    note : free text for reports
+    give : what a unit of bending costs the aim, in the units of the rule as it is written; None for
+        a rule that does not bend
+    give_most : how far the rule may bend, None for no limit
+    text : the algebra as it was written, empty where there was none
+    """
+
+    name: str
+    terms: Terms
+    least: Number | None
+    most: Number | None
+    note: str = ""
+    give: Number | None = None
+    give_most: Number | None = None
+    text: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Aim:
+    """What is maximised or minimised; with sense None any plan that meets the rules is an answer.
+
+    Attributes
+    ----------
+    sense : ``"maximize"``, ``"minimize"`` or None
+    terms : (activity index, coefficient) pairs, merged, without zeros, sorted by index
+    constant : added to the sum of the terms
+    """
+
+    sense: Sense | None = None
+    terms: Terms = ()
+    constant: Number = 0
+
+
+@dataclass(frozen=True)
+class Sheet:
+    """A planning problem as the planner wrote it, in exact numbers; it never changes.
+
+    Attributes
+    ----------
+    title, measure : free text for reports; the measure is what the aim counts
+    aim : the `Aim`
+    activities, rules : in the order in which they were written
+    warnings : what is odd about the sheet though it can be solved, one sentence each
+
+    Raises
+    ------
+    SheetError
+        There is no activity, or two activities or two rules share a name.
+    """
+
+    title: str
+    measure: str
+    aim: Aim
+    activities: tuple[Activity, ...]
+    rules: tuple[Rule, ...]
+    warnings: tuple[str, ...] = ()
+
+    def __post_init__(self) -> None:
+        if not self.activities:
+            raise SheetError("an empty sheet: it has no activities")
+        for kind, items in (("activity", self.activities), ("rule", self.rules)):
+            names = {item.name for item in items}  # type: ignore[attr-defined]
+            if len(names) < len(items):
+                raise SheetError(f"two {kind} names are the same: {_repeated(items)}")
+
+    @classmethod
+    def read(cls, path: str | os.PathLike[str]) -> Sheet:
+        """Read a sheet from a TOML file.
+
+        Raises
+        ------
+        SheetError
+            The file cannot be read or is no sheet; `where` names the file and the place in it.
+        """
+        from intplan.sheet.reading import read_sheet
+
+        return read_sheet(path)
+
+    @classmethod
+    def parse(cls, text: str, where: str = "sheet") -> Sheet:
+        """Read a sheet from TOML text; `where` names it in errors.
+
+        Raises
+        ------
+        SheetError
+            The text is no sheet.
+        """
+        from intplan.sheet.reading import parse_sheet
+
+        return parse_sheet(text, where)
+
+    @classmethod
+    def from_arrays(
+        cls,
+        aim: Any,
+        rows: Any,
+        row_least: Any = None,
+        row_most: Any = None,
+        least: Any = 0,
+        most: Any = None,
+        whole: Any = True,
+        maximize: bool = False,
+        names: Sequence[str] | None = None,
+        *,
+        rule_names: Sequence[str] | None = None,
+        title: str = "",
+        measure: str = "",
+    ) -> Sheet:
+        """Make a sheet from arrays; every float counts as its shortest decimal.
+
+        Parameters
+        ----------
+        aim : (activities,) coefficients, or None for no aim
+        rows : (rules, activities) coefficients: an array, whatever `numpy.asarray` takes, or a
+            sparse matrix or array of SciPy
+        row_least, row_most : (rules,) limits or one for all; infinite or None where there is none
+        least, most : (activities,) bounds or one for all; infinite or None where there is none
+        whole : (activities,) flags or one for all
+        maximize : whether the aim is maximised
+        names : names of the activities, ``x[0]``, ``x[1]``, ... by default
+        rule_names : names of the rules, ``r[0]``, ``r[1]``, ... by default
+        title, measure : free text for reports
+
+        Raises
+        ------
+        SheetError
+            A nan, an infinity where none is allowed, a wrong shape or name, contradicting bounds,
+            or a size beyond `MOST_CELLS`.
+        """
+        from intplan.sheet.arrays import sheet_from_arrays
+
+        return sheet_from_arrays(
+            aim, rows, row_least, row_most, least, most, whole, maximize, names, rule_names,
+            title, measure,
+        )  # fmt: skip
+
+    @classmethod
+    def from_record(cls, record: object, where: str = "sheet") -> Sheet:
+        """Read back what `to_record` made.
+
+        Raises
+        ------
+        SheetError
+            The record is damaged or foreign.
+        """
+        from intplan.sheet.records import sheet_from_record
+
+        return sheet_from_record(record, where)
+
+    def to_record(self) -> dict[str, Any]:
+        """Return the sheet as plain dicts, lists and texts for JSON, exact numbers as text."""
+        from intplan.sheet.records import record_of
+
+        return record_of(self)
+
+    @cached_property
+    def activity_index(self) -> dict[str, int]:
+        """The position of each activity by name."""
+        return {activity.name: j for j, activity in enumerate(self.activities)}
+
+    @cached_property
+    def rule_index(self) -> dict[str, int]:
+        """The position of each rule by name."""
+        return {rule.name: i for i, rule in enumerate(self.rules)}
+
+    def rule_value(self, rule: Rule, amounts: Sequence[Number]) -> Number:
+        """Return the exact value of a rule's left side at the amounts, one an activity."""
+        return lowest(sum(c * amounts[j] for j, c in rule.terms))
+
+    def aim_value(self, amounts: Sequence[Number]) -> Number:
+        """Return the exact value of the aim, without the prices of any bends."""
+        return lowest(sum((c * amounts[j] for j, c in self.aim.terms), self.aim.constant))
+
+    def check(self, amounts: Sequence[Number]) -> CheckResult:
+        """Hold exact amounts, one an activity, against every rule, bound and whole unit.
+
+        Raises
+        ------
+        SheetError
+            The number of amounts is not that of the activities.
+        """
+        from intplan.sheet.checking import check_plan
+
+        return check_plan(self, amounts)
+
+    def rule_from_text(
+        self,
+        name: str,
+        text: str,
+        note: str = "",
+        give: Number | None = None,
+        give_most: Number | None = None,
+        where: str | None = None,
+    ) -> Rule:
+        """Read one more rule in the names of this sheet; the sheet stays as it is.
+
+        Raises
+        ------
+        SheetError
+            The name is no name, or the algebra is malformed, non-linear or false of itself.
+        """
+        from intplan.sheet.reading import rule_of_text
+
+        return rule_of_text(name, text, self.activity_index, note, give, give_most, where)
+
+    def show_rule(self, rule: Rule) -> str:
+        """Return a rule as algebra, every activity on the left and every number on the right."""
+        return write_rule(rule.terms, rule.least, rule.most, self._names)
+
+    def show_aim(self) -> str:
+        """Return the sum that is maximised or minimised, as algebra."""
+        return write_sum(self.aim.terms, self._names, self.aim.constant)
+
+    @cached_property
+    def _names(self) -> tuple[str, ...]:
+        return tuple(activity.name for activity in self.activities)
+
+    def problem(self) -> Problem:
+        """Return the sheet as the engine takes it: the activities, then a column a bend.
+
+        Raises
+        ------
+        SheetError
+            The table would pass `MOST_CELLS`, or its numbers cannot be scaled into doubles.
+        """
+        return self._problem
+
+    @cached_property
+    def _problem(self) -> Problem:
+        from intplan.sheet.problem import Problem
+
+        bends = bends_of(self)
+        check_size(len(self.rules), len(self.activities) + len(bends))
+        terms = [rule.terms for rule in self.rules]
+        aim_terms = list(self.aim.terms)
+        maximize = self.aim.sense == "maximize"
+        for bend in bends:
+            rule = self.rules[bend.rule]
+            terms[bend.rule] += ((bend.column, 1 if bend.side == "least" else -1),)
+            if rule.give is not None:
+                aim_terms.append((bend.column, -rule.give if maximize else rule.give))
+        spans = [self.rules[bend.rule].give_most for bend in bends]
+        limits = ((rule.least, rule.most) for rule in self.rules)
+        try:
+            return Problem.build(
+                aim_terms=aim_terms,
+                aim_constant=self.aim.constant,
+                maximize=maximize,
+                rules=[(t, *pair) for t, pair in zip(terms, limits, strict=True)],
+                least=[a.least for a in self.activities] + [0] * len(bends),
+                most=[a.most for a in self.activities] + spans,
+                whole=[a.whole for a in self.activities] + [False] * len(bends),
+                bends=bends,
+            )
+        except OverflowError:
+            raise SheetError("the numbers of this sheet lie too far apart for doubles") from None
+
+
+def _repeated(items: Iterable[Any]) -> str:
+    """Return the first name that comes a second time."""
+    seen = set()
+    for item in items:
+        if item.name in seen:
+            return str(item.name)
+        seen.add(item.name)
+    return ""
+
+
+def bends_of(sheet: Sheet) -> tuple[Bend, ...]:
+    """Return a bend for each limit of each soft rule, in columns after the activities."""
+    from intplan.sheet.problem import Bend
+
+    bends: list[Bend] = []
+    for i, rule in enumerate(sheet.rules):
+        if rule.give is None:
+            continue
+        for side, limit in (("most", rule.most), ("least", rule.least)):
+            if limit is not None:
+                bends.append(Bend(i, side, len(sheet.activities) + len(bends)))
+    return tuple(bends)
+
+
+def check_size(rules: int, activities: int, where: str | None = None) -> None:
+    """Make sure that the engine's table fits in memory, before any of it is allocated.
+
+    Raises
+    ------
+    SheetError
+        It would hold more than `MOST_CELLS` numbers.
+    """
+    cells = (rules + 1) * activities
+    if cells > MOST_CELLS:
+        raise SheetError(
+            f"{rules:,} rules by {activities:,} activities make a table of {cells:,} numbers"
+            f" ({cells * 8 / 1e6:,.0f} MB); the limit is {MOST_CELLS:,}"
+            f" ({MOST_CELLS * 8 / 1e6:,.0f} MB)",
+            where,
+        )
+
+
+def check_bounds(activity: Activity, where: str) -> None:
+    """Make sure that some amount lies within an activity's bounds.
+
+    Raises
+    ------
+    SheetError
+        `least` is above `most`, or no whole number lies between them.
+    """
+    least, most = activity.least, activity.most
+    if least is None or most is None:
+        return
+    if least > most:
+        raise SheetError(f"least = {show(least)} is above most = {show(most)}", where)
+    if activity.whole and math.ceil(least) > math.floor(most):
+        raise SheetError(
+            f"no whole number lies between least = {show(least)} and most = {show(most)};"
+            " widen them, or say whole = false",
+            where,
+        )
