@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterable, Sequence
 from fractions import Fraction
+from typing import NamedTuple
 
 import numpy as np
 
@@ -14,6 +16,14 @@ from intplan.sheet.problem import ExactRow, Number, Problem, lowest
 SAFE = 2.0**52  # sums of integers below this are exact in doubles
 GUESS = 10**6  # greatest denominator guessed for a divisible amount
 MULTIPLIER_GUESS = 10**7  # greatest denominator guessed for a multiplier
+
+
+class IntegerRow(NamedTuple):
+    """A row of the store: coefficients that are ``2**shift`` times the store's."""
+
+    columns: tuple[int, ...]
+    coefficients: tuple[int, ...]
+    shift: int
 
 
 class Arithmetic:
@@ -31,6 +41,7 @@ class Arithmetic:
         self.rules = len(problem.rows)
         self.divisible = (~problem.whole).nonzero()[0].tolist()
         self.largest_shift = max((row.shift for row in problem.rows), default=0)
+        self._integer_rows: dict[int, IntegerRow] = {}
         self.sizes = np.abs(problem.matrix)
         self.limits = [self._written_limits(row) for row in problem.rows]
         self.plain = all(
@@ -134,16 +145,28 @@ class Arithmetic:
 
     # ------------------------------------------------------------------ bounds
 
-    def row_terms(self, number: int) -> tuple[list[tuple[int, Number]], Number | None, Number | None]:
-        """Return one row of the store exactly, in the store's scale: its terms and limits."""
+    def integer_row(self, number: int) -> IntegerRow:
+        """Return one row of the store in integers; kept once made."""
+        if number not in self._integer_rows:
+            if number < self.rules:
+                row = self.problem.rows[number]
+                made = IntegerRow(row.columns, row.coefficients, row.shift)
+            else:
+                line = self.rows.matrix[number]
+                columns = line.nonzero()[0].tolist()
+                ratios = [line.item(j).as_integer_ratio() for j in columns]
+                shift = max(d for _, d in ratios).bit_length() - 1
+                made = IntegerRow(
+                    tuple(columns), tuple((p << shift) // q for p, q in ratios), shift
+                )
+            self._integer_rows[number] = made
+        return self._integer_rows[number]
+
+    def row_limits(self, number: int) -> tuple[Number | None, Number | None]:
+        """Return the limits of one row exactly, in the store's scale."""
         if number < self.rules:
-            row = self.problem.rows[number]
-            unit = Fraction(1, 1 << row.shift)
-            terms = [(j, c * unit) for j, c in zip(row.columns, row.coefficients, strict=True)]
-            return terms, *self.limits[number]
-        line = self.rows.matrix[number]
-        terms = [(int(j), Fraction(line.item(j))) for j in line.nonzero()[0]]
-        return terms, _exact(self.rows.least[number]), _exact(self.rows.most[number])
+            return self.limits[number]
+        return _exact(self.rows.least[number]), _exact(self.rows.most[number])
 
     @staticmethod
     def _written_limits(row: ExactRow) -> tuple[Number | None, Number | None]:
@@ -176,19 +199,25 @@ class Arithmetic:
         weight, multipliers : as in `intplan.search.evidence`
         least, most : (columns,) bounds of the node, taken as exact
         """
-        reduced: dict[int, Number] = {}
+        unit = math.lcm(*(y.denominator for y in multipliers.values()))
+        rows = {i: self.integer_row(i) for i in multipliers}
+        shift = max([self.problem.cost_shift, *(row.shift for row in rows.values())])
+        reduced: dict[int, int] = {}  # times unit * 2**shift
         if weight:
-            scale = Fraction(1, 1 << self.problem.cost_shift)
+            scale = unit << (shift - self.problem.cost_shift)
             reduced = {j: c * scale for j, c in self.problem.exact_cost}
         total: Number = 0
         for number, y in multipliers.items():
-            terms, low, high = self.row_terms(number)
+            low, high = self.row_limits(number)
             limit = low if y > 0 else high
             if limit is None:
                 return None
-            total += y * limit
-            for j, c in terms:
-                reduced[j] = reduced.get(j, 0) - y * c
+            row = rows[number]
+            scaled = y.numerator * (unit // y.denominator)
+            total += (scaled << shift) * limit
+            scaled <<= shift - row.shift
+            for j, c in zip(row.columns, row.coefficients, strict=True):
+                reduced[j] = reduced.get(j, 0) - scaled * c
         for j, d in reduced.items():
             if d == 0:
                 continue
@@ -196,7 +225,7 @@ class Arithmetic:
             if limit is None:
                 return None
             total += d * limit
-        return Fraction(total)
+        return Fraction(total) / (unit << shift)
 
     def guess_multipliers(
         self, numbers: Iterable[int], values: Iterable[float]
@@ -234,12 +263,11 @@ class Arithmetic:
         entries = np.zeros((len(numbers), n), object)
         scales, row_least, row_most = [], [], []
         for k, number in enumerate(numbers):
-            terms, low, high = self.row_terms(number)
-            scale = 1
-            for _, c in terms:
-                scale = max(scale, Fraction(c).denominator)
-            for j, c in terms:
-                entries[k, j] = int(c * scale)
+            row = self.integer_row(number)
+            low, high = self.row_limits(number)
+            scale = 1 << row.shift
+            for j, c in zip(row.columns, row.coefficients, strict=True):
+                entries[k, j] = c
             scales.append(scale)
             row_least.append(None if low is None else low * scale)
             row_most.append(None if high is None else high * scale)

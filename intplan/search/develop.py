@@ -82,7 +82,13 @@ class NodeWork:
                                      dictionary.value - branch.parent_cost)  # fmt: skip
             rows = self.fractional_rows()
             if not len(rows):
-                return self._whole_point(proof)
+                if self._take_plan(proof):
+                    return None
+                if attempt + 1 < ATTEMPTS and self.tighten(proof):
+                    if self.closed:
+                        return None
+                    continue
+                return self._pin(proof)
             if self.try_rounding() and context.best.beats(proof.bound):
                 return self.close("beaten", proof)
             last = attempt + 1 == ATTEMPTS
@@ -137,11 +143,10 @@ class NodeWork:
                 return self.close("beaten", proof)
             if proof.bound == -math.inf:
                 continue
-            if not context.best.ties(proof.bound):
-                self.bound = max(self.bound, proof.bound)
-                return proof
-            if self._settle_tie(proof, "beaten"):
+            if context.best.ties(proof.bound) and self._settle_tie(proof, "beaten"):
                 return None
+            self.bound = max(self.bound, proof.bound)
+            return proof
         return self.solve_exactly()
 
     def _reoptimise(self, cutoff: float) -> Status:
@@ -300,17 +305,48 @@ class NodeWork:
             found |= plan is not None and context.best.offer(plan)
         return found
 
-    def _whole_point(self, proof: Proof) -> Split | None:
-        """Take the plan at a point with whole values and close the node by it."""
+    def _take_plan(self, proof: Proof) -> bool:
+        """Take the plan at a point with whole values; tell whether it closed the node."""
         context = self.context
         plan = context.arithmetic.complete(self.dictionary.activities())
         if plan is None:
-            return self.solve_exactly()
+            return False
         context.best.offer(plan)
         if context.best.beats(proof.bound):
-            return self.close("plan", proof)
-        if context.best.ties(proof.bound) and self._settle_tie(proof, "plan"):
-            return None
+            self.close("plan", proof)
+            return True
+        return context.best.ties(proof.bound) and self._settle_tie(proof, "plan")
+
+    def _pin(self, proof: Proof) -> Split | None:
+        """Go on from a whole point whose bound is a hair below its plan, or that is none.
+
+        The node is split at a whole activity that is still free, so that the side with the point
+        pins it.  Once all are pinned, cuts no longer matter: the relaxation over the divisible
+        activities alone is settled in rationals.
+        """
+        bounds = self.bounds
+        free = (self.context.problem.whole & (bounds.least < bounds.most)).nonzero()[0]
+        if not len(free):
+            return self._settle_pinned()
+        x = self.dictionary.activities()
+        column = free[np.abs(proof.reduced[free]).argmax()].item()
+        value = round(x.item(column))
+        up = value < bounds.most[column]
+        self._keep_open(proof)
+        return Split(column, value + 0.5 if up else value - 0.5, 1.0 - up, float(up))
+
+    def _settle_pinned(self) -> Split | None:
+        """Solve the node without its cuts, guess exact multipliers, and else go to rationals."""
+        context, old = self.context, self.dictionary
+        self.dictionary = cold_start(
+            old.rows, old.cost, self.bounds.least, self.bounds.most,
+            np.arange(context.record.rules),
+        )  # fmt: skip
+        self.dictionary.pivots += old.pivots
+        if self._reoptimise(math.inf) is Status.OPTIMAL:
+            proof = self._cost_proof()
+            if self._take_plan(proof) or self._settle_tie(proof, "beaten"):
+                return None
         return self.solve_exactly()
 
     # ------------------------------------------------------------------ exact arithmetic
@@ -318,6 +354,8 @@ class NodeWork:
     def _settle_tie(self, proof: Proof, outcome: str) -> bool:
         """Close a node whose bound equals the best value, if guessed exact multipliers show it."""
         context = self.context
+        if (context.rows.shift[proof.rows] < 0).any():
+            return False
         multipliers = context.arithmetic.guess_multipliers(proof.rows, proof.multipliers)
         bound = context.arithmetic.exact_bound(
             1, multipliers, self.bounds.least, self.bounds.most

@@ -154,9 +154,9 @@ class RootWork(NodeWork):
             cut = None
             if exactly:
                 cut = integer_gomory_cut(rounding, dictionary, row, x, bounds, leaning)
-            candidates.append(
-                cut or gomory_cut(rounding, dictionary, row, x, bounds, leaning)
-            )
+            if cut is None:
+                cut = gomory_cut(rounding, dictionary, row, x, bounds, leaning)
+            candidates.append(cut)
         for number, row in enumerate(context.problem.rows):
             for limit in (0, 1):
                 candidates.append(
