@@ -12,9 +12,7 @@ from intplan.errors import IntplanError, nearest
 Path = str | os.PathLike[str]
 
 
-def read_file(
-    path: Path, limit: int, error: type[IntplanError] = IntplanError
-) -> bytes:
+def read_file(path: Path, limit: int, error: type[IntplanError] = IntplanError) -> bytes:
     """Return the bytes of a file.
 
     Parameters
@@ -28,7 +26,7 @@ def read_file(
     error
         The file is missing, unreadable, a folder, or longer than `limit`.
     """
-    where = str(os.fspath(path))
+    where = os.fsdecode(path)
     try:
         with open(path, "rb") as file:
             data = file.read(limit + 1)
@@ -71,7 +69,7 @@ def write_atomically(path: Path, data: bytes) -> None:
     IntplanError
         The file cannot be written; what was there before is untouched.
     """
-    where = str(os.fspath(path))
+    where = os.fsdecode(path)
     try:
         target = os.path.realpath(path)
         mode = _mode(target)
@@ -99,8 +97,8 @@ def _mode(target: str) -> int | None:
 
 def _replace(target: str, data: bytes, mode: int | None) -> None:
     """Write `data` beside `target`, to the disk, and move it into place."""
-    folder, name = os.path.split(target)
-    fresh = os.path.join(folder, f".{name[:100]}.{secrets.token_hex(6)}.part")
+    folder = os.path.dirname(target)
+    fresh = os.path.join(folder, f".intplan-{secrets.token_hex(8)}.part")
     handle = os.open(fresh, os.O_WRONLY | os.O_CREAT | os.O_EXCL, 0o666)
     try:
         with os.fdopen(handle, "wb") as file:

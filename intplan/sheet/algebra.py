@@ -15,6 +15,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping, Sequence
+from fractions import Fraction
 from typing import NamedTuple, NoReturn
 
 from intplan.errors import SheetError, excerpt, unknown
@@ -67,8 +68,6 @@ _INSTEAD = {
     "\u2044": "/",
     "{": "(",
     "}": ")",
-    "[": "(",
-    "]": ")",
 }
 _RELATION_INSTEAD = {
     "<": "<=",
@@ -143,7 +142,8 @@ def parse_aim(text: str, index: Mapping[str, int], where: str) -> tuple[Terms, N
     parser.expect_end()
     terms, constant = _split(value)
     try:
-        _fit_all(terms, [constant])
+        _fit_all(terms, [])
+        fit(constant)
     except NumberError as problem:
         raise SheetError(f"{problem}", where) from None
     return terms, constant
@@ -261,7 +261,7 @@ class _Parser:
             self.fail(f"a division by an activity {_NOT_LINEAR}", sign)
         if right == 0:
             self.fail("a division by zero", sign)
-        return self.multiply(left, lowest(1 / _fraction(right)), sign)
+        return self.multiply(left, lowest(1 / Fraction(right)), sign)
 
     def factor(self, depth: int) -> Value:
         """Read a number, a name or a sum in parentheses, with any signs before it."""
@@ -297,6 +297,8 @@ class _Parser:
         if self.token.text != ")":
             if self.token.kind == "end":
                 self.fail("this parenthesis is never closed", opening)
+            if self.token.kind == "relation":
+                self.fail("a relation cannot stand inside parentheses", self.token)
             self.unexpected("an operator or ) is missing")
         self.step()
         return value
@@ -324,7 +326,13 @@ class _Parser:
         c = token.text
         if c in _INSTEAD:
             self.fail(f'"{c}" is not understood here; write {_INSTEAD[c]}', token)
-        if c == "^" or c == "**":
+        if c in "[]":
+            self.fail(
+                "brackets hold an index right behind a name, of letters, digits, _ and -, with"
+                " commas but no spaces between its parts, as in build[loaf,week-2]",
+                token,
+            )
+        if c in ("^", "**", "\u00b2", "\u00b3"):
             self.fail(f"a power {_NOT_LINEAR}", token)
         if c == ",":
             self.fail('"," is not understood here; decimals take a point, thousands no mark', token)
@@ -373,6 +381,8 @@ class _Parser:
         return token
 
     def expect_end(self) -> None:
+        if self.token.text == ")":
+            self.fail("this parenthesis was never opened", self.token)
         if self.token.kind != "end":
             self.unexpected("an operator is missing")
 
@@ -383,8 +393,6 @@ class _Parser:
             self.strange(token)
         if token.text == "//":
             self.fail('"//" is not understood here; write /', token)
-        if token.text == ")" and "missing" in message and self.at and "operator" in message:
-            self.fail("this parenthesis was never opened", token)
         self.fail(message, token)
 
 
@@ -417,8 +425,6 @@ class _Settling:
             left, right = self.outer(sides[0], 0), self.outer(sides[2], 1)
             terms, constant = _split(sides[1])
             low, high = (left, right) if relation == "<=" else (right, left)
-            if not terms:  # three constants: true when the middle lies between the others
-                return terms, lowest(low - constant), lowest(high - constant)
             return terms, lowest(low - constant), lowest(high - constant)
         terms, constant = _split(_minus(sides[0], sides[1]))
         limit = lowest(-constant)
@@ -431,12 +437,6 @@ class _Settling:
                 self.relations[position],
             )
         return side
-
-
-def _fraction(value: Number):  # type: ignore[no-untyped-def]
-    from fractions import Fraction
-
-    return Fraction(value)
 
 
 def _minus(left: Value, right: Value) -> Value:

@@ -54,7 +54,7 @@ def sheet_from_arrays(
     if count is None:
         count = _columns(matrix, least, most, whole, names)
     shape = (0, count) if matrix is None else tuple(matrix.shape)
-    if shape == (0,):
+    if shape in ((0,), (0, 0)):
         shape = (0, count)
     if len(shape) != 2 or shape[1] != count:
         raise SheetError(f"the shape is {shape}; expected (rules, {count} activities)", "rows")
@@ -119,7 +119,9 @@ def _entries(array: np.ndarray, place: Place) -> list[Number]:
         if bad.size:
             k = bad.item(0)
             raise SheetError(f"{array[k]} is not a finite number", place(k))
-        if (np.rint(array) == array).all() and (np.abs(array) <= EXACT_INTEGERS).all():
+        # Up to here every integer has a float of its own, so the shortest decimal is the value.
+        exact_below = min(EXACT_INTEGERS, 1 << (np.finfo(array.dtype).nmant + 1))
+        if (np.rint(array) == array).all() and (np.abs(array) <= exact_below).all():
             return array.astype(np.int64).tolist()
     return _one_by_one(array, place)
 

@@ -9,7 +9,7 @@ from typing import Literal
 
 from intplan.errors import SheetError
 from intplan.sheet.model import Rule, Sheet
-from intplan.sheet.numbers import Number, lowest
+from intplan.sheet.numbers import Number, NumberError, exact, lowest
 
 Side = Literal["least", "most"]
 
@@ -75,17 +75,18 @@ class CheckResult:
         return not self.broken
 
 
-def check_plan(sheet: Sheet, amounts: Sequence[Number]) -> CheckResult:
+def check_plan(sheet: Sheet, amounts: Sequence[object]) -> CheckResult:
     """Do the work of `Sheet.check`."""
     if len(amounts) != len(sheet.activities):
         raise SheetError(
             f"{len(amounts):,} amounts for {len(sheet.activities):,} activities", "plan"
         )
-    broken = _broken_bounds(sheet, amounts)
+    plan = [_amount(a, sheet.activities[j].name) for j, a in enumerate(amounts)]
+    broken = _broken_bounds(sheet, plan)
     rules = []
     price: Number = 0
     for rule in sheet.rules:
-        found = check_rule(rule, sheet.rule_value(rule, amounts))
+        found = check_rule(rule, sheet.rule_value(rule, plan))
         rules.append(found)
         if found.side is not None and found.spare is not None:
             excess = lowest(-found.spare - found.bend)
@@ -93,9 +94,19 @@ def check_plan(sheet: Sheet, amounts: Sequence[Number]) -> CheckResult:
                 broken.append(Broken(rule.name, found.side, excess))
         if rule.give is not None:
             price += rule.give * found.bend
-    value = sheet.aim_value(amounts)
+    value = sheet.aim_value(plan)
     value = value - price if sheet.aim.sense == "maximize" else value + price
     return CheckResult(lowest(value), tuple(rules), tuple(broken))
+
+
+def _amount(value: object, name: str) -> Number:
+    """Return an amount as it is, or a float or NumPy number by its shortest decimal."""
+    if type(value) is int or isinstance(value, Fraction):
+        return value
+    try:
+        return exact(value)
+    except NumberError as problem:
+        raise SheetError(str(problem), name) from None
 
 
 def check_rule(rule: Rule, value: Number) -> RuleCheck:

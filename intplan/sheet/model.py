@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 from intplan.errors import SheetError
 from intplan.sheet.algebra import Terms, write_rule, write_sum
-from intplan.sheet.numbers import Number, lowest, show
+from intplan.sheet.numbers import Number, NumberError, check_spread, lowest, show
 
 if TYPE_CHECKING:
     from intplan.sheet.checking import CheckResult
@@ -83,7 +83,7 @@ class Aim:
     constant: Number = 0
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Sheet:
     """A planning problem as the planner wrote it, in exact numbers; it never changes.
 
@@ -114,6 +114,10 @@ class Sheet:
             names = {item.name for item in items}  # type: ignore[attr-defined]
             if len(names) < len(items):
                 raise SheetError(f"two {kind} names are the same: {_repeated(items)}")
+
+    def __repr__(self) -> str:
+        title = f"{self.title!r}, " if self.title else ""
+        return f"<Sheet {title}{len(self.activities)} activities, {len(self.rules)} rules>"
 
     @classmethod
     def read(cls, path: str | os.PathLike[str]) -> Sheet:
@@ -284,13 +288,14 @@ class Sheet:
         bends = bends_of(self)
         check_size(len(self.rules), len(self.activities) + len(bends))
         terms = [rule.terms for rule in self.rules]
-        aim_terms = list(self.aim.terms)
+        aim_terms = self.aim.terms
         maximize = self.aim.sense == "maximize"
         for bend in bends:
             rule = self.rules[bend.rule]
             terms[bend.rule] += ((bend.column, 1 if bend.side == "least" else -1),)
             if rule.give is not None:
-                aim_terms.append((bend.column, -rule.give if maximize else rule.give))
+                aim_terms += ((bend.column, -rule.give if maximize else rule.give),)
+        _check_soft(self, aim_terms)
         spans = [self.rules[bend.rule].give_most for bend in bends]
         limits = ((rule.least, rule.most) for rule in self.rules)
         try:
@@ -306,6 +311,19 @@ class Sheet:
             )
         except OverflowError:
             raise SheetError("the numbers of this sheet lie too far apart for doubles") from None
+
+
+def _check_soft(sheet: Sheet, aim_terms: Terms) -> None:
+    """Make sure that bends and their prices scale into doubles beside the rest."""
+    place = "[aim] with the prices of bends"
+    try:
+        check_spread([c for _, c in aim_terms], [])
+        for rule in sheet.rules:
+            if rule.give is not None:
+                place = rule.name
+                check_spread([1, *(c for _, c in rule.terms)], [])
+    except NumberError as problem:
+        raise SheetError(str(problem), place) from None
 
 
 def _repeated(items: Iterable[Any]) -> str:

@@ -231,9 +231,8 @@ def check_spread(coefficients: Iterable[Number], limits: Iterable[Number]) -> No
     if not sizes:
         return
     largest = max(sizes)
-    if max((abs(largest - s) for s in [*sizes, *map(_binary_size, filter(None, limits))])) > (
-        MOST_SPREAD
-    ):
+    sizes += [_binary_size(limit) for limit in limits if limit]
+    if max(abs(largest - size) for size in sizes) > MOST_SPREAD:
         raise NumberError("the numbers lie too far apart for doubles (more than a factor 1e300)")
 
 

@@ -22,10 +22,15 @@ AIM_KEYS = ("maximize", "minimize")
 ACTIVITY_KEYS = ("least", "most", "whole", "unit")
 RULE_KEYS = ("rule", "note", "give", "give_most")
 
-_UNQUOTED = re.compile(r"""^[ \t]*(?P<name>[^\s"'\[\]=#.]+\[[^\[\]"'=#]*\])[ \t]*=""")
+_BRACKETED = re.compile(r"""^[ \t]*(?P<name>[^\s"'\[\]=#.]+\[[^\[\]"'=#]*\])[ \t]*=""")
+_HEADED = re.compile(r"""^[ \t]*\[(?P<table>\w+)\.(?P<name>[^\s"'\[\]=#.]+\[[^\[\]"'=#]*\])\]""")
+_FOREIGN = re.compile(r"""^[ \t]*(?P<name>[^\s"'\[\]=#.]+)[ \t]*=""")
+_BARE_ALGEBRA = re.compile(r"""^[ \t]*(?P<key>[^\s=#<>]+)[ \t]*=(?P<value>[^"'\[{#]*)""")
 _KEY = re.compile(r"""^[ \t]*(?:"(?P<basic>[^"]*)"|'(?P<literal>[^']*)'|(?P<bare>[\w-]+))[ \t]*=""")
 _LONG_INTEGER = re.compile(r"[0-9][0-9_]{999,}")
-_TOML_PLACE = re.compile(r"(?P<what>.*) \(at (?:line (?P<line>\d+), column (?P<column>\d+)|end.*)\)")
+_TOML_PLACE = re.compile(
+    r"(?P<what>.*) \(at (?:line (?P<line>\d+), column (?P<column>\d+)|end of document)\)", re.DOTALL
+)
 
 
 class DecimalText(str):
@@ -34,7 +39,7 @@ class DecimalText(str):
 
 def read_sheet(path: str | os.PathLike[str]) -> Sheet:
     """Do the work of `Sheet.read`."""
-    where = str(os.fspath(path))
+    where = os.fsdecode(path)
     data = read_file(path, MOST_BYTES, SheetError)
     try:
         text = data.decode("utf-8-sig")
@@ -95,17 +100,34 @@ def _toml_error(text: str, problem: str, where: str) -> SheetError:
     number = int(parts["line"]) if parts and parts["line"] else len(text.rstrip("\n").split("\n"))
     line = lines[number - 1] if number <= len(lines) else ""
     place = f"{where}, line {number}"
-    unquoted = _UNQUOTED.match(line)
-    if unquoted:
-        name = unquoted["name"]
-        return SheetError(f'a name with brackets wants quotes: "{name}" = ...', place)
-    if what in ("Cannot overwrite a value", "Cannot mutate immutable namespace"):
-        key = _KEY.match(line)
-        if key:
-            name = key["basic"] or key["literal"] or key["bare"] or ""
-            return SheetError(f"the name {excerpt(name)} is declared twice", place)
+    cure = _cure(what, line)
+    if cure is not None:
+        return SheetError(cure, place)
     column = f"column {parts['column']}: " if parts and parts["column"] else ""
     return SheetError(f"{column}not TOML: {what[:1].lower()}{what[1:]}", place)
+
+
+def _cure(what: str, line: str) -> str | None:
+    """Return what to write instead, for the slips that a line of a sheet invites."""
+    if what in ("Cannot overwrite a value", "Cannot mutate immutable namespace"):
+        key = _KEY.match(line)
+        name = key and (key["basic"] or key["literal"] or key["bare"])
+        return f"the name {excerpt(name)} is declared twice" if name else None
+    if what.startswith("Cannot declare"):
+        return f"the table {excerpt(line.strip())} is declared twice"
+    bracketed = _BRACKETED.match(line)
+    if bracketed:
+        return f'a name with brackets wants quotes: "{bracketed["name"]}" = ...'
+    headed = _HEADED.match(line)
+    if headed:
+        return f'a name with brackets wants quotes: [{headed["table"]}."{headed["name"]}"]'
+    foreign = _FOREIGN.match(line)
+    if foreign and not foreign["name"].isascii():
+        return f'a name with letters beyond a to z wants quotes: "{foreign["name"]}" = ...'
+    bare = _BARE_ALGEBRA.match(line)
+    if bare and re.search(r"[<>=*]|[^\W\d]\s*[-+]", bare["value"]):
+        return f'algebra wants quotes: {bare["key"]} = "{bare["value"].strip()[:40]}"'
+    return None
 
 
 def _text(table: Mapping[str, Any], key: str, where: str) -> str:
@@ -175,7 +197,8 @@ def _number(value: object, key: str, where: str) -> Number | _Infinity:
         if isinstance(value, str):
             return exact_number(value)
     except NumberError as problem:
-        raise SheetError(f"{key}: {problem}", where) from None
+        text = excerpt(value, 24) if isinstance(value, str) else "an integer"
+        raise SheetError(f"{key} = {text}: {problem}", where) from None
     raise SheetError(f"{key} must be a number, not {_kind(value)}", where)
 
 

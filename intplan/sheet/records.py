@@ -210,7 +210,7 @@ def _aim(entry: object, activities: int, where: str) -> Aim:
     )
     if sense is None and (aim.terms or aim.constant):
         raise SheetError("an aim without a sense has no terms and no constant", where)
-    _check_spread(aim.terms, [aim.constant], where)
+    _check_spread(aim.terms, [], where)
     return aim
 
 
