@@ -25,6 +25,7 @@ import numpy as np
 import scipy
 
 import intplan
+from intplan.files import write_atomically
 from tests.families import FAMILIES, Instance, index_of, instance_of
 
 BEGIN, END = "<!-- measured: begin -->", "<!-- measured: end -->"
@@ -68,8 +69,8 @@ class Family:
 
     name: str
     measured: list[Measured] = field(default_factory=list)
-    peak_mb: float = math.nan
-    imports_mb: float = math.nan
+    peak_mb: float | None = None
+    imports_mb: float | None = None
     warm_pivots: int = 0
     cold_pivots: int = 0
     warm_seconds: float = 0.0
@@ -250,6 +251,7 @@ def measure_pivot() -> dict[str, float]:
         starts.append(Dictionary.at_slack_basis(rows, problem.cost, problem.least, problem.most))
     table = np.zeros(starts[0].table.shape)
     left, across = np.ones(table.shape[0]), np.ones(table.shape[1])
+    transposed = table.T
     pivot_seconds, update_seconds = [], []
     for _ in range(7):
         dictionaries = [start.copy() for start in starts]
@@ -260,7 +262,7 @@ def measure_pivot() -> dict[str, float]:
         pivot_seconds.append((time.perf_counter() - started) / pivots)
         started = time.perf_counter()
         for _ in range(2000):
-            dger(1e-9, across, left, a=table.T, overwrite_a=1)
+            dger(1e-9, across, left, a=transposed, overwrite_a=1)
         update_seconds.append((time.perf_counter() - started) / 2000)
     pivot, update = min(pivot_seconds) * 1e6, min(update_seconds) * 1e6
     return {"pivot_us": pivot, "update_us": update, "ratio": pivot / update}
@@ -327,19 +329,22 @@ class Report:
         names = ", ".join(f"{name} {number}" for name, number in versions().items())
         return (
             f"{names}; {os.cpu_count()} cores. Best of {self.repeat} runs each, turn about, after "
-            "one warm run. Time is intplan's over the reference's, geometric mean over the "
-            "instances. Nodes and pivots are sums. Memory is the peak of a process that solves "
+            f"one warm run (from {LONG:.0f} s on, a single run). Time ratio is intplan's over the reference's, geometric mean over "
+            "the instances. Nodes and pivots are sums. Memory is the peak of a process that solves "
             "the family, and of its imports alone."
         )
 
     def _family_table(self) -> str:
         lines = [
-            "| family | sheets | time | slowest | nodes | reference nodes | pivots "
+            "| family | sheets | time ratio | worst | nodes | reference nodes | pivots "
             "| warm / cold pivots | memory, imports | answers |",
             "|---|--:|--:|--:|--:|--:|--:|--:|--:|---|",
         ]
         for family in self.families:
             every = family.measured
+            memory = "-"
+            if family.peak_mb is not None:
+                memory = f"{family.peak_mb:.0f}, {family.imports_mb:.0f} MB"
             warm = f"{family.warm_pivots} / {family.cold_pivots}" if family.cold_pivots else "-"
             lines.append(
                 f"| {family.name} | {len(every)} | {family.ratio:.2f} "
@@ -347,7 +352,7 @@ class Report:
                 f"| {sum(one.nodes for one in every)} "
                 f"| {sum(one.reference_nodes for one in every)} "
                 f"| {sum(one.pivots for one in every)} | {warm} "
-                f"| {family.peak_mb:.0f}, {family.imports_mb:.0f} MB | {answers(every)} |"
+                f"| {memory} | {answers(every)} |"
             )
         return "\n".join(lines)
 
@@ -383,7 +388,7 @@ class Report:
 
     def _instance_table(self) -> str:
         lines = [
-            "| instance | rules x activities | ms | reference ms | time | nodes "
+            "| instance | rules x activities | ms | reference ms | time ratio | nodes "
             "| reference nodes | pivots | answers |",
             "|---|--:|--:|--:|--:|--:|--:|--:|---|",
         ]
@@ -437,20 +442,19 @@ def status(text: str) -> None:
         print(f"\r\x1b[K{text}", end="", file=sys.stderr, flush=True)
 
 
-def write_between_markers(path: Path, text: str) -> None:
-    """Replace what stands between the two markers of a page.
+def split_at_markers(path: Path) -> tuple[str, str]:
+    """Return what stands before and after the place for the tables in a page.
 
     Raises
     ------
-    SystemExit
-        If the page does not have both.
+    ValueError
+        If the page does not have both markers.
     """
-    page = path.read_text("utf-8")
-    head, begin, rest = page.partition(BEGIN)
+    head, begin, rest = path.read_text("utf-8").partition(BEGIN)
     _, end, tail = rest.partition(END)
     if not (begin and end):
-        raise SystemExit(f"{path}: no lines {BEGIN} and {END} to write between")
-    path.write_text(f"{head}{BEGIN}\n{text}{END}{tail}", "utf-8")
+        raise ValueError(f"{path}: no lines {BEGIN} and {END} to write between")
+    return head, tail
 
 
 def main() -> int:
@@ -465,9 +469,18 @@ def main() -> int:
     parser.add_argument("--json", action="store_true", help="print JSON")
     parser.add_argument("--write", type=Path, help="put the tables into this page")
     options = parser.parse_args()
+    if options.repeat < 1:
+        parser.error("--repeat takes a number from 1")
+    if options.write:
+        try:
+            split_at_markers(options.write)
+        except (OSError, ValueError) as error:
+            parser.error(str(error))
     report = run(options.family or names, options.repeat, options.time_limit, options.quick)
     if options.write:
-        write_between_markers(options.write, report.as_markdown(each=True))
+        head, tail = split_at_markers(options.write)
+        page = f"{head}{BEGIN}\n{report.as_markdown(each=True)}{END}{tail}"
+        write_atomically(options.write, page.encode())
     print(report.as_json() if options.json else report.as_markdown(options.each), end="")
     return 0 if report.good else 1
 
