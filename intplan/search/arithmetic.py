@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Sequence
 from fractions import Fraction
 from typing import NamedTuple
 
@@ -53,22 +53,23 @@ class Arithmetic:
 
     # ------------------------------------------------------------------ plans
 
-    def complete(self, x: np.ndarray) -> list[Number] | None:
+    def guess_plan(self, x: np.ndarray) -> list[Number] | None:
         """Return an exact plan near a point whose whole activities are (nearly) whole.
 
-        Divisible amounts are first guessed as the nearest fractions of small denominator; where
-        that breaks a rule, the problem that is left once the whole activities are fixed is
-        solved in rationals.  None if no divisible amounts fit.
+        Divisible amounts are guessed as whole numbers or fractions of small denominator; None
+        if the plan so guessed breaks a rule.
         """
-        problem = self.problem
         whole = np.rint(x)
         plan: list[Number] = [int(v) for v in whole.tolist()]
         if not self.divisible:
             return plan if self.fits(plan, whole) else None
         for j in self.divisible:
-            plan[j] = lowest(self._clipped(j, Fraction(x.item(j)).limit_denominator(GUESS)))
-        if self.fits(plan):
-            return plan
+            plan[j] = lowest(self._clipped(j, nearest_fraction(x.item(j))))
+        return plan if self.fits(plan) else None
+
+    def solve_divisible(self, x: np.ndarray) -> list[Number] | None:
+        """Return the best plan with the whole activities of a point, solved in rationals."""
+        plan: list[Number] = [int(v) for v in np.rint(x).tolist()]
         answer = solve_exactly(self._divisible_system(plan))
         if answer.status != "optimal":
             return None
@@ -227,13 +228,19 @@ class Arithmetic:
             total += d * limit
         return Fraction(total) / (unit << shift)
 
+    @staticmethod
     def guess_multipliers(
-        self, numbers: Iterable[int], values: Iterable[float]
-    ) -> dict[int, Fraction]:
-        """Return multipliers as the nearest fractions of small denominator."""
+        numbers: np.ndarray, values: np.ndarray
+    ) -> dict[int, Fraction] | None:
+        """Return multipliers as fractions over one denominator, None if none is small enough."""
+        guessed = common_denominator(values, MULTIPLIER_GUESS, 1e-11)
+        if guessed is None:
+            return None
+        integers, unit = guessed
         return {
-            int(i): Fraction(float(v)).limit_denominator(MULTIPLIER_GUESS)
-            for i, v in zip(numbers, values, strict=True)
+            i: Fraction(int(v), unit)
+            for i, v in zip(numbers.tolist(), integers.tolist(), strict=True)
+            if v
         }
 
     def solve_node(
@@ -288,6 +295,56 @@ class Arithmetic:
         if answer.value is not None:
             answer.value *= weight
         return answer
+
+
+def nearest_fraction(value: float) -> Number:
+    """Return the whole number a double nearly is, else a fraction of small denominator."""
+    slack = 1e-9 * (1.0 + abs(value))
+    fraction = simplest_fraction(value, slack, GUESS)
+    return Fraction(*fraction) if fraction else Fraction(value).limit_denominator(GUESS)
+
+
+def simplest_fraction(value: float, slack: float, largest: int) -> tuple[int, int] | None:
+    """Return the first convergent of a double's continued fraction within `slack` of it.
+
+    None if its denominator would pass `largest`.
+    """
+    before, over, below, under = 1, math.floor(value), 0, 1
+    rest = value - over
+    while abs(value - over / under) > slack:
+        if rest <= 0.0:
+            return None
+        rest = 1.0 / rest
+        whole = math.floor(rest)
+        rest -= whole
+        before, over = over, whole * over + before
+        below, under = under, whole * under + below
+        if under > largest:
+            return None
+    return over, under
+
+
+def common_denominator(
+    values: np.ndarray, largest: int, accuracy: float
+) -> tuple[np.ndarray, int] | None:
+    """Return integers and a denominator whose quotients are the values, as near as can be told.
+
+    Parameters
+    ----------
+    values : (k,) doubles
+    largest : the denominator's limit; None is returned where it would be passed
+    accuracy : how near a value must be to its fraction, next to its own size
+    """
+    unit = 1
+    for value in values.tolist():
+        scaled = value * unit
+        slack = accuracy * unit * (1.0 + abs(value))
+        if abs(scaled - round(scaled)) > slack:
+            fraction = simplest_fraction(scaled, slack, largest // unit)
+            if fraction is None:
+                return None
+            unit *= fraction[1]
+    return np.rint(values * unit), unit
 
 
 def _exact(limit: float) -> Number | None:

@@ -16,7 +16,7 @@ from intplan.search.evidence import LEAST, MOST, Proof
 from intplan.search.exact import ExactAnswer
 from intplan.search.node import Branch
 from intplan.search.tightening import Bounds, tighten_by_cost
-from intplan.sheet.problem import lowest
+from intplan.sheet.problem import Number, lowest
 
 FRACTION = 1e-6  # distance from a whole value that counts as fractional
 CHECK_DRIFT_AFTER = 30  # pivots
@@ -301,14 +301,14 @@ class NodeWork:
             return False
         found = False
         for point in context.rounder.round(self.dictionary.activities(), self.bounds):
-            plan = context.arithmetic.complete(point)
+            plan = context.arithmetic.guess_plan(point)
             found |= plan is not None and context.best.offer(plan)
         return found
 
     def _take_plan(self, proof: Proof) -> bool:
         """Take the plan at a point with whole values; tell whether it closed the node."""
         context = self.context
-        plan = context.arithmetic.complete(self.dictionary.activities())
+        plan = self._plan_here()
         if plan is None:
             return False
         context.best.offer(plan)
@@ -316,6 +316,25 @@ class NodeWork:
             self.close("plan", proof)
             return True
         return context.best.ties(proof.bound) and self._settle_tie(proof, "plan")
+
+    def _plan_here(self) -> list[Number] | None:
+        """Return the exact plan at a point with whole values, None if it is none after all.
+
+        Where the point itself is a hair off, the divisible activities are solved again with the
+        whole ones fixed, in doubles and, if need be, in rationals.
+        """
+        arithmetic, whole = self.context.arithmetic, self.context.problem.whole
+        x = self.dictionary.activities()
+        plan = arithmetic.guess_plan(x)
+        if plan is not None or whole.all():
+            return plan
+        fixed = self.dictionary.copy()
+        values = np.rint(x)
+        fixed.set_bounds(whole.nonzero()[0].tolist(), values, values)
+        if fixed.reoptimise() is not Status.OPTIMAL:
+            return None
+        plan = arithmetic.guess_plan(np.where(whole, values, fixed.activities()))
+        return plan if plan is not None else arithmetic.solve_divisible(x)
 
     def _pin(self, proof: Proof) -> Split | None:
         """Go on from a whole point whose bound is a hair below its plan, or that is none.
@@ -357,6 +376,8 @@ class NodeWork:
         if (context.rows.shift[proof.rows] < 0).any():
             return False
         multipliers = context.arithmetic.guess_multipliers(proof.rows, proof.multipliers)
+        if multipliers is None:
+            return False
         bound = context.arithmetic.exact_bound(
             1, multipliers, self.bounds.least, self.bounds.most
         )

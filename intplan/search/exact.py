@@ -14,6 +14,7 @@ R. G. Bland, New finite pivoting rules for the simplex method, Mathematics of Op
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
@@ -132,9 +133,11 @@ class _ExactDictionary:
 
     def values(self) -> list[Fraction]:
         """Return the values of the basic variables and, last, the cost."""
-        unit = Fraction(1, self.denominator)
-        moved = [(c, v) for c, v in enumerate(self.at) if v != 0]
-        return [sum((row[c] * v for c, v in moved), 0) * unit for row in self.table]
+        moved = [c for c, v in enumerate(self.at) if v != 0]
+        unit = math.lcm(*(self.at[c].denominator for c in moved))
+        amounts = np.array([int(self.at[c] * unit) for c in moved], object)
+        totals = self.table[:, moved] @ amounts if moved else [0] * len(self.table)
+        return [Fraction(total, unit * self.denominator) for total in totals]
 
     def point(self) -> list[Fraction]:
         point: list[Fraction] = [Fraction(0)] * self.columns

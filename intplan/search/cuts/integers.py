@@ -10,17 +10,17 @@ integer arithmetic.
 from __future__ import annotations
 
 import math
-from fractions import Fraction
 
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary
+from intplan.search.arithmetic import common_denominator
 from intplan.search.cuts.candidate import Candidate
 from intplan.search.cuts.gomory import AWAY, SPREAD, TINY, Rounding
 from intplan.search.tightening import Bounds
 
 DENOMINATOR = 50_000  # greatest common denominator of the multipliers
-NEAR = 1e-7  # how near a multiplier must be to its fraction, times the denominator
+NEAR = 1e-11  # how near a multiplier must be to its fraction
 LARGEST = float(1 << 62)
 EXACT = 1 << 53
 
@@ -44,7 +44,7 @@ def integer_gomory_cut(
     shifts = rounding.rows.shift[numbers]
     if (shifts < 0).any():
         return None
-    common = common_denominator(np.ldexp(entries[used], -shifts))
+    common = common_denominator(np.ldexp(entries[used], -shifts), DENOMINATOR, NEAR)
     if common is None:
         return None
     weights, unit = common
@@ -80,24 +80,6 @@ def integer_gomory_cut(
         (live, at_least, own_gamma * sides, whole_anchors),
         part * (unit - part), (whole_weights, unit, shifts),
     )  # fmt: skip
-
-
-def common_denominator(values: np.ndarray) -> tuple[np.ndarray, int] | None:
-    """Return integers and a denominator whose quotients are the values, as near as can be told.
-
-    None where the denominator would pass `DENOMINATOR`.
-    """
-    unit = 1
-    for value in values.tolist():
-        scaled = value * unit
-        if abs(scaled - round(scaled)) > NEAR:
-            fraction = Fraction(scaled).limit_denominator(DENOMINATOR // unit)
-            if abs(scaled - fraction) * fraction.denominator > NEAR:
-                return None
-            unit *= fraction.denominator
-            if unit > DENOMINATOR:
-                return None
-    return np.rint(values * unit), unit
 
 
 def _whole(values: np.ndarray) -> bool:
