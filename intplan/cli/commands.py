@@ -1,0 +1,223 @@
+"""The commands. Each reads words, asks the layers below, and says what came of it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from fractions import Fraction
+from typing import TYPE_CHECKING
+
+import click
+
+from intplan.cli.app import BAD_INPUT, UNFINISHED, Session, group
+from intplan.cli.options import limit_options, output_options
+
+if TYPE_CHECKING:
+    from intplan.planning import StandingPlan
+    from intplan.sheet import Sheet
+
+YES, NO = 0, 1
+STATUS_OF = {
+    "optimal": YES,
+    "within_gap": YES,
+    "infeasible": NO,
+    "unbounded": NO,
+    "unfinished": UNFINISHED,
+}
+
+
+@group.command("solve", short_help="Find the best whole-unit plan and prove it.")
+@click.argument("sheet_file", metavar="SHEET")
+@click.option("--save", "save_to", metavar="FILE", help="Keep the standing plan as JSON.")
+@click.option("--plan-to", metavar="FILE", help="Write the plan as CSV: activity,amount.")
+@limit_options
+@output_options
+@click.pass_obj
+def solve_command(
+    session: Session,
+    sheet_file: str,
+    save_to: str | None,
+    plan_to: str | None,
+    time_limit: float | None,
+    gap: Fraction,
+    node_limit: int | None,
+    as_json: bool,
+    quiet: bool,
+) -> int:
+    """Find the best whole-unit plan for SHEET, a TOML file, and prove that nothing beats it.
+
+    Exit status: 0 if the plan is proven best (or within --gap), 1 if there is no plan or the aim
+    has no limit, 3 if a limit or an interrupt ended the search.
+    """
+    from intplan.cli.targets import check_targets
+    from intplan.report.data import solve_data
+    from intplan.report.text import solve_text
+
+    console = session.console
+    console.quiet = quiet
+    check_targets([save_to, plan_to], [sheet_file])
+    sheet = _read_sheet(session, sheet_file)
+    standing = _search(session, sheet, time_limit, gap, node_limit)
+    data = solve_data(standing)
+    failure = _keep(session, standing, save_to, plan_to)
+    if failure is None:
+        console.answer(solve_text(standing), data)
+        return STATUS_OF[standing.outcome]
+    if not console.as_json:
+        console.answer(solve_text(standing), data)
+    console.error(*failure, more=data)
+    return BAD_INPUT
+
+
+@group.command("check", short_help="Hold a hand-made plan against the rules.")
+@click.argument("sheet_file", metavar="SHEET")
+@click.argument("plan_file", metavar="PLAN.csv")
+@output_options
+@click.pass_obj
+def check_command(
+    session: Session, sheet_file: str, plan_file: str, as_json: bool, quiet: bool
+) -> int:
+    """Hold PLAN.csv, with the columns activity,amount, against the rules of SHEET.
+
+    Amounts are decimals or p/q; an activity that is left out counts as 0. Exit status: 0 if the
+    plan meets every rule, 1 if it breaks one.
+    """
+    from intplan.planning.planfile import read_plan
+    from intplan.report.data import check_data
+    from intplan.report.text import check_text
+
+    session.console.quiet = quiet
+    sheet = _read_sheet(session, sheet_file)
+    plan = read_plan(plan_file, sheet)
+    session.console.notes(f"Note: {warning}." for warning in plan.warnings)
+    check = sheet.check(plan.amounts)
+    session.console.answer(
+        check_text(sheet, plan.amounts, check),
+        check_data(sheet, plan.amounts, check, plan.warnings),
+    )
+    return YES if check.good else NO
+
+
+@group.command("compare", short_help="Warm against cold node solves of one search.")
+@click.argument("sheet_file", metavar="SHEET")
+@limit_options
+@output_options
+@click.pass_obj
+def compare_command(
+    session: Session,
+    sheet_file: str,
+    time_limit: float | None,
+    gap: Fraction,
+    node_limit: int | None,
+    as_json: bool,
+    quiet: bool,
+) -> int:
+    """Solve SHEET, then solve each node of its search tree twice with the same rows: warm, from
+    its parent's basis, and cold, from nothing.
+
+    The limits are those of the search. Exit status: 0 if both agree at every node, 1 if they
+    differ, 3 if a limit or an interrupt ended the search.
+    """
+    from intplan.planning.compare import compare
+    from intplan.report.data import compare_data
+    from intplan.report.text import compare_text
+
+    session.console.quiet = quiet
+    sheet = _read_sheet(session, sheet_file)
+    standing = _search(session, sheet, time_limit, gap, node_limit)
+    comparison = compare(standing)
+    session.console.answer(compare_text(comparison, standing), compare_data(comparison, standing))
+    if not comparison.agree:
+        return NO
+    return UNFINISHED if standing.outcome == "unfinished" else YES
+
+
+@group.command("tree", short_help="Write the search tree for other programs.")
+@click.argument("standing_file", metavar="STANDING")
+@click.option(
+    "--to",
+    "target",
+    metavar="FILE",
+    required=True,
+    help="The file to write; it ends in .graphml, .dot or .json, which chooses the form.",
+)
+@output_options
+@click.pass_obj
+def tree_command(
+    session: Session, standing_file: str, target: str, as_json: bool, quiet: bool
+) -> int:
+    """Write the search tree of STANDING, a file that `solve --save` wrote, to a file.
+
+    GraphML and DOT hold a sentence and the numbers of every node; JSON holds its evidence too.
+    """
+    from intplan.cli.targets import check_targets
+    from intplan.planning import load_standing
+    from intplan.report.data import tree_data
+    from intplan.report.text import tree_text
+    from intplan.report.treefile import tree_writer, write_tree
+
+    session.console.quiet = quiet
+    tree_writer(target)
+    check_targets([target], [standing_file])
+    standing = load_standing(standing_file)
+    write_tree(standing, target)
+    session.console.answer(tree_text(standing, target), tree_data(standing, target))
+    return YES
+
+
+def _read_sheet(session: Session, path: str) -> Sheet:
+    """Read a sheet and pass its warnings on."""
+    from intplan.sheet import Sheet
+
+    sheet = Sheet.read(path)
+    session.console.notes(f"Note: {warning}." for warning in sheet.warnings)
+    return sheet
+
+
+def _search(
+    session: Session,
+    sheet: Sheet,
+    time_limit: float | None,
+    gap: Fraction,
+    node_limit: int | None,
+) -> StandingPlan:
+    """Solve a sheet, with a status sentence and an ear for interrupts."""
+    from intplan.planning import solve
+    from intplan.report.text import status_sentence
+
+    console = session.console
+    progress: Callable[..., None] | None = None
+    if console.shows_status():
+
+        def progress(value, bound):
+            console.status(status_sentence(sheet, value, bound))
+
+    with session.interrupts.searching() as stop:
+        standing = solve(
+            sheet,
+            time_limit=time_limit,
+            gap=gap,
+            node_limit=node_limit,
+            progress=progress,
+            stop=stop,
+        )
+    console.clear_status()
+    return standing
+
+
+def _keep(
+    session: Session, standing: StandingPlan, save_to: str | None, plan_to: str | None
+) -> tuple[str, str | None] | None:
+    """Write the files that were asked for; return message and place of what went wrong."""
+    from intplan.errors import IntplanError
+    from intplan.planning.planfile import write_plan
+
+    try:
+        if save_to is not None:
+            standing.save(save_to)
+        if plan_to is not None and standing.exact_plan is not None:
+            write_plan(plan_to, standing.sheet, standing.exact_plan)
+        elif plan_to is not None:
+            session.console.notes([f"Note: there is no plan, so {plan_to} was not written."])
+    except IntplanError as error:
+        return error.message, error.where
+    return None

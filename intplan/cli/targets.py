@@ -1,0 +1,49 @@
+"""Checks files to be written before the work starts, so that a long solve is never lost."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Sequence
+from pathlib import Path
+
+from intplan.errors import IntplanError
+
+
+def check_targets(targets: Sequence[str | None], sources: Sequence[str]) -> None:
+    """Make sure that files can be written and that none of them is one that is read.
+
+    Parameters
+    ----------
+    targets : the files to write, None for those that were not asked for
+    sources : the files that are read
+
+    Raises
+    ------
+    IntplanError
+        Naming the first target that cannot be written or would destroy another file of this run.
+    """
+    taken = {os.path.realpath(source): "is read by this command" for source in sources}
+    for target in targets:
+        if target is None:
+            continue
+        path = Path(os.path.realpath(target))
+        if problem := taken.get(str(path)) or _obstacle(path):
+            raise IntplanError(f"this file cannot be written: it {problem}", where=target)
+        taken[str(path)] = "is written twice"
+
+
+def _obstacle(path: Path) -> str | None:
+    """Say what keeps a file from being written, None if nothing does."""
+    folder = path.parent
+    if not folder.is_dir():
+        return f"lies in {folder}, which is no folder"
+    if path.is_dir():
+        return "is a folder"
+    if path.exists():
+        if not os.access(path, os.W_OK):
+            return "is write-protected"
+        if not path.is_file():
+            return None  # a device or a pipe takes what it is given
+    if not os.access(folder, os.W_OK | os.X_OK):
+        return f"lies in {folder}, in which you may not write"
+    return None
