@@ -329,9 +329,10 @@ class Report:
         names = ", ".join(f"{name} {number}" for name, number in versions().items())
         return (
             f"{names}; {os.cpu_count()} cores. Best of {self.repeat} runs each, turn about, after "
-            f"one warm run (from {LONG:.0f} s on, a single run). Time ratio is intplan's over the reference's, geometric mean over "
-            "the instances. Nodes and pivots are sums. Memory is the peak of a process that solves "
-            "the family, and of its imports alone."
+            f"one warm run (from {LONG:.0f} s on, a single run). Time ratio is intplan's over the "
+            "reference's, geometric mean over the instances; a ratio below 1 is faster. Nodes and "
+            "pivots are sums. Memory is the peak of a process that solves the family, and of its "
+            "imports alone."
         )
 
     def _family_table(self) -> str:
