@@ -217,15 +217,17 @@ def measure_memory(family: Family, time_limit: float) -> None:
 # ---------------------------------------------------------------------- warm against cold
 
 
-def measure_warm(family: Family, standing: intplan.StandingPlan) -> None:
+def measure_warm(family: Family, measured: Measured, standing: intplan.StandingPlan) -> None:
     """Solve each node of a standing plan warm and cold, and add the totals to the family's."""
-    from intplan.planning import compare
+    from intplan.planning.compare import compare
 
     comparison = compare(standing)
     family.warm_pivots += comparison.warm_pivots
     family.cold_pivots += comparison.cold_pivots
     family.warm_seconds += comparison.warm_seconds
     family.cold_seconds += comparison.cold_seconds
+    if not comparison.agree:
+        measured.verdict = "warm and cold DISAGREE"
 
 
 # ---------------------------------------------------------------------- one pivot
@@ -426,7 +428,7 @@ def run(names: list[str], repeat: int, time_limit: float, quick: bool) -> Report
             measured, standing = measure(case, repeat, time_limit)
             family.measured.append(measured)
             if measured.rules >= MANY_RULES and not quick:
-                measure_warm(family, standing)
+                measure_warm(family, measured, standing)
             status(f"{name}: {measured.name} {measured.ratio:.2f}")
         if not quick:
             measure_memory(family, time_limit)
