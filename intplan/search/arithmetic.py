@@ -15,7 +15,8 @@ from intplan.sheet.problem import ExactRow, Number, Problem, lowest
 
 SAFE = 2.0**52  # sums of integers below this are exact in doubles
 GUESS = 10**6  # greatest denominator guessed for a divisible amount
-MULTIPLIER_GUESS = 10**7  # greatest denominator guessed for a multiplier
+MULTIPLIER_GUESS = 10**7  # greatest denominator guessed for multipliers
+MULTIPLIER_ACCURACY = 1e-10
 
 
 class IntegerRow(NamedTuple):
@@ -233,7 +234,7 @@ class Arithmetic:
         numbers: np.ndarray, values: np.ndarray
     ) -> dict[int, Fraction] | None:
         """Return multipliers as fractions over one denominator, None if none is small enough."""
-        guessed = common_denominator(values, MULTIPLIER_GUESS, 1e-11)
+        guessed = common_denominator(values, MULTIPLIER_GUESS, MULTIPLIER_ACCURACY)
         if guessed is None:
             return None
         integers, unit = guessed

@@ -363,6 +363,7 @@ class NodeWork:
         )  # fmt: skip
         self.dictionary.pivots += old.pivots
         if self._reoptimise(math.inf) is Status.OPTIMAL:
+            self._refactor()
             proof = self._cost_proof()
             if self._take_plan(proof) or self._settle_tie(proof, "beaten"):
                 return None
