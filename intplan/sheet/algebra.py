@@ -309,6 +309,9 @@ class _Parser:
         if found is not None:
             return found
         self.check_signs(token)
+        after = self.tokens[self.at + 1]
+        if after.text == "[":
+            self.strange(after)
         message = unknown("name", token.text, self.index)
         if token.text.lower() in ("inf", "infinity", "nan"):
             message = f"{token.text} has no place in algebra; leave out a limit that is not there"
@@ -351,13 +354,9 @@ class _Parser:
         token = self.token
         if token.kind == "name":
             self.check_signs(token)
-        left = ")" if before.text == "(" else before.text
-        if len(left) + len(token.text) <= 40 and not (before.kind == token.kind == "number"):
-            self.fail(
-                f"an operator is missing; {left} times {token.text} is written"
-                f" {left}*{token.text}",
-                token,
-            )
+        if before.kind == "number" and token.text in self.index:
+            times = f"{before.text[:20]}*{token.text[:40]}"
+            self.fail(f"an operator is missing; a product is written {times}", token)
         self.fail("an operator is missing", token)
 
     def relation(self, before: Sequence[_Token]) -> _Token:
@@ -475,10 +474,11 @@ def write_sum(terms: Terms, names: Sequence[str], constant: Number = 0) -> str:
     """
     parts = []
     for j, c in terms:
-        size = "" if abs(c) == 1 else show(abs(c)) + "*"
-        parts.append(("- " if c < 0 else "+ ") + size + names[j])
+        size = -c if c < 0 else c
+        factor = "" if size == 1 else show(size) + "*"
+        parts.append(("- " if c < 0 else "+ ") + factor + names[j])
     if constant or not parts:
-        parts.append(("- " if constant < 0 else "+ ") + show(abs(constant)))
+        parts.append(("- " + show(-constant)) if constant < 0 else ("+ " + show(constant)))
     text = " ".join(parts)
     return text[2:] if text.startswith("+ ") else "-" + text[2:]
 
@@ -488,10 +488,10 @@ def write_rule(
 ) -> str:
     """Return algebra for a rule, every activity on the left and every number on the right."""
     body = write_sum(terms, names)
+    if least is not None and least == most:
+        return f"{body} = {show(most)}"
     if least is not None and most is not None:
-        return f"{body} = {show(most)}" if least == most else (
-            f"{show(least)} <= {body} <= {show(most)}"
-        )
+        return f"{show(least)} <= {body} <= {show(most)}"
     if least is not None:
         return f"{body} >= {show(least)}"
     return body if most is None else f"{body} <= {show(most)}"

@@ -113,7 +113,7 @@ def _entries(array: np.ndarray, place: Place) -> list[Number]:
     """Return the finite entries of a flat array exactly; `place` names one by its position."""
     kind = array.dtype.kind
     if kind in "bi" or (kind == "u" and array.dtype.itemsize < 8):
-        return array.astype(np.int64).tolist()
+        return _integers(array)
     if kind == "f":
         bad = np.flatnonzero(~np.isfinite(array))
         if bad.size:
@@ -122,8 +122,13 @@ def _entries(array: np.ndarray, place: Place) -> list[Number]:
         # Up to here every integer has a float of its own, so the shortest decimal is the value.
         exact_below = min(EXACT_INTEGERS, 1 << (np.finfo(array.dtype).nmant + 1))
         if (np.rint(array) == array).all() and (np.abs(array) <= exact_below).all():
-            return array.astype(np.int64).tolist()
+            return _integers(array)
     return _one_by_one(array, place)
+
+
+def _integers(array: np.ndarray) -> list[Number]:
+    found: list[Number] = array.astype(np.int64).tolist()
+    return found
 
 
 def _one_by_one(array: np.ndarray, place: Place) -> list[Number]:
@@ -170,9 +175,7 @@ def _terms(data: np.ndarray, at: np.ndarray, columns: np.ndarray, count: int) ->
     return [tuple(pairs[ends[i] : ends[i + 1]]) for i in range(count)]
 
 
-def _merged_terms(
-    data: np.ndarray, at: np.ndarray, columns: np.ndarray, count: int
-) -> list[Terms]:
+def _merged_terms(data: np.ndarray, at: np.ndarray, columns: np.ndarray, count: int) -> list[Terms]:
     """Group entries as `_terms` does, where some come more than once."""
     values = _entries(data, lambda k: f"rows[{at[k]}, {columns[k]}]")
     lines: list[dict[int, Number]] = [{} for _ in range(count)]
@@ -217,7 +220,8 @@ def _flags(whole: Any, size: int) -> list[bool]:
         raise SheetError(f"the shape is {array.shape}; expected ({size},) or one flag", "whole")
     if array.dtype.kind != "b" and not np.isin(array, (0, 1)).all():
         raise SheetError("expected true or false", "whole")
-    return np.broadcast_to(array.astype(bool), (size,)).tolist()
+    flags: list[bool] = np.broadcast_to(array.astype(bool), (size,)).tolist()
+    return flags
 
 
 def _names(names: Sequence[str] | None, size: int, what: str, letter: str) -> list[str]:

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import math
 import os
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING, Any, Literal
 
-from intplan.errors import SheetError
+from intplan.errors import SheetError, excerpt
 from intplan.sheet.algebra import Terms, write_rule, write_sum
 from intplan.sheet.numbers import Number, NumberError, check_spread, lowest, show
 
@@ -110,10 +110,9 @@ class Sheet:
     def __post_init__(self) -> None:
         if not self.activities:
             raise SheetError("an empty sheet: it has no activities")
-        for kind, items in (("activity", self.activities), ("rule", self.rules)):
-            names = {item.name for item in items}  # type: ignore[attr-defined]
-            if len(names) < len(items):
-                raise SheetError(f"two {kind} names are the same: {_repeated(items)}")
+        repeated = _repeated(self.activities) or _repeated(self.rules)
+        if repeated:
+            raise SheetError(f"the name {excerpt(repeated)} is declared twice")
 
     def __repr__(self) -> str:
         title = f"{self.title!r}, " if self.title else ""
@@ -326,14 +325,14 @@ def _check_soft(sheet: Sheet, aim_terms: Terms) -> None:
         raise SheetError(str(problem), place) from None
 
 
-def _repeated(items: Iterable[Any]) -> str:
-    """Return the first name that comes a second time."""
+def _repeated(items: Sequence[Activity] | Sequence[Rule]) -> str | None:
+    """Return the first name that comes a second time, None if there is none."""
     seen = set()
     for item in items:
         if item.name in seen:
-            return str(item.name)
+            return item.name
         seen.add(item.name)
-    return ""
+    return None
 
 
 def bends_of(sheet: Sheet) -> tuple[Bend, ...]:

@@ -187,7 +187,7 @@ def fit(value: Number) -> Number:
         return value
     if abs(numerator) > LARGEST * denominator:
         raise NumberError(too_large())
-    if numerator and abs(value) < SMALLEST:
+    if numerator and abs(numerator) * SMALLEST.denominator < denominator:
         raise NumberError(too_small())
     return short_enough(value)
 

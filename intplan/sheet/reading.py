@@ -115,6 +115,8 @@ def _cure(what: str, line: str) -> str | None:
         return f"the name {excerpt(name)} is declared twice" if name else None
     if what.startswith("Cannot declare"):
         return f"the table {excerpt(line.strip())} is declared twice"
+    if what == "Illegal character '\\n'":
+        return "a quote is not closed on this line"
     bracketed = _BRACKETED.match(line)
     if bracketed:
         return f'a name with brackets wants quotes: "{bracketed["name"]}" = ...'
@@ -198,6 +200,7 @@ def _number(value: object, key: str, where: str) -> Number | _Infinity:
             return exact_number(value)
     except NumberError as problem:
         text = excerpt(value, 24) if isinstance(value, str) else "an integer"
+        text = text.strip('"') if isinstance(value, DecimalText) else text
         raise SheetError(f"{key} = {text}: {problem}", where) from None
     raise SheetError(f"{key} must be a number, not {_kind(value)}", where)
 
