@@ -5,6 +5,8 @@ References
 E. Balas, Facets of the knapsack polytope, Mathematical Programming 8:146-164, 1975.
 H. Crowder, E. L. Johnson, M. Padberg, Solving large-scale zero-one linear programming problems,
 Operations Research 31:803-834, 1983.
+Z. Gu, G. L. Nemhauser, M. W. P. Savelsbergh, Lifted cover inequalities for 0-1 integer programs:
+computation, INFORMS J. Computing 10:427-437, 1998 (items at value 1 lifted down).
 E. Zemel, Easily computable facets of the knapsack polytope, Mathematics of Operations Research
 14:760-764, 1989 (lifting by the least weight for each left-hand value).
 """
@@ -12,6 +14,7 @@ E. Zemel, Easily computable facets of the knapsack polytope, Mathematics of Oper
 from __future__ import annotations
 
 import math
+from bisect import bisect_right
 from fractions import Fraction
 from typing import NamedTuple
 
@@ -22,6 +25,7 @@ from intplan.search.tightening import Bounds
 from intplan.sheet.problem import ExactRow, Number
 
 LARGEST = 1 << 52  # coefficients beyond this are left alone
+FULL = 1e-6  # distance from 1 at which an item counts as taken
 
 
 class Item(NamedTuple):
@@ -49,22 +53,54 @@ def cover_cut(
         return None
     items, capacity, others = knapsack
     values = {i.column: 1 - x.item(i.column) if i.flipped else x.item(i.column) for i in items}
-    cover = _minimal_cover(items, capacity, values)
-    if cover is None or sum(1 - values[i.column] for i in cover) > 1.5:
-        return None
-    lifted = _lift(cover, items, capacity, values)
-    coefficients = np.zeros(len(x))
-    least = 1 - len(cover)
+    best: Candidate | None = None
+    tried = set()
+    for by_weight in (True, False):
+        cover = _minimal_cover(items, capacity, values, by_weight)
+        if cover is None:
+            return None
+        full = sorted(
+            (i for i in cover if values[i.column] > 1 - FULL), key=lambda i: (i.weight, i.column)
+        )
+        few = full[: len(full) - max(0, 2 - (len(cover) - len(full)))]
+        for fixed in (few, []) if few else ([],):
+            key = (frozenset(i.column for i in cover), len(fixed))
+            if key in tried:
+                continue
+            tried.add(key)
+            inequality = _lift(
+                [i for i in cover if i not in fixed], fixed, items, capacity, values
+            )
+            if inequality is None:
+                continue
+            candidate = _candidate(number, limit, inequality, cover, others, len(x), bounds)
+            if candidate.measure(x) and (best is None or candidate.efficacy > best.efficacy):
+                best = candidate
+    return best
+
+
+def _candidate(
+    number: int,
+    limit: int,
+    inequality: tuple[list[tuple[Item, int]], int],
+    cover: list[Item],
+    others: np.ndarray,
+    columns: int,
+    bounds: Bounds,
+) -> Candidate:
+    """Write an inequality over items as a row over the activities."""
+    lifted, right = inequality
+    coefficients = np.zeros(columns)
+    least = -right
     for item, coefficient in lifted:
         if item.flipped:
             coefficients[item.column] = coefficient
             least += coefficient
         else:
             coefficients[item.column] = -coefficient
-    largest = max(coefficient for _, coefficient in lifted)
-    shift = largest.bit_length() - 1
+    shift = max(coefficient for _, coefficient in lifted).bit_length() - 1
     scale = 2.0**-shift
-    candidate = Candidate(
+    return Candidate(
         "cover", coefficients * scale, least * scale,
         {"row": number, "limit": limit, "cover": [i.column for i in cover],
          "lifted": [(i.column, c) for i, c in lifted],
@@ -73,7 +109,6 @@ def cover_cut(
         bool(bounds.leans[others & 1, others >> 1].any()),
         shift,
     )  # fmt: skip
-    return candidate if candidate.measure(x) else None
 
 
 def _values(numbers: np.ndarray, bounds: Bounds) -> np.ndarray:
@@ -114,12 +149,20 @@ def _knapsack(
 
 
 def _minimal_cover(
-    items: list[Item], capacity: Number, values: dict[int, float]
+    items: list[Item], capacity: Number, values: dict[int, float], by_weight: bool
 ) -> list[Item] | None:
-    """Return a minimal cover that is violated as much as greed finds it."""
+    """Return a minimal cover that is violated as much as greed finds it.
+
+    Items enter by their distance from 1, next to their weight or alone.
+    """
     cover: list[Item] = []
     weight = 0
-    for item in sorted(items, key=lambda i: ((1 - values[i.column]) / i.weight, i.column)):
+
+    def rank(item: Item) -> tuple[float, int, int]:
+        missing = 1 - values[item.column]
+        return (missing / item.weight if by_weight else missing, -item.weight, item.column)
+
+    for item in sorted(items, key=rank):
         if item.weight > capacity:
             continue
         cover.append(item)
@@ -136,33 +179,78 @@ def _minimal_cover(
 
 
 def _lift(
-    cover: list[Item], items: list[Item], capacity: Number, values: dict[int, float]
-) -> list[tuple[Item, int]]:
-    """Lift a minimal cover's inequality over the other items, the largest values first.
+    cover: list[Item],
+    fixed: list[Item],
+    items: list[Item],
+    capacity: Number,
+    values: dict[int, float],
+) -> tuple[list[tuple[Item, int]], int] | None:
+    """Lift the inequality of a cover over the other items.
 
-    ``lightest[v]`` is the least weight of items so far whose coefficients add up to at least v.
+    Parameters
+    ----------
+    cover : items of a minimal cover once those of `fixed` are taken
+    fixed : items of the cover at value 1, taken at first and lifted down
+    items : all items of the knapsack
+
+    Returns
+    -------
+    (item, coefficient) pairs and the right-hand side, or None if too little is left of the cover.
+    First items with a value are lifted up, then the fixed ones down, then the rest up; the least
+    weight for each left-hand value gives every coefficient.
     """
+    if len(cover) < 2:
+        return None
+    room: Number = capacity - sum(i.weight for i in fixed)
     right = len(cover) - 1
     lightest: list[Number] = [0]
     for weight in sorted(i.weight for i in cover):
         lightest.append(lightest[-1] + weight)
-    lightest = lightest[: right + 1]
     lifted = [(i, 1) for i in cover]
-    inside = {i.column for i in cover}
-    rest = [i for i in items if i.column not in inside]
-    for item in sorted(rest, key=lambda i: (-values[i.column], -i.weight, i.column)):
-        room = capacity - item.weight
-        if room < 0:
-            coefficient = right + 1
+    inside = {i.column for i in (*cover, *fixed)}
+    rest = sorted(
+        (i for i in items if i.column not in inside),
+        key=lambda i: (-values[i.column], -i.weight, i.column),
+    )
+    taken = [i for i in rest if values[i.column] > 1e-9]
+
+    def lift_up(item: Item) -> None:
+        if item.weight > room:
+            coefficient = right
         else:
-            reachable = max(v for v in range(right + 1) if lightest[v] <= room)
-            coefficient = right - reachable
-        if coefficient == 0:
-            continue
-        lifted.append((item, coefficient))
-        if room < 0:
-            continue
-        for v in range(right, 0, -1):
-            before = lightest[v - coefficient] if v >= coefficient else 0
-            lightest[v] = min(lightest[v], before + item.weight)
-    return lifted
+            coefficient = right - _greatest(lightest, room - item.weight)
+        if coefficient > 0:
+            lifted.append((item, coefficient))
+            _admit(lightest, item.weight, coefficient)
+
+    for item in taken:
+        lift_up(item)
+    for item in sorted(fixed, key=lambda i: (-i.weight, i.column)):
+        coefficient = _greatest(lightest, room + item.weight) - right
+        room += item.weight
+        if coefficient > 0:
+            right += coefficient
+            lifted.append((item, coefficient))
+            _admit(lightest, item.weight, coefficient)
+    for item in rest[len(taken) :]:
+        lift_up(item)
+    return lifted, right
+
+
+def _greatest(lightest: list[Number], room: Number) -> int:
+    """Return the greatest left-hand value whose least weight fits the room."""
+    return bisect_right(lightest, room) - 1
+
+
+def _admit(lightest: list[Number], weight: int, coefficient: int) -> None:
+    """Let one more item count in the least weights (non-decreasing in the value)."""
+    top = len(lightest) - 1
+    extended = [
+        lightest[v - coefficient] + weight if v >= coefficient else weight
+        for v in range(top + coefficient + 1)
+    ]
+    for v in range(1, top + 1):
+        lightest[v] = min(lightest[v], extended[v])
+    lightest.extend(extended[top + 1 :])
+    for v in range(len(lightest) - 2, 0, -1):
+        lightest[v] = min(lightest[v], lightest[v + 1])
