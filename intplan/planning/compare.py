@@ -3,6 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from fractions import Fraction
+from typing import TYPE_CHECKING
+
+from intplan.errors import IntplanError
+from intplan.planning.naming import ROOT_NAME, added_text, column_names
+
+if TYPE_CHECKING:
+    from intplan.planning.standing import StandingPlan
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,3 +70,42 @@ class Comparison:
             cold_seconds=sum(node.cold_seconds for node in nodes),
             agree=all(node.agree for node in nodes),
         )
+
+
+def compare(standing: StandingPlan) -> Comparison:
+    """Solve the nodes of a standing plan's tree again, warm and cold.
+
+    Raises
+    ------
+    IntplanError
+        If the aim has no limit: such a sheet has no bounds to compare.
+    """
+    from intplan.search.replay import replay
+
+    if standing.outcome == "unbounded":
+        raise IntplanError("the aim has no limit, so there are no bounds to compare", None)
+    problem, result = standing.sheet.problem(), standing.result
+    names = column_names(standing.sheet)
+
+    def in_aim_units(cost: float | None) -> float | None:
+        return None if cost is None else float(problem.aim_from_cost(Fraction(cost)))
+
+    nodes = []
+    for entry in replay(problem, result.tree, result.cuts):
+        node = result.tree.nodes[entry.node]
+        added = (added_text(a, names, result.cuts) for a in node["added"])
+        nodes.append(
+            NodeComparison(
+                node=entry.node,
+                depth=node["depth"],
+                warm_pivots=entry.warm_pivots,
+                cold_pivots=entry.cold_pivots,
+                warm_seconds=entry.warm_seconds,
+                cold_seconds=entry.cold_seconds,
+                warm_bound=in_aim_units(entry.warm_cost),
+                cold_bound=in_aim_units(entry.cold_cost),
+                agree=entry.agree,
+                name=", ".join(added) or ROOT_NAME,
+            )
+        )
+    return Comparison.of(tuple(sorted(nodes, key=lambda n: n.node)))
