@@ -106,6 +106,8 @@ def _guarded(arguments: Sequence[str], console: Console, interrupts: Interrupts)
         silence(sys.stdout)
         return 0
     except Exception as error:
+        if interrupts.count:  # libraries turn an interrupt of their loading into other errors
+            raise KeyboardInterrupt from error
         traceback.print_exc()
         console.error(
             f"a fault in intplan itself, not in your input: {type(error).__name__}: "

@@ -56,16 +56,17 @@ def solve_command(
     console.quiet = quiet
     check_targets([save_to, plan_to], [sheet_file])
     sheet = _read_sheet(session, sheet_file)
-    standing = _search(session, sheet, time_limit, gap, node_limit)
-    data = solve_data(standing)
-    failure = _keep(session, standing, save_to, plan_to)
-    if failure is None:
-        console.answer(solve_text(standing), data)
-        return STATUS_OF[standing.outcome]
-    if not console.as_json:
-        console.answer(solve_text(standing), data)
-    console.error(*failure, more=data)
-    return BAD_INPUT
+    with session.interrupts.softened() as stop:
+        standing = _search(session, sheet, time_limit, gap, node_limit, stop)
+        data = solve_data(standing)
+        failure = _keep(session, standing, save_to, plan_to)
+        if failure is None:
+            console.answer(solve_text(standing), data)
+            return STATUS_OF[standing.outcome]
+        if not console.as_json:
+            console.answer(solve_text(standing), data)
+        console.error(*failure, more=data)
+        return BAD_INPUT
 
 
 @group.command("check", short_help="Hold a hand-made plan against the rules.")
@@ -123,7 +124,8 @@ def compare_command(
 
     session.console.quiet = quiet
     sheet = _read_sheet(session, sheet_file)
-    standing = _search(session, sheet, time_limit, gap, node_limit)
+    with session.interrupts.softened() as stop:
+        standing = _search(session, sheet, time_limit, gap, node_limit, stop)
     comparison = compare(standing)
     session.console.answer(compare_text(comparison, standing), compare_data(comparison, standing))
     if not comparison.agree:
@@ -179,8 +181,9 @@ def _search(
     time_limit: float | None,
     gap: Fraction,
     node_limit: int | None,
+    stop: Callable[[], bool],
 ) -> StandingPlan:
-    """Solve a sheet, with a status sentence and an ear for interrupts."""
+    """Solve a sheet, with a status sentence where someone can see it."""
     from intplan.planning import solve
     from intplan.report.text import status_sentence
 
@@ -191,15 +194,14 @@ def _search(
         def progress(value, bound):
             console.status(status_sentence(sheet, value, bound))
 
-    with session.interrupts.searching() as stop:
-        standing = solve(
-            sheet,
-            time_limit=time_limit,
-            gap=gap,
-            node_limit=node_limit,
-            progress=progress,
-            stop=stop,
-        )
+    standing = solve(
+        sheet,
+        time_limit=time_limit,
+        gap=gap,
+        node_limit=node_limit,
+        progress=progress,
+        stop=stop,
+    )
     console.clear_status()
     return standing
 

@@ -1,4 +1,4 @@
-"""Interrupts: the first one asks a search for what it has, a second ends the program at once."""
+"""Interrupts: the first asks a search for what it has so far, a second ends the program at once."""
 
 from __future__ import annotations
 
@@ -17,9 +17,9 @@ ENDED_AT_ONCE = 130
 class Interrupts:
     """Handles SIGINT and SIGTERM while it is entered.
 
-    While a search runs, the first interrupt makes `stop` true, so that the best plan is still
-    told, and the second ends the process. At any other time an interrupt raises
-    KeyboardInterrupt, which unwinds what is under way and leaves no half-written file.
+    Inside `softened`, the first interrupt only makes `stop` true, so that the best plan is still
+    kept and told. Any other raises KeyboardInterrupt, which unwinds what is under way and leaves
+    no half-written file; should that be stuck, a third ends the process without ceremony.
 
     Attributes
     ----------
@@ -28,7 +28,7 @@ class Interrupts:
 
     def __init__(self) -> None:
         self.count = 0
-        self._searching = False
+        self._soft = False
         self._before: dict[signal.Signals, Any] = {}
 
     def __enter__(self) -> Interrupts:
@@ -43,13 +43,13 @@ class Interrupts:
             signal.signal(number, handler)
 
     @contextmanager
-    def searching(self) -> Iterator[Callable[[], bool]]:
-        """Let interrupts stop a search softly; gives the function that the search polls."""
-        self._searching = True
+    def softened(self) -> Iterator[Callable[[], bool]]:
+        """Let the first interrupt end a search softly; gives the function that it polls."""
+        self._soft = True
         try:
             yield self.stop
         finally:
-            self._searching = False
+            self._soft = False
 
     def stop(self) -> bool:
         """Tell whether an end was asked for."""
@@ -57,7 +57,7 @@ class Interrupts:
 
     def _handle(self, number: int, frame: FrameType | None) -> None:
         self.count += 1
-        if not self._searching:
-            raise KeyboardInterrupt
-        if self.count > 1:
+        if self.count > 2:
             os._exit(ENDED_AT_ONCE)
+        if self.count == 2 or not self._soft:
+            raise KeyboardInterrupt

@@ -52,31 +52,36 @@ def added_text(added: Added, names: Sequence[str], cuts: Sequence[Cut]) -> str:
 
 
 def cut_text(cut: Cut, names: Sequence[str]) -> str:
-    """Write a cut as algebra; the middle of a long one is left out and counted."""
+    """Write a cut as algebra with six digits a number; the middle of a long one is left out.
+
+    A cut whose factors are all negative is written with both sides' signs turned.
+    """
+    turn = -1.0 if all(factor < 0 for factor in cut.coefficients) else 1.0
     terms = [
-        _term(float(factor), names[column])
+        _term(turn * float(factor), names[column])
         for column, factor in zip(cut.columns, cut.coefficients, strict=True)
     ]
     if len(terms) > TERMS_SHOWN:
         left_out = len(terms) - TERMS_SHOWN + 1
         terms[TERMS_SHOWN - 2 : -1] = [f"+ ({left_out} more)"]
-    text = " ".join(terms).removeprefix("+ ") or "0"
-    text = "-" + text.removeprefix("- ") if text.startswith("- ") else text
-    if math.isfinite(cut.least):
-        if cut.least == cut.most:
-            return f"{text} = {number_text(cut.least)}"
-        text = (
-            f"{text} >= {number_text(cut.least)}"
-            if cut.most == math.inf
-            else (f"{number_text(cut.least)} <= {text}")
-        )
-    return f"{text} <= {number_text(cut.most)}" if math.isfinite(cut.most) else text
+    text = " ".join(terms) or "0"
+    text = "-" + text[2:] if text.startswith("- ") else text.removeprefix("+ ")
+    least, most = sorted((turn * cut.least, turn * cut.most))
+    if least == most:
+        return f"{text} = {_digits(least)}"
+    if math.isfinite(least) and math.isfinite(most):
+        return f"{_digits(least)} <= {text} <= {_digits(most)}"
+    return f"{text} <= {_digits(most)}" if math.isfinite(most) else f"{text} >= {_digits(least)}"
 
 
 def _term(factor: float, name: str) -> str:
     sign = "-" if factor < 0 else "+"
-    size = abs(factor)
-    return f"{sign} {name}" if size == 1 else f"{sign} {number_text(size)}*{name}"
+    size = _digits(abs(factor))
+    return f"{sign} {name}" if size == "1" else f"{sign} {size}*{name}"
+
+
+def _digits(value: float) -> str:
+    return f"{value:.6g}"
 
 
 def named_tree(sheet: Sheet, raw: nx.DiGraph, cuts: Sequence[Cut]) -> nx.DiGraph:
@@ -92,8 +97,8 @@ def named_tree(sheet: Sheet, raw: nx.DiGraph, cuts: Sequence[Cut]) -> nx.DiGraph
     -------
     networkx.DiGraph
         The same nodes and edges. Each node has `bound` (a number in units of the aim, None
-        where nothing finite is known), `depth`, `outcome`, `added` (a list of texts), `pivots`,
-        `seconds`, `start` and `evidence`.
+        where nothing finite is known or the sheet has no aim), `depth`, `outcome`, `added` (a
+        list of texts), `pivots`, `seconds`, `start` and `evidence`.
     """
     problem = sheet.problem()
     names = column_names(sheet)
@@ -104,7 +109,7 @@ def named_tree(sheet: Sheet, raw: nx.DiGraph, cuts: Sequence[Cut]) -> nx.DiGraph
             for key in ("depth", "outcome", "pivots", "seconds", "start", "evidence")
         }
         bound = raw_attributes["bound"]
-        finite = bound is not None and math.isfinite(bound)
+        finite = bool(problem.exact_cost) and bound is not None and math.isfinite(bound)
         attributes["bound"] = nearest(problem.aim_from_cost(Fraction(bound))) if finite else None
         attributes["added"] = [added_text(a, names, cuts) for a in raw_attributes["added"]]
         tree.add_node(node, **attributes)
@@ -113,5 +118,8 @@ def named_tree(sheet: Sheet, raw: nx.DiGraph, cuts: Sequence[Cut]) -> nx.DiGraph
 
 
 def node_name(attributes: dict[str, Any]) -> str:
-    """Name a node of a named tree by what it adds to its parent."""
-    return "; ".join(attributes["added"]) or ROOT_NAME
+    """Name a node of a named tree by the bounds it adds to its parent; cuts are counted."""
+    bounds = [text for text in attributes["added"] if not text.startswith("cut ")]
+    cuts = len(attributes["added"]) - len(bounds)
+    name = "; ".join(bounds) or ROOT_NAME
+    return f"{name}, with {cuts} {'cut' if cuts == 1 else 'cuts'}" if cuts else name

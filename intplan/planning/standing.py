@@ -205,7 +205,7 @@ def solve(
     ... ''')
     >>> standing = solve(sheet)
     >>> standing.outcome, standing.value, standing.plan
-    ('optimal', 47, {'chair': 4, 'table': 2})
+    ('optimal', 45, {'chair': 9, 'table': 0})
     """
     limits = _read_limits(time_limit, gap, node_limit)
     from intplan.search import branch_and_cut

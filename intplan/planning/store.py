@@ -15,7 +15,7 @@ import hashlib
 import json
 import math
 import os
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import fields
 from typing import TYPE_CHECKING, Any
 
@@ -245,7 +245,7 @@ def _read_amounts(value: Any, columns: int) -> list[Any]:
 
 def _check_result(result: SearchResult, problem: Problem) -> None:
     """Check that outcome, plan, value and bound can stand together."""
-    if result.outcome not in OUTCOMES or result.ended_by not in ENDINGS:
+    if not _is_among(result.outcome, OUTCOMES) or not _is_among(result.ended_by, ENDINGS):
         raise _Damage("its outcome is none that a search gives")
     if (result.ended_by is None) != (result.outcome != "unfinished"):
         raise _Damage("its outcome does not fit what ended the search")
@@ -278,8 +278,11 @@ def _read_cuts(value: Any, columns: int, decoder: Decoder) -> list[Any]:
         if not isinstance(record, dict) or set(record) != names:
             raise _Damage("a cut has other parts than a cut has")
         cut = Cut(**{name: decoder.decode(part) for name, part in record.items()})
-        if not isinstance(cut.kind, str) or len(cut.columns) != len(cut.coefficients):
+        parts = (cut.columns, cut.coefficients)
+        if not isinstance(cut.kind, str) or not all(isinstance(part, tuple) for part in parts):
             raise _Damage("a cut is no row")
+        if len(cut.columns) != len(cut.coefficients):
+            raise _Damage("a cut has not one coefficient an activity")
         if not all(type(column) is int and 0 <= column < columns for column in cut.columns):
             raise _Damage("a cut names an activity that does not exist")
         if not all(type(v) is float for v in (*cut.coefficients, cut.least, cut.most)):
@@ -333,8 +336,8 @@ def _read_node(
     bound = attributes["bound"]
     sound = (
         (bound is None or (isinstance(bound, float) and not math.isnan(bound)))
-        and attributes["outcome"] in NODE_OUTCOMES
-        and attributes["start"] in STARTS
+        and _is_among(attributes["outcome"], NODE_OUTCOMES)
+        and _is_among(attributes["start"], STARTS)
         and all(type(attributes[k]) is int and attributes[k] >= 0 for k in ("depth", "pivots"))
         and _is_duration(attributes["seconds"])
         and isinstance(attributes["evidence"], dict | None)
@@ -352,7 +355,7 @@ def _read_added(node: int, value: Any, columns: int, cuts: int, decoder: Decoder
         raise _Damage(f"node {node} adds no list of rows")
     rows = []
     for row in value:
-        if not isinstance(row, list) or len(row) != 3 or row[0] not in ends:
+        if not isinstance(row, list) or len(row) != 3 or not _is_among(row[0], tuple(ends)):
             raise _Damage(f"node {node} adds something that is no row")
         kind, index, number = row[0], row[1], decoder.decode(row[2])
         if type(index) is not int or not 0 <= index < ends[kind]:
@@ -361,6 +364,10 @@ def _read_added(node: int, value: Any, columns: int, cuts: int, decoder: Decoder
             raise _Damage(f"node {node} adds a row without a number")
         rows.append(Added(kind, index, number))
     return tuple(rows)
+
+
+def _is_among(value: Any, known: Sequence[str | None]) -> bool:
+    return (value is None or isinstance(value, str)) and value in known
 
 
 def _is_duration(value: Any) -> bool:

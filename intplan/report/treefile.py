@@ -32,12 +32,13 @@ import numpy as np
 from intplan.errors import IntplanError, printable
 from intplan.files import write_atomically
 from intplan.planning import StandingPlan
-from intplan.planning.naming import ROOT_NAME
-from intplan.report.numbers import bound_text, value_text
+from intplan.planning.naming import node_name
+from intplan.report.numbers import value_text
 from intplan.sheet import Sheet
 from intplan.sheet.numbers import fraction_text
 
 FORMAT = 1
+NOISE = 1e-6  # a smaller bound is called 0 in a sentence
 NUMBERS_AND_TEXT = ("bound", "depth", "outcome", "pivots", "seconds", "start")
 
 
@@ -123,19 +124,19 @@ def node_sentence(node: int, attributes: dict[str, Any], sheet: Sheet) -> str:
     attributes : as in `StandingPlan.tree`
     sheet : what was solved
     """
-    added = "; ".join(attributes["added"])
-    opening = f"Node {node}, {added or ROOT_NAME}: "
+    opening = f"Node {node}, {node_name(attributes)}: "
     bound = attributes["bound"]
-    exact = None if bound is None else Fraction(repr(bound))
-    limit = "" if exact is None else bound_text(sheet, exact)
-    passing = f"nothing here can pass {limit}" if limit else "no bound is known here"
-    plan = "a plan" if exact is None else f"a plan that comes to {value_text(sheet, exact)}"
+    # A sentence takes seven digits; the number itself stands beside it.
+    rounded = Fraction(f"{bound:.7g}" if bound and abs(bound) >= NOISE else 0)
+    limit = "" if bound is None else value_text(sheet, rounded)
+    passing = f"nothing here can pass {limit}, so " if limit else ""
+    plan = f"a plan that comes to {limit}" if limit else "a plan"
     said = {
-        "split": f"{passing}, so it was split.",
-        "beaten": f"{passing}, so it cannot beat the best plan.",
+        "split": f"{passing}it was split.",
+        "beaten": "nothing here beats the best plan.",
         "empty": "no plan meets all its rules.",
         "plan": f"{plan}.",
-        "waiting": f"{passing}; it was left waiting.",
+        "waiting": f"{passing.removesuffix('so ')}it was left waiting.",
     }
     return opening + said[attributes["outcome"]]
 
