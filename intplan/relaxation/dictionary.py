@@ -44,6 +44,7 @@ PIVOT = 1e-9  # smallest pivot of the ratio test
 SLACK = 1e-11  # added to reduced costs in the ratio test, so that near ties take the large pivot
 DRIFT = 1e-8  # residual of the original rows that calls for a refactorisation
 REFACTOR_AFTER = 150  # pivots
+CHECK_DRIFT_AFTER = 30  # pivots between two looks at the residual
 VALUE, ABOVE, BELOW = -3, -2, -1  # the set-apart columns
 MOVE = np.array([1.0, 1.0, -1.0])  # how they change when a basic value grows by one
 NORMS_FROM = 30  # rows from which steepest-edge pricing pays for its norms
@@ -88,7 +89,7 @@ class Dictionary:
         self.cost = cost
         self.columns = rows.columns
         self.pivots = 0
-        self.since_refactored = 0
+        self.since_refactored = self.drift_checked = 0
         self.free = 0
         self.failing_row = -1
 
@@ -253,14 +254,27 @@ class Dictionary:
         columns = ((self.nonbasic >= self.columns) & (self.reduced != 0)).nonzero()[0]
         return Multipliers(self.nonbasic[columns] - self.columns, self.reduced[columns])
 
-    def row_multipliers(self, row: int) -> Multipliers:
+    def cost_multipliers_after(self, row: int, column: int) -> Multipliers:
+        """Return the multipliers of the cost as they would be after a pivot."""
+        entries = self.entries[row]
+        reduced = self.reduced - entries * (self.reduced[column] / entries[column])
+        columns = ((self.nonbasic >= self.columns) & (reduced != 0)).nonzero()[0]
+        columns = columns[columns != column]
+        numbers, values = self.nonbasic[columns] - self.columns, reduced[columns]
+        if self.basic[row] >= self.columns:
+            numbers = np.append(numbers, self.basic[row] - self.columns)
+            values = np.append(values, self.reduced[column] / entries[column])
+        return Multipliers(numbers, values)
+
+    def row_multipliers(self, row: int, sign: float | None = None) -> Multipliers:
         """Return y for a dictionary row that no choice of bounds can satisfy.
 
-        With ``s`` = +1 if the basic variable lies below its least bound and -1 if above its
-        most, ``s * (x_basic - entries[row] @ x_nonbasic)`` is identically zero, yet positive
-        over the bounds; y holds its coefficients on the row values.
+        With `sign` +1 if the basic variable lies below its least bound and -1 if above its most
+        (by default as it does), ``sign * (x_basic - entries[row] @ x_nonbasic)`` is identically
+        zero, yet positive over the bounds; y holds its coefficients on the row values.
         """
-        sign = 1.0 if self.table[row, ABOVE] < self.table[row, BELOW] else -1.0
+        if sign is None:
+            sign = 1.0 if self.table[row, ABOVE] < self.table[row, BELOW] else -1.0
         entries = self.entries[row]
         columns = ((self.nonbasic >= self.columns) & (entries != 0)).nonzero()[0]
         numbers = self.nonbasic[columns] - self.columns
@@ -505,6 +519,13 @@ class Dictionary:
         residual = self.rows.matrix[held] @ values[: self.columns] - values[held + self.columns]
         return float(np.abs(residual).max())
 
+    def drifted(self) -> bool:
+        """Tell whether a refactorisation is due; looks every `CHECK_DRIFT_AFTER` pivots only."""
+        if self.since_refactored - self.drift_checked < CHECK_DRIFT_AFTER:
+            return False
+        self.drift_checked = self.since_refactored
+        return self.drift() > DRIFT
+
     def refactor(self) -> None:
         """Compute the table afresh from the rows by one dense solve with the basis.
 
@@ -534,4 +555,4 @@ class Dictionary:
         entries[-1] = product[-1]
         self._take_table(entries)
         self.evaluate()
-        self.since_refactored = 0
+        self.since_refactored = self.drift_checked = 0

@@ -15,7 +15,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from intplan.relaxation.dictionary import PIVOT, Dictionary, Status
+from intplan.relaxation.dictionary import PIVOT, Dictionary, Multipliers, Status
 
 RELIABLE = 4  # branchings observed on each side before an estimate is trusted
 CANDIDATES = 8  # most activities to try at a node
@@ -24,19 +24,25 @@ TRIAL_PIVOTS = 12  # most dual pivots of one trial
 SCORE_FLOOR = 1e-6
 
 
-class Trial(NamedTuple):
-    """A child solved for a few pivots: its dictionary (closed or not) and how that ended."""
+class Closed(NamedTuple):
+    """One side of a branching that is closed, and the multipliers that show it.
 
-    dictionary: Dictionary
-    status: Status
+    `side` is 0 for at most the floor of `value`, 1 for at least the next whole number; `weight`
+    is 1 if the cost takes part (beaten), 0 for a contradiction (empty).
+    """
+
+    column: int
+    side: int
+    value: float
+    weight: int
+    multipliers: Multipliers
 
 
 @dataclass
 class Choice:
-    """What to branch on: the activity, its value, and the trial children where made.
+    """What to branch on: the activity, its value, the rise expected on each side.
 
-    `closed` lists sides (0: at most the floor, 1: at least the ceiling) that a trial found empty
-    or beaten, with the trial that shows it.
+    `closed` lists sides that the trials found closed; `pivots` is what the trials took.
     """
 
     column: int
@@ -44,7 +50,7 @@ class Choice:
     down_gain: float
     up_gain: float
     pivots: int = 0
-    closed: list[tuple[int, int, float, Trial]] = field(default_factory=list)
+    closed: list[Closed] = field(default_factory=list)
 
 
 class PseudoCosts:
@@ -71,23 +77,58 @@ class PseudoCosts:
 
 def penalties(
     dictionary: Dictionary, rows: np.ndarray, fractions: np.ndarray
-) -> np.ndarray:
-    """Return the rise of the bound in the first dual pivot of each branch, (2, k).
+) -> tuple[np.ndarray, np.ndarray]:
+    """Return the rise of the bound in the first dual pivot of each branch, and its column.
 
     Parameters
     ----------
     rows : (k,) dictionary rows of the basic activities in question
     fractions : (k,) their distance above the floor
+
+    Returns
+    -------
+    gains, columns
+        (2, k) each, down branches first; infinite where no column can meet the branch.
     """
     entries = dictionary.entries[rows] * dictionary.side
-    with np.errstate(divide="ignore", invalid="ignore"):
-        ratios = np.abs(dictionary.reduced) / entries
-    up = np.where(entries > PIVOT, ratios, np.inf).min(axis=1, initial=np.inf)
-    down = np.where(entries < -PIVOT, -ratios, np.inf).min(axis=1, initial=np.inf)
-    gains = np.stack((down * fractions, up * (1.0 - fractions)))
+    ratios = np.abs(dictionary.reduced) / entries
+    ups = np.where(entries > PIVOT, ratios, np.inf)
+    downs = np.where(entries < -PIVOT, -ratios, np.inf)
+    columns = np.stack((downs.argmin(axis=1), ups.argmin(axis=1)))
+    places = np.arange(len(rows))
+    gains = np.stack(
+        (downs[places, columns[0]] * fractions, ups[places, columns[1]] * (1.0 - fractions))
+    )
     if dictionary.free:
         gains[:] = 0.0
-    return gains
+    return gains, columns
+
+
+def closed_by_penalty(
+    dictionary: Dictionary,
+    rows: np.ndarray,
+    gains: np.ndarray,
+    columns: np.ndarray,
+    spare: float,
+) -> list[Closed]:
+    """Return the branches that their first dual pivot closes already.
+
+    Parameters
+    ----------
+    rows, gains, columns : as of `penalties`
+    spare : a rise beyond this beats a child
+    """
+    closed = []
+    for side, i in np.argwhere(gains > spare).tolist():
+        row = rows.item(i)
+        column, value = dictionary.basic.item(row), dictionary.values.item(row)
+        if gains[side, i] == np.inf:
+            multipliers = dictionary.row_multipliers(row, 1.0 if side else -1.0)
+            closed.append(Closed(column, side, value, 0, multipliers))
+        else:
+            multipliers = dictionary.cost_multipliers_after(row, columns.item(side, i))
+            closed.append(Closed(column, side, value, 1, multipliers))
+    return closed
 
 
 def score(down: float, up: float) -> float:
@@ -113,29 +154,53 @@ def choose(
     columns = dictionary.basic[rows]
     values = dictionary.values[rows]
     fractions = values - np.floor(values)
-    first = penalties(dictionary, rows, fractions)
-    largest = max(cutoff - dictionary.value, 0.0) if cutoff < np.inf else np.inf
-    first = np.minimum(first, largest if largest < np.inf else 1e6 * (1 + abs(dictionary.value)))
-    gains = costs.estimate(columns, fractions, first)
+    first, entering = penalties(dictionary, rows, fractions)
+    spare = max(cutoff - dictionary.value, 0.0)
+    closed = closed_by_penalty(dictionary, rows, first, entering, spare)
+    ceiling = min(spare, 1e6 * (1.0 + abs(dictionary.value)))
+    gains = costs.estimate(columns, fractions, np.minimum(first, ceiling))
     scores = np.maximum(gains[0], SCORE_FLOOR) * np.maximum(gains[1], SCORE_FLOOR)
-    order = (-scores).argsort(kind="stable")[:CANDIDATES]
+    best = (-scores).argsort(kind="stable")[:CANDIDATES]
+    if closed:
+        i = best.item(0)
+        return Choice(
+            columns.item(i), values.item(i), gains.item(0, i), gains.item(1, i), 0, closed
+        )
+    return _try_candidates(dictionary, columns, values, gains, best, cutoff, ceiling, costs)
+
+
+def _try_candidates(
+    dictionary: Dictionary,
+    columns: np.ndarray,
+    values: np.ndarray,
+    gains: np.ndarray,
+    order: np.ndarray,
+    cutoff: float,
+    ceiling: float,
+    costs: PseudoCosts,
+) -> Choice:
+    """Go through candidates in order, solving the children of those not yet reliable."""
     best: Choice | None = None
     best_score, stale, spent = -1.0, 0, 0
-    closed: list[tuple[int, int, float, Trial]] = []
+    closed: list[Closed] = []
     for i in order:
         column, value = columns.item(i), values.item(i)
         gain = [gains.item(0, i), gains.item(1, i)]
         if costs.count[:, column].min() < RELIABLE:
+            fraction = value - np.floor(value)
             for side in (0, 1):
-                trial = try_child(dictionary, column, value, side, cutoff)
-                spent += trial.dictionary.pivots - dictionary.pivots
-                rise = trial.dictionary.value - dictionary.value
-                if trial.status in (Status.EMPTY, Status.BEATEN):
-                    closed.append((column, side, value, trial))
-                    gain[side] = max(rise, min(largest, 1e6 * (1 + abs(dictionary.value))))
+                child, status = try_child(dictionary, column, value, side, cutoff)
+                spent += child.pivots - dictionary.pivots
+                rise = max(child.value - dictionary.value, 0.0)
+                if status is Status.EMPTY:
+                    multipliers = child.row_multipliers(child.failing_row)
+                    closed.append(Closed(column, side, value, 0, multipliers))
+                    gain[side] = ceiling
+                elif status is Status.BEATEN:
+                    closed.append(Closed(column, side, value, 1, child.cost_multipliers()))
+                    gain[side] = max(rise, ceiling)
                 else:
-                    gain[side] = max(rise, 0.0)
-                    fraction = fractions.item(i)
+                    gain[side] = rise
                     costs.record(column, side, 1 - fraction if side else fraction, rise)
         total = score(*gain)
         if total > best_score:
@@ -152,8 +217,8 @@ def choose(
 
 def try_child(
     dictionary: Dictionary, column: int, value: float, side: int, cutoff: float
-) -> Trial:
-    """Solve one child of a branching for a few pivots."""
+) -> tuple[Dictionary, Status]:
+    """Solve one child of a branching for a few pivots; return its dictionary and how it ended."""
     child = dictionary.copy()
     place = child.place.item(column)
     least, most = child.basic_least.item(place), child.basic_most.item(place)
@@ -161,4 +226,4 @@ def try_child(
         child.set_bound(column, float(np.ceil(value)), most)
     else:
         child.set_bound(column, least, float(np.floor(value)))
-    return Trial(child, child.reoptimise(cutoff, TRIAL_PIVOTS))
+    return child, child.reoptimise(cutoff, TRIAL_PIVOTS)

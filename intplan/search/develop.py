@@ -8,7 +8,7 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from intplan.relaxation.dictionary import DRIFT, Dictionary, Multipliers, Status
+from intplan.relaxation.dictionary import Dictionary, Multipliers, Status
 from intplan.relaxation.start import cold_start
 from intplan.search import branching
 from intplan.search.context import Context
@@ -19,8 +19,7 @@ from intplan.search.tightening import Bounds, tighten_by_cost
 from intplan.sheet.problem import Number, lowest
 
 FRACTION = 1e-6  # distance from a whole value that counts as fractional
-CHECK_DRIFT_AFTER = 30  # pivots
-ATTEMPTS = 6  # times a node is solved again after its own tightenings
+ATTEMPTS = 12  # times a node is solved again after its own tightenings
 ROUND_ALWAYS = 64  # nodes at which rounding is tried; later at every eighth
 
 
@@ -153,11 +152,7 @@ class NodeWork:
         dictionary = self.dictionary
         try:
             status = dictionary.reoptimise(cutoff)
-            if (
-                status is Status.OPTIMAL
-                and dictionary.since_refactored > CHECK_DRIFT_AFTER
-                and dictionary.drift() > DRIFT
-            ):
+            if status is Status.OPTIMAL and dictionary.drifted():
                 dictionary.refactor()
                 status = dictionary.reoptimise(cutoff)
         except np.linalg.LinAlgError:
@@ -233,8 +228,7 @@ class NodeWork:
             {"by": "cost", "changes": changes, "closure": self._closure(proof), "leans": True,
              "target": context.best.threshold}
         )  # fmt: skip
-        if not self._spread([j for j, _, _ in changes]):
-            return True
+        self.dictionary.set_bounds([j for j, _, _ in changes], self.bounds.least, self.bounds.most)
         return self._outside()
 
     def _outside(self) -> bool:
@@ -242,16 +236,17 @@ class NodeWork:
         return bool(rooms.size and rooms.min() < -self.dictionary.tolerance)
 
     def _use_trials(self, choice: branching.Choice) -> bool:
-        """Take over what trial children showed; tell whether a bound was tightened."""
+        """Take over which sides are closed; tell whether a bound was tightened (or all closed)."""
         used = []
-        for column, side, value, trial in choice.closed:
-            closure = self._trial_closure(column, side, value, trial)
+        for closed in choice.closed:
+            closure = self._trial_closure(closed)
             if closure is None:
                 continue
+            column = closed.column
             change = (
-                (column, MOST, float(math.floor(value)))
-                if side
-                else (column, LEAST, float(math.ceil(value)))
+                (column, MOST, float(math.floor(closed.value)))
+                if closed.side
+                else (column, LEAST, float(math.ceil(closed.value)))
             )
             leans = closure["leans"] or closure["weight"] == 1
             self.steps.append(
@@ -259,37 +254,29 @@ class NodeWork:
             )
             self.bounds.set(*change, leans)
             used.append(column)
-        if used:
-            if (self.bounds.least[used] > self.bounds.most[used]).any():
+            if self.bounds.least[column] > self.bounds.most[column]:
                 self._finish(
                     "empty", math.inf,
-                    {"column": used[0], "leans": bool(self.bounds.leans[:, used[0]].any())},
+                    {"column": column, "leans": bool(self.bounds.leans[:, column].any())},
                 )  # fmt: skip
-            else:
-                self._spread(used)
+                return True
+        if used:
+            self._spread(used)
         return bool(used)
 
-    def _trial_closure(
-        self, column: int, side: int, value: float, trial: branching.Trial
-    ) -> dict[str, Any] | None:
-        """Return the record of a trial child that is closed, None if it is not proven."""
+    def _trial_closure(self, closed: branching.Closed) -> dict[str, Any] | None:
+        """Return the record of one closed side, None if it is not proven after all."""
         bounds, prover = self.bounds, self.context.prover
-        array = bounds.least if side else bounds.most
-        kept = array.item(column)
-        array[column] = math.ceil(value) if side else math.floor(value)
-        child = trial.dictionary
-        if trial.status is Status.EMPTY:
-            proof = prover.prove(
-                0, child.row_multipliers(child.failing_row), bounds.least, bounds.most
-            )
-            proven = proof.bound > 0
-        else:
-            proof = prover.prove(1, child.cost_multipliers(), bounds.least, bounds.most)
-            proven = self.context.best.beats(proof.bound)
+        array = bounds.least if closed.side else bounds.most
+        kept = array.item(closed.column)
+        value = closed.value
+        array[closed.column] = math.ceil(value) if closed.side else math.floor(value)
+        proof = prover.prove(closed.weight, closed.multipliers, bounds.least, bounds.most)
+        proven = self.context.best.beats(proof.bound) if closed.weight else proof.bound > 0
         closure = None
         if proven:
             closure = self.context.record.closure(proof, prover.used_bounds(proof), bounds)
-        array[column] = kept
+        array[closed.column] = kept
         return closure
 
     # ------------------------------------------------------------------ plans

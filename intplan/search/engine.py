@@ -150,7 +150,14 @@ class Search:
     # ------------------------------------------------------------------ the whole run
 
     def run(self) -> SearchResult:
-        """Search until nothing is left or a limit is reached."""
+        """Search until nothing is left or a limit is reached.
+
+        Divisions by zero are meant: a ratio over a zero entry is infinite.
+        """
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return self._run()
+
+    def _run(self) -> SearchResult:
         self.context.record.open(0, None, 0, ())
         self.numbered = 1
         root = RootWork(self.context)

@@ -100,7 +100,6 @@ class Rounder:
         """Return how many units some rows let each activity move as its cost asks, (columns,)."""
         moves = self.matrix[rows] * self.direction
         below, above = np.maximum(below[rows], 0.0), np.maximum(above[rows], 0.0)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            steps = np.where(moves > 0, below[:, None], above[:, None]) / np.abs(moves)
+        steps = np.where(moves > 0, below[:, None], above[:, None]) / np.abs(moves)
         steps[moves == 0] = np.inf
         return steps.min(axis=0, initial=np.inf)

@@ -21,7 +21,8 @@ from intplan.search.evidence import LEAST, MOST, Proof
 
 MARGIN = 1e-7  # share of a unit by which a rounded bound must be proven
 HUGE = 1e100  # stands for infinity where infinities would multiply zeros
-ROUNDS = 3  # rounds of propagation at a node
+ROUNDS = 2  # rounds of propagation at a node
+FIRST_ROUNDS = 12  # rounds at the root
 
 
 class Bounds:
@@ -94,7 +95,7 @@ class Propagator:
             the activities tightened here, and a row that cannot be met (None if there is none)
         """
         touched: set[int] = set()
-        for _ in range(ROUNDS if not first else 4 * ROUNDS):
+        for _ in range(FIRST_ROUNDS if first else ROUNDS):
             if first:
                 rows = np.arange(len(self.matrix))
             elif len(changed) == 1:
