@@ -41,6 +41,7 @@ class RootWork(NodeWork):
         )
         steps: list[dict[str, Any]] = []
         super().__init__(context, 0, -math.inf, None, bounds, steps)
+        self._knapsacks: set[int] | None = None
 
     def prepare(self) -> bool:
         """Tighten what the sheet states; False if that already shows that no plan exists.
@@ -157,11 +158,10 @@ class RootWork(NodeWork):
             if cut is None:
                 cut = gomory_cut(rounding, dictionary, row, x, bounds, leaning)
             candidates.append(cut)
-        for number, row in enumerate(context.problem.rows):
-            for limit in (0, 1):
-                candidates.append(
-                    cover_cut(number, row, limit, x, bounds, context.problem.whole)
-                )
+        whole = context.problem.whole
+        for number in self._tight_rules():
+            row = context.problem.rows[number]
+            candidates += [cover_cut(number, row, s, x, bounds, whole) for s in (0, 1)]
         chosen = choose([c for c in candidates if c is not None], CUTS_A_ROUND)
         if not chosen:
             return np.arange(0)
@@ -181,6 +181,20 @@ class RootWork(NodeWork):
             np.full(len(chosen), np.inf),
             np.array([c.shift for c in chosen]),
         )
+
+    def _tight_rules(self) -> list[int]:
+        """Return the rules that bind at the point and may have a cover cut."""
+        if self._knapsacks is None:
+            problem = self.context.problem
+            binary = problem.whole & (self.bounds.least == 0) & (self.bounds.most == 1)
+            self._knapsacks = {
+                i
+                for i, row in enumerate(problem.rows)
+                if len({abs(c) for j, c in zip(row.columns, row.coefficients, strict=True)
+                        if binary[j]}) > 1
+            }  # fmt: skip
+        numbers = self.dictionary.nonbasic - self.dictionary.columns
+        return [i for i in numbers.tolist() if i in self._knapsacks]
 
     def _rounding(self) -> Rounding:
         """Gather what mixed-integer rounding needs under the root's present bounds."""

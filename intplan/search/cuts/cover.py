@@ -73,6 +73,9 @@ def cover_cut(
             )
             if inequality is None:
                 continue
+            lifted, right = inequality
+            if sum(c * values[i.column] for i, c in lifted) <= right + FULL:
+                continue
             candidate = _candidate(number, limit, inequality, cover, others, len(x), bounds)
             if candidate.measure(x) and (best is None or candidate.efficacy > best.efficacy):
                 best = candidate
@@ -143,7 +146,10 @@ def _knapsack(
             return None
         others.append(2 * column + (weight < 0))
         capacity -= weight * Fraction(end) if not float(end).is_integer() else weight * int(end)
-    if len(items) < 2 or capacity < 0 or sum(i.weight for i in items) <= capacity:
+    weights = [i.weight for i in items]
+    if len(items) < 2 or min(weights) == max(weights):
+        return None  # a cover of equal weights says no more than the rule, its limit rounded
+    if capacity < 0 or sum(weights) <= capacity:
         return None
     return items, capacity, np.array(others, int)
 
