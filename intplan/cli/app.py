@@ -76,9 +76,6 @@ def run(arguments: Sequence[str]) -> int:
     except KeyboardInterrupt:
         console.error("interrupted before there was an answer", None)
         return UNFINISHED if interrupts.count < 2 else ENDED_AT_ONCE
-    except MemoryError:
-        console.error("memory ran out before there was an answer", None)
-        return UNFINISHED
 
 
 def _guarded(arguments: Sequence[str], console: Console, interrupts: Interrupts) -> int:
@@ -102,6 +99,9 @@ def _guarded(arguments: Sequence[str], console: Console, interrupts: Interrupts)
     except OutputError as error:
         console.error(f"the answer could not be written: {error}", "stdout")
         return BAD_INPUT
+    except MemoryError:
+        console.error("memory ran out before there was an answer", None)
+        return UNFINISHED
     except BrokenPipeError:
         silence(sys.stdout)
         return 0

@@ -116,9 +116,9 @@ def compare_command(
     its parent's basis, and cold, from nothing.
 
     The limits are those of the search. Exit status: 0 if both agree at every node, 1 if they
-    differ, 3 if a limit or an interrupt ended the search.
+    differ or the aim has no limit, 3 if a limit or an interrupt ended the search.
     """
-    from intplan.planning.compare import compare
+    from intplan.planning.compare import Comparison, compare
     from intplan.report.data import compare_data
     from intplan.report.text import compare_text
 
@@ -126,9 +126,10 @@ def compare_command(
     sheet = _read_sheet(session, sheet_file)
     with session.interrupts.softened() as stop:
         standing = _search(session, sheet, time_limit, gap, node_limit, stop)
-    comparison = compare(standing)
+    bounded = standing.outcome != "unbounded"
+    comparison = compare(standing) if bounded else Comparison.of(())
     session.console.answer(compare_text(comparison, standing), compare_data(comparison, standing))
-    if not comparison.agree:
+    if not (bounded and comparison.agree):
         return NO
     return UNFINISHED if standing.outcome == "unfinished" else YES
 

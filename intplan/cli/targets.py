@@ -27,6 +27,8 @@ def check_targets(targets: Sequence[str | None], sources: Sequence[str]) -> None
         if target is None:
             continue
         path = Path(os.path.realpath(target))
+        if target.startswith("-"):
+            raise IntplanError(f"this looks like an option; write ./{target} for a file", target)
         if problem := taken.get(str(path)) or _obstacle(path):
             raise IntplanError(f"this file cannot be written: it {problem}", where=target)
         taken[str(path)] = "is written twice"

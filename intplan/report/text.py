@@ -184,6 +184,9 @@ def broken_sentence(
 def compare_text(comparison: Comparison, standing: StandingPlan) -> str:
     """Return the report on warm against cold node solves."""
     nodes = comparison.nodes
+    if standing.outcome == "unbounded":
+        known = " ".join(verdict(standing)[:1])
+        return title_line(standing.sheet) + f"{known} So there are no bounds to compare."
     if not nodes:
         return title_line(standing.sheet) + (
             "The search needed no branches, so there is no node to solve from its parent's basis."
