@@ -97,7 +97,7 @@ ALL = {
 }
 
 
-def split_evenly(seed: int = 3, pieces: int = 40, kinds: int = 4) -> str:
+def split_evenly(seed: int = 3, pieces: int = 40, kinds: int = 6) -> str:
     """Return a sheet that shares pieces out evenly in several measures at once.
 
     Its relaxation is worth nothing, so that the search must branch for very long (the form of
