@@ -197,6 +197,14 @@ def test_text_from_a_sheet_cannot_reach_the_terminal():
     assert r"\x1b[31mred\u202e" in text and r"line\nbreak" in text
 
 
+def test_many_exact_rules_are_counted():
+    rules = "\n".join(f'r{k} = "a = 3"' for k in range(6))
+    text = report(f"[activities]\na = {{most=5}}\n[rules]\n{rules}\ntop = 'a <= 3'")
+    assert (
+        "Rules at their limit\n  top  3  at most 3\n  (6 rules of an exact amount, all met)" in text
+    )
+
+
 def test_many_rules_with_room_are_counted():
     rules = "\n".join(f'r{k} = "a <= {20 + k}"' for k in range(25))
     assert "25 rules have room to spare." in report(

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import os
 from collections.abc import Sequence
-from pathlib import Path
 
 from intplan.errors import IntplanError
 
@@ -26,26 +25,28 @@ def check_targets(targets: Sequence[str | None], sources: Sequence[str]) -> None
     for target in targets:
         if target is None:
             continue
-        path = Path(os.path.realpath(target))
+        path = os.path.realpath(target)
         if target.startswith("-"):
             raise IntplanError(f"this looks like an option; write ./{target} for a file", target)
-        if problem := taken.get(str(path)) or _obstacle(path):
+        if problem := taken.get(path) or _obstacle(path):
             raise IntplanError(f"this file cannot be written: it {problem}", where=target)
-        taken[str(path)] = "is written twice"
+        taken[path] = "is written twice"
 
 
-def _obstacle(path: Path) -> str | None:
+def _obstacle(path: str) -> str | None:
     """Say what keeps a file from being written, None if nothing does."""
-    folder = path.parent
-    if not folder.is_dir():
+    folder = os.path.dirname(path)
+    if not os.path.isdir(folder):
         return f"lies in {folder}, which is no folder"
-    if path.is_dir():
+    if not os.access(folder, os.X_OK):
+        return f"lies in {folder}, which you may not enter"
+    if os.path.isdir(path):
         return "is a folder"
-    if path.exists():
+    if os.path.exists(path):
         if not os.access(path, os.W_OK):
             return "is write-protected"
-        if not path.is_file():
+        if not os.path.isfile(path):
             return None  # a device or a pipe takes what it is given
-    if not os.access(folder, os.W_OK | os.X_OK):
+    if not os.access(folder, os.W_OK):
         return f"lies in {folder}, in which you may not write"
     return None

@@ -20,6 +20,7 @@ CAUTION = (
     "practice decide."
 )
 RULES_WITH_ROOM = 20  # more of them than this are counted, not listed
+EXACT_RULES = 5  # the same for rules that are met exactly, as they must be
 NODES_SHOWN = 15  # rows of the table of a comparison
 ENDED = {
     "time": "The time limit came before the proof was complete.",
@@ -270,8 +271,12 @@ def plan_table(sheet: Sheet, amounts: Sequence[Number]) -> str:
 
 
 def rule_tables(sheet: Sheet, check: CheckResult) -> list[str]:
-    """Return the rules at their limit, bent or broken, and those with room, as two tables."""
+    """Return the rules at their limit, bent or broken, and those with room, as two tables.
+
+    What a rule says exactly, it is always at: such rules are counted where they are many.
+    """
     tight: list[list[str]] = []
+    exact: list[list[str]] = []
     roomy: list[list[str]] = []
     for rule, state in zip(sheet.rules, check.rules, strict=True):
         if state.spare is None:
@@ -280,11 +285,18 @@ def rule_tables(sheet: Sheet, check: CheckResult) -> list[str]:
         if state.spare > 0:
             roomy.append([*row, f"{readable(state.spare)} to spare", printable(rule.note)])
         else:
-            tight.append([*row, _passing(sheet, rule, state), printable(rule.note)])
+            met = state.spare == 0 and rule.least == rule.most
+            row += [_passing(sheet, rule, state), printable(rule.note)]
+            (exact if met else tight).append(row)
+    if len(exact) <= EXACT_RULES:
+        tight, exact = tight + exact, []
     blocks = []
-    if tight:
+    if tight or exact:
         heading = "Rules at their limit" if check.good else "Rules at or past their limit"
-        blocks.append(f"{heading}\n" + table(tight, right={1}))
+        lines = [heading, *([table(tight, right={1})] if tight else [])]
+        if exact:
+            lines.append(f"  ({_count(len(exact), 'rule')} of an exact amount, all met)")
+        blocks.append("\n".join(lines))
     if len(roomy) > RULES_WITH_ROOM:
         blocks.append(f"{len(roomy)} rules have room to spare.")
     elif roomy:
