@@ -592,7 +592,8 @@ def implied(
 
     Multiples of both, at least 0, are subtracted from the stored row; what is left must hold over
     the box.  For the first the powers of two next to ratios of coefficients are tried, and the
-    ratio of the largest itself.  The second is the sum of the rows that a cut in doubles was raised by to be safe.
+    ratio of the largest itself.  The second is the sum of the rows that a cut in doubles was
+    raised by to be safe.
     """
     own = coefficients_of(stored)
     if stored.least is None or stored.most is not None:
@@ -679,9 +680,8 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
         for j, a in coefficients_of(row).items():
             own[j] = own.get(j, 0) - y * a
         distances.append(row_distance(checker, index, row, y, side))
-    anchors = {
-        column: (side, value) for column, side, value in reversed(cut_premises(checker.cuts[number]))
-    }
+    premises = reversed(cut_premises(checker.cuts[number]))
+    anchors = {column: (side, value) for column, side, value in premises}
     for j, a in own.items():
         if a:
             distances.append(column_distance(checker, j, Fraction(a), anchors, where))
@@ -814,12 +814,11 @@ def verify(problem: Problem, result: Any, gap: Number = 0) -> Summary:
     if result.bound is not None:
         cost = (Fraction(result.bound) - problem.aim_constant) * Fraction(problem.cost_factor)
         return Checker(problem, result.tree, result.cuts, cost).walk()
-    if result.outcome == "unfinished":
-        return Checker(problem, result.tree, result.cuts, -math.inf).walk()
+    claim = -math.inf if result.outcome == "unfinished" else None
     try:
-        return Checker(problem, result.tree, result.cuts, None).walk()
-    except Refused:  # an aim without a limit, had there been a plan: the tree looked for any
-        return Checker(drawn_home(problem), result.tree, result.cuts, None).walk()
+        return Checker(problem, result.tree, result.cuts, claim).walk()
+    except Refused:  # the aim has no limit if there is a plan, and the tree looks for any
+        return Checker(drawn_home(problem), result.tree, result.cuts, claim).walk()
 
 
 def walk_for_any(problem: Problem, result: Any) -> Summary:
