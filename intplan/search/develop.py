@@ -23,6 +23,19 @@ ATTEMPTS = 12  # times a node is solved again after its own tightenings
 ROUND_ALWAYS = 64  # nodes at which rounding is tried; later at every eighth
 
 
+class NoLimit(Exception):
+    """Raised when exact arithmetic finds that the aim improves along a direction for ever.
+
+    Attributes
+    ----------
+    direction : one exact number a column
+    """
+
+    def __init__(self, direction: list[Fraction]) -> None:
+        super().__init__("the aim has no limit")
+        self.direction = direction
+
+
 class Split(NamedTuple):
     """The activity to branch on at a value that is not whole, and what each side may gain."""
 
@@ -391,7 +404,7 @@ class NodeWork:
             closure = context.record.exact_closure(0, answer.multipliers, proven, bounds)
             return self._finish("empty", math.inf, closure)
         if answer.value is None:
-            raise AssertionError("a node has a limit wherever its root has")
+            raise NoLimit(answer.point)
         return self._exact_optimum(answer, answer.value)
 
     def _exact_optimum(self, answer: ExactAnswer, value: Fraction) -> Split | None:

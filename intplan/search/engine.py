@@ -30,7 +30,7 @@ from intplan.relaxation.start import NoDualBasis
 from intplan.search.arithmetic import Arithmetic
 from intplan.search.branching import PseudoCosts
 from intplan.search.context import Context
-from intplan.search.develop import NodeWork, Split
+from intplan.search.develop import NodeWork, NoLimit, Split
 from intplan.search.evidence import LEAST, MOST, Prover
 from intplan.search.exact import Stopped
 from intplan.search.incumbent import Incumbent
@@ -44,6 +44,7 @@ from intplan.search.tightening import Propagator
 from intplan.sheet.problem import ExactRow, Number, Problem
 
 RANGE = 1e9  # a whole activity without a bound is not branched on past this
+EXACT = 2.0**52  # nor any past this, where doubles no longer tell whole numbers apart
 DIVE = 40  # levels a dive may go beyond twice the number of activities
 SHELF = 96 << 20  # bytes of tables kept for waiting nodes
 
@@ -164,13 +165,15 @@ class Search:
         try:
             try:
                 open_root = root.prepare()
-            except NoDualBasis as found:
-                ray = self._exact_ray(root, found)
+            except NoDualBasis:
+                ray = self._exact_ray(root)
                 if ray is not None:
                     return self._unbounded(ray)
                 open_root = True
             if open_root:
                 self._explore(self._solve_root(root))
+        except NoLimit as found:
+            return self._unbounded(_whole_direction(found.direction))
         except Stopped:
             self.ended_by = self.limits.reached(self.context.nodes) or "interrupt"
         return self._result()
@@ -234,7 +237,7 @@ class Search:
         unlimited = not (
             math.isfinite(work.bounds.least[column]) and math.isfinite(work.bounds.most[column])
         )
-        if unlimited and abs(value) > RANGE:
+        if (unlimited and abs(value) > RANGE) or abs(value) > EXACT:
             self.open_bound = min(self.open_bound, work.bound)
             self.tree.nodes[work.number]["outcome"] = "waiting"
             return None
@@ -270,7 +273,7 @@ class Search:
 
     # ------------------------------------------------------------------ aims without a limit
 
-    def _exact_ray(self, root: RootWork, found: NoDualBasis) -> list[int] | None:
+    def _exact_ray(self, root: RootWork) -> list[int] | None:
         """Confirm a direction of improvement in rationals; None (and a start) if there is none."""
         context = self.context
         answer = context.arithmetic.solve_node(
@@ -278,8 +281,7 @@ class Search:
             self.limits.out_of_time,
         )  # fmt: skip
         if answer.status == "unbounded":
-            scale = math.lcm(*(x.denominator for x in answer.point))
-            return [int(x * scale) for x in answer.point]
+            return _whole_direction(answer.point)
         root.start_from_basis(answer.basis)
         return None
 
@@ -311,15 +313,13 @@ class Search:
         bounds = [self.open_bound, *(node.bound for node in self.heap[:1])]
         if self._current is not None:
             bounds.append(self._current.bound)
-        if self.best.gap and self.best.value is not None:
-            bounds += [
-                entry["bound"] for _, entry in self.tree.nodes(data=True)
-                if entry["outcome"] in ("beaten", "plan") and entry["bound"] is not None
-            ]  # fmt: skip
         lowest = min(bounds)
         if lowest == -math.inf:
             return None
         value = self.best.value
+        if value is not None and self.best.least_target < value - self.best.step:
+            # a gap: whatever costs more than the least target may have been left out
+            lowest = min(lowest, self.best.next_cost)
         if lowest == math.inf:
             return value
         bound = self.best.rounded_up(lowest)
@@ -343,6 +343,12 @@ class Search:
             ray=None, tree=self.tree, cuts=context.record.cuts, nodes=context.nodes,
             pivots=context.pivots, seconds=self.limits.seconds(),
         )  # fmt: skip
+
+
+def _whole_direction(direction: list[Fraction]) -> list[int]:
+    """Return a direction in whole numbers."""
+    scale = math.lcm(*(x.denominator for x in direction))
+    return [int(x * scale) for x in direction]
 
 
 def _in_doubles(row: ExactRow) -> bool:

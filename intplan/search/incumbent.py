@@ -17,6 +17,8 @@ class Incumbent:
     target : a plan worth finding costs at most this (exact); a node whose bound passes it is
         beaten.  With an aim of whole activities only, one step of the aim below `value`.
     threshold : a double that is at least `target`
+    least_target : the least target so far; no node was closed, nor any part of one cut away, but
+        for costs above it
     cutoff : where the dual simplex method stops; so far past the target that the safe bound
         passes it as well
     """
@@ -28,6 +30,7 @@ class Incumbent:
         self.plan: list[Number] | None = None
         self.value: Fraction | None = None
         self.target: Fraction | None = None
+        self.least_target: Fraction | None = None
         self.threshold = math.inf
         self.cutoff = math.inf
 
@@ -42,6 +45,8 @@ class Incumbent:
             aim = abs(Fraction(self.problem.aim_from_cost(value)))
             allowance = aim * self.gap / 100 * abs(self.problem.cost_factor)
         self.target = value - max(self.step, allowance)
+        if self.least_target is None or self.target < self.least_target:
+            self.least_target = self.target
         size = 1.0 + abs(float(value))
         self.threshold = math.nextafter(float(self.target), math.inf)
         margin = max(1e-11 * size, 1e-6 * float(self.step))
@@ -65,7 +70,15 @@ class Incumbent:
             return False
         return bound > self.target or (not self.step and bound >= self.target)
 
-    def rounded_up(self, bound: float) -> Fraction:
+    @property
+    def next_cost(self) -> Fraction:
+        """The least cost above every target so far: all below it was searched."""
+        assert self.least_target is not None
+        if not self.step:
+            return self.least_target
+        return (math.floor(self.least_target / self.step) + 1) * self.step
+
+    def rounded_up(self, bound: float | Fraction) -> Fraction:
         """Return a bound in the engine's cost, lifted to the next cost a plan can have."""
         exact = Fraction(bound)
         return math.ceil(exact / self.step) * self.step if self.step else exact

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from fractions import Fraction
 from time import perf_counter
 
 from intplan.sheet.problem import Number

@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import numpy as np
-
 from intplan.relaxation.dictionary import Dictionary
 from intplan.search.evidence import LEAST
 from intplan.search.result import Added

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary, Multipliers
-from intplan.relaxation.start import NoDualBasis, cold_start
+from intplan.relaxation.start import cold_start
 from intplan.search.context import Context
 from intplan.search.cuts.candidate import Candidate, choose
 from intplan.search.cuts.cover import cover_cut
@@ -19,14 +19,14 @@ from intplan.search.develop import NodeWork, Split
 from intplan.search.evidence import Proof
 from intplan.search.result import Added, Cut
 from intplan.search.tightening import Bounds
-from intplan.sheet.problem import ExactRow
-
+from intplan.sheet.problem import ExactRow, Problem
 
 CUT_ROUNDS = 12
 GOMORY_ROWS = 30  # dictionary rows tried in a round
 CUTS_A_ROUND = 20
 STALL = 0.02  # a round that adds less than this share of the gain so far is a stalled one
 PATIENCE = 2  # stalled rounds in a row that end the cutting
+LARGE = 2.0**53  # whole numbers beyond this may be rounded as doubles
 SLACK_CUT = 1e-6  # room at which a cut no longer binds
 
 
@@ -36,9 +36,7 @@ class RootWork(NodeWork):
     def __init__(self, context: Context) -> None:
         problem = context.problem
         columns = len(problem.cost)
-        bounds = Bounds(
-            problem.least.copy(), problem.most.copy(), np.zeros((2, columns), bool)
-        )
+        bounds = Bounds(*_outward(problem), np.zeros((2, columns), bool))
         steps: list[dict[str, Any]] = []
         super().__init__(context, 0, -math.inf, None, bounds, steps)
         self._knapsacks: set[int] | None = None
@@ -282,3 +280,15 @@ class RootWork(NodeWork):
                 self._finish("empty", math.inf, {"column": j, "leans": False})
                 return False
         return True
+
+
+def _outward(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
+    """Return the bounds in doubles, those of large whole numbers moved outward where rounded."""
+    least, most = problem.least.copy(), problem.most.copy()
+    for j in (np.maximum(np.abs(least), np.abs(most)) > LARGE).nonzero()[0].tolist():
+        low, high = problem.exact_least[j], problem.exact_most[j]
+        if low is not None and Fraction(least.item(j)) > low:
+            least[j] = np.nextafter(least[j], -np.inf)
+        if high is not None and Fraction(most.item(j)) < high:
+            most[j] = np.nextafter(most[j], np.inf)
+    return least, most

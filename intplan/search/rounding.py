@@ -52,7 +52,7 @@ class Rounder:
         x : (columns,) an optimal point of the relaxation
         bounds : the bounds to keep to
         """
-        if not self.all_whole:
+        if not self.all_whole or not len(x):
             return []
         nearest = np.rint(x)
         close = np.abs(x - nearest) < 1e-6

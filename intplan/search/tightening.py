@@ -21,6 +21,7 @@ from intplan.search.evidence import LEAST, MOST, Proof
 
 MARGIN = 1e-7  # share of a unit by which a rounded bound must be proven
 HUGE = 1e100  # stands for infinity where infinities would multiply zeros
+EXACT = 2.0**52  # whole bounds beyond this are left alone
 ROUNDS = 2  # rounds of propagation at a node
 FIRST_ROUNDS = 12  # rounds at the root
 
@@ -34,7 +35,7 @@ class Bounds:
     leans : (2, columns) bool, by side
     """
 
-    __slots__ = ("least", "leans", "most")
+    __slots__ = ("leans", "least", "most")
 
     def __init__(self, least: np.ndarray, most: np.ndarray, leans: np.ndarray) -> None:
         self.least = least
@@ -72,6 +73,7 @@ class Propagator:
         self.positive = np.maximum(matrix, 0.0)
         self.negative = np.minimum(matrix, 0.0)
         self.sizes = np.abs(matrix)
+        self.rounding = (matrix.shape[1] + 4) * 2.0**-52
         self.row_least = row_least
         self.row_most = row_most
         self.whole = whole
@@ -115,29 +117,41 @@ class Propagator:
     def _round(
         self, bounds: Bounds, rows: np.ndarray, log: list[dict], divisible: bool
     ) -> tuple[list[int], int | None]:
-        least = np.maximum(bounds.least, -HUGE)
-        most = np.minimum(bounds.most, HUGE)
+        least, most = bounds.least, bounds.most
         positive, negative = self.positive[rows], self.negative[rows]
-        lowest = positive @ least + negative @ most
-        highest = positive @ most + negative @ least
+        low_open, high_open = np.isinf(least), np.isinf(most)
+        if low_open.any() or high_open.any():
+            least = np.where(low_open, 0.0, least)
+            most = np.where(high_open, 0.0, most)
+            unmet_low = ((positive > 0) & low_open | (negative < 0) & high_open).any(axis=1)
+            unmet_high = ((positive > 0) & high_open | (negative < 0) & low_open).any(axis=1)
+            lowest = np.where(unmet_low, -np.inf, positive @ least + negative @ most)
+            highest = np.where(unmet_high, np.inf, positive @ most + negative @ least)
+        else:
+            lowest = positive @ least + negative @ most
+            highest = positive @ most + negative @ least
         below = self.row_most[rows] - lowest
         above = highest - self.row_least[rows]
         scale = 1e-9 * (1.0 + np.minimum(np.abs(lowest), np.abs(highest)))
+        scale[np.isinf(scale)] = 0.0
         failed = ((below < -scale) | (above < -scale)).nonzero()[0]
         if len(failed):
             return [], rows.item(failed[0])
         spare = np.minimum(below, above)
-        ranges = most - least
-        room = self.sizes[rows] * ranges
+        room = self.sizes[rows] * np.minimum(bounds.most - bounds.least, HUGE)
         open_rows = (room.max(axis=1) > spare + scale).nonzero()[0]
         changed: list[int] = []
+        if len(open_rows):
+            size = self.sizes[rows] @ np.maximum(np.abs(least), np.abs(most))
         for i in open_rows:
             columns = (room[i] > spare[i] + scale[i]).nonzero()[0]
             for side, slack in ((MOST, below[i]), (LEAST, above[i])):
-                if slack < HUGE / 1e6:
+                if slack < np.inf:
+                    error = (size.item(i) + abs(slack)) * self.rounding
                     self._tighten_row(
-                        rows.item(i), columns, side, float(slack), bounds, log, changed, divisible
-                    )
+                        rows.item(i), columns, side, (float(slack), float(error)), bounds, log,
+                        changed, divisible,
+                    )  # fmt: skip
         return changed, None
 
     def _tighten_row(
@@ -145,23 +159,29 @@ class Propagator:
         row: int,
         columns: np.ndarray,
         limit: int,
-        slack: float,
+        spare: tuple[float, float],
         bounds: Bounds,
         log: list[dict],
         changed: list[int],
         divisible: bool,
     ) -> None:
-        """Tighten activities by one limit of one row, the others at their most helpful bounds."""
+        """Tighten activities by one limit of one row, the others at their most helpful bounds.
+
+        `spare` is what the limit then leaves, and the error that may be in it.
+        """
+        slack, error = spare
         entries = self.matrix[row]
         for j in columns:
             a = entries.item(j) if limit else -entries.item(j)
             side = MOST if a > 0 else LEAST
             low, high = bounds.least.item(j), bounds.most.item(j)
-            anchor = low if side else high
-            if abs(a) * (high - low) <= slack or abs(anchor) == math.inf:
+            if abs(a) * (high - low) <= slack or math.isinf(low if side else high):
                 continue
-            value = self._rounded(j, anchor, slack / a, side, divisible, low, high)
-            if value is None:
+            margin = max(MARGIN, error / abs(a))
+            if margin > 0.25:
+                continue
+            value = self._rounded(j, side, slack / a, margin, divisible, low, high)
+            if value is None or abs(value) > EXACT:
                 continue
             leans = self._leans(row, j, limit, bounds)
             bounds.set(j, side, value, leans)
@@ -174,24 +194,27 @@ class Propagator:
     def _rounded(
         self,
         column: int,
-        anchor: float,
-        step: float,
         side: int,
+        step: float,
+        margin: float,
         divisible: bool,
         low: float,
         high: float,
     ) -> float | None:
-        """Return the bound ``anchor + step`` rounded to what is proven; None if no better."""
+        """Return the bound a step away from the other one, rounded to what is proven.
+
+        None where it is no better than the bound there is.
+        """
+        value = (low if side else high) + step
         if self.whole[column]:
             if side:
-                value = math.floor(anchor + step + MARGIN)
+                value = math.floor(value + margin)
                 return float(value) if value < high else None
-            value = math.ceil(anchor + step - MARGIN)
+            value = math.ceil(value - margin)
             return float(value) if value > low else None
         if not divisible:
             return None
-        value = anchor + step
-        margin = 1e-9 * (1.0 + abs(value) + abs(anchor))
+        margin = margin - MARGIN + 1e-9 * (1.0 + abs(value) + abs(step))
         if side:
             value += margin
             gain = high - value
@@ -240,6 +263,8 @@ def tighten_by_cost(
         if size <= 0:
             continue
         units = spare / size
+        if units > EXACT:
+            continue
         if proof.reduced[j] > 0:
             value = math.floor(bounds.least.item(j) + units + MARGIN)
             if value < bounds.most[j]:

@@ -127,14 +127,28 @@ def gomory_cut(
     if bare is None:
         return None
     coefficients, least = bare
-    numbers_used = 2 * live + ~at_least
+    used_bounds, leans = bounds_used(live, at_least, sides, bounds)
     candidate = Candidate(
         "gomory", coefficients, least,
-        {"rows": numbers, "multipliers": multipliers, "row_sides": row_sides,
-         "bounds": numbers_used, "values": anchors},
-        bool(bounds.leans[(~at_least).astype(int), live].any() or leaning_rows[numbers].any()),
+        {"rows": numbers, "multipliers": multipliers, "row_sides": row_sides, **used_bounds},
+        leans or bool(leaning_rows[numbers].any()),
     )  # fmt: skip
     return candidate if candidate.measure(x) else None
+
+
+def bounds_used(
+    live: np.ndarray, at_least: np.ndarray, sides: np.ndarray, bounds: Bounds
+) -> tuple[dict[str, np.ndarray], bool]:
+    """Return the bounds that distances are measured from, as evidence, and whether any leans.
+
+    ``bounds`` holds the numbers ``2 * column + side`` and ``values`` what they are; a fixed
+    activity, whose distance is zero, appears with both.
+    """
+    fixed = live[sides == 0]
+    numbers = np.concatenate((2 * live + ~at_least, 2 * fixed + at_least[sides == 0]))
+    columns, ends = numbers >> 1, numbers & 1
+    values = np.where(ends, bounds.most[columns], bounds.least[columns])
+    return {"bounds": numbers, "values": values}, bool(bounds.leans[ends, columns].any())
 
 
 def _nearer_least(x: np.ndarray, least: np.ndarray, most: np.ndarray) -> np.ndarray:

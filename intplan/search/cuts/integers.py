@@ -16,7 +16,7 @@ import numpy as np
 from intplan.relaxation.dictionary import Dictionary
 from intplan.search.arithmetic import common_denominator
 from intplan.search.cuts.candidate import Candidate
-from intplan.search.cuts.gomory import AWAY, SPREAD, TINY, Rounding
+from intplan.search.cuts.gomory import AWAY, SPREAD, TINY, Rounding, bounds_used
 from intplan.search.tightening import Bounds
 
 DENOMINATOR = 50_000  # greatest common denominator of the multipliers
@@ -77,7 +77,7 @@ def integer_gomory_cut(
     return _assemble(
         rounding, dictionary, x, bounds, leaning_rows,
         (numbers, entries[used], row_sides, row_gamma * row_sides, integers, whole_limits),
-        (live, at_least, own_gamma * sides, whole_anchors),
+        (live, at_least, sides, own_gamma * sides, whole_anchors),
         part * (unit - part), (whole_weights, unit, shifts),
     )  # fmt: skip
 
@@ -114,7 +114,7 @@ def _assemble(
 ) -> Candidate | None:
     """Write the cut over the activities; None if it is not violated or not exact in doubles."""
     numbers, _, row_sides, row_weights, integers, limits = of_rows
-    live, at_least, own_weights, anchors = of_columns
+    live, at_least, sides, own_weights, anchors = of_columns
     bound = float(np.abs(row_weights.astype(float)) @ np.abs(integers).max(axis=1, initial=1))
     if bound + float(np.abs(own_weights).max(initial=0)) > LARGEST:
         return None
@@ -136,12 +136,13 @@ def _assemble(
     shift = largest.bit_length() - 1
     scale = 2.0**-shift
     weights, unit, shifts = origin
+    used_bounds, leans = bounds_used(live, at_least, sides, bounds)
     candidate = Candidate(
         "gomory", coefficients * scale, least * scale,
         {"rows": numbers,
          "multipliers": [f"{int(w) << int(s)}/{unit}" for w, s in zip(weights, shifts, strict=True)],
-         "row_sides": row_sides, "bounds": 2 * live + ~at_least, "values": anchors},
-        bool(bounds.leans[(~at_least).astype(int), live].any() or leaning_rows[numbers].any()),
+         "row_sides": row_sides, **used_bounds},
+        leans or bool(leaning_rows[numbers].any()),
         shift,
     )  # fmt: skip
     return candidate if candidate.measure(x) else None
