@@ -12,15 +12,19 @@ which is the cost of the stated bound, or plus infinity where no plan is said to
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import Any, NamedTuple
 
+from scipy.optimize import linprog
+
 from intplan.sheet.problem import Number, Problem
+from tests.reference import silenced
 
 LEAST, MOST = 0, 1
 Coefficients = dict[int, Number]
+Inequality = tuple[Coefficients, Number]  # coefficients @ x >= the number
 
 
 class Refused(Exception):
@@ -515,6 +519,9 @@ class Checker:
         children = sorted(self.tree.successors(number))
         if node["outcome"] == "waiting":
             require(not children, "a waiting node has no children")
+            if evidence:
+                self.check_closure(evidence["closure"], box, free)
+                above = [*above, evidence["closure"]]
             require(
                 self.claim_is_nothing or any(map(self.meets_claim, self.all_proven(above, box))),
                 "a waiting node may hold a better plan than the answer says",
@@ -585,61 +592,94 @@ def coefficients_of(row: Row) -> Coefficients:
     }
 
 
-def implied(
-    stored: Row, exact_cut: tuple[Coefficients, Number], rows: tuple[Coefficients, Number], box: Box
-) -> bool:
-    """Tell whether ``a @ x >= b`` and ``r @ x >= s`` imply a stored row over a box.
+def implied(stored: Row, exact_cut: Inequality, rows: Sequence[Inequality], box: Box) -> bool:
+    """Tell whether an exact cut and the rows it is made of imply a stored row over a box.
 
-    Multiples of both, at least 0, are subtracted from the stored row; what is left must hold over
-    the box.  For the first the powers of two next to ratios of coefficients are tried, and the
-    ratio of the largest itself.  The second is the sum of the rows that a cut in doubles was
-    raised by to be safe.
+    Multiples of them, at least 0, are subtracted from the stored row; what is left must hold over
+    the box.  The rows take part because a cut in doubles is raised by small shares of them to be
+    safe.
     """
-    own = coefficients_of(stored)
     if stored.least is None or stored.most is not None:
         return False
-    ratios = {own[j] / c for j, c in exact_cut[0].items() if c and own.get(j)}
-    multiples = {Fraction(2) ** round(math.log2(ratio)) for ratio in ratios if ratio > 0}
-    largest = max(exact_cut[0], key=lambda j: abs(exact_cut[0][j]), default=0)
-    if exact_cut[0].get(largest) and own.get(largest, 0) / exact_cut[0][largest] > 0:
-        multiples.add(own[largest] / exact_cut[0][largest])
-    for multiple in sorted(multiples):
-        rest = minus((own, stored.least), exact_cut, multiple)
-        if spare(rest, box) >= 0:
-            return True
-        if share_of_rows(rest, rows, multiple, box):
-            return True
-    return False
+    whole: Inequality = coefficients_of(stored), stored.least
+    return any(
+        spare(rest, box) >= 0 or share_of_rows(rest, rows, box)
+        for multiple in likely_multiples(whole, exact_cut, rows, box)
+        for rest in (minus(whole, exact_cut, multiple),)
+    )
 
 
-def minus(
-    row: tuple[Coefficients, Number], other: tuple[Coefficients, Number], times: Fraction
-) -> tuple[Coefficients, Number]:
+def likely_multiples(
+    stored: Inequality, exact_cut: Inequality, rows: Sequence[Inequality], box: Box
+) -> Iterator[Fraction]:
+    """Yield by what a cut may have been multiplied before it was stored: a power of two.
+
+    Or any number, if it was stored exactly; then all ratios of its coefficients are the same.
+    """
+    pairs = [(stored[0][j], c) for j, c in exact_cut[0].items() if c and stored[0].get(j)]
+    ratios = {Fraction(s / c) for s, c in pairs if s / c > 0}
+    if len(ratios) == 1:
+        yield from ratios
+    for power in {round(math.log2(ratio)) for ratio in ratios}:
+        yield Fraction(2) ** power
+    guess = guessed_shares(stored, [exact_cut, *rows], box)[0]
+    if guess > 0:
+        yield Fraction(2) ** round(math.log2(guess))
+
+
+def minus(row: Inequality, other: Inequality, times: Fraction) -> Inequality:
     """Return a row less a multiple of another."""
     (a, least), (b, other_least) = row, other
     return {j: a.get(j, 0) - times * b.get(j, 0) for j in {*a, *b}}, least - times * other_least
 
 
-def spare(row: tuple[Coefficients, Number], box: Box) -> Number:
+def spare(row: Inequality, box: Box) -> Number:
     """Return by how much a box lies inside ``a @ x >= b``; minus infinity where it has no end."""
     least = box.least_value(row[0])
     return -math.inf if least is None else least - row[1]
 
 
-def share_of_rows(
-    rest: tuple[Coefficients, Number], rows: tuple[Coefficients, Number], unit: Fraction, box: Box
-) -> bool:
-    """Look for a share of the rows after which the rest of a cut holds over a box.
+def share_of_rows(rest: Inequality, rows: Sequence[Inequality], box: Box) -> bool:
+    """Look for shares of rows after which the rest of a cut holds over a box.
 
-    By how much it holds is concave and piecewise linear in the share, with its corners where a
-    coefficient vanishes: the corners are all there is to try.
+    First one share for all of them: by how much the rest holds is concave and piecewise linear in
+    it, with its corners where a coefficient vanishes, so that the corners are all there is to
+    try.  Then shares guessed by `scipy.optimize.linprog`; the rest is checked exactly either way.
     """
+    total: Inequality = {}, 0
+    for row in rows:
+        total = minus(total, row, Fraction(-1))
+    for j, r in total[0].items():
+        share = rest[0].get(j, 0) / r if r else 0
+        if share > 0 and spare(minus(rest, total, Fraction(share)), box) >= 0:
+            return True
+    for share, row in zip(guessed_shares(rest, rows, box), rows, strict=True):
+        rest = minus(rest, row, share)
+    return spare(rest, box) >= 0
 
-    def at(share: Fraction) -> Number:
-        return spare(minus(rest, rows, share * unit), box)
 
-    ends = {rest[0][j] / (unit * r) for j, r in rows[0].items() if r and rest[0].get(j)}
-    return any(at(end) >= 0 for end in ends if end > 0)
+def guessed_shares(rest: Inequality, rows: Sequence[Inequality], box: Box) -> list[Fraction]:
+    """Return the shares of rows that doubles think best: duals of the least of the rest."""
+    columns = sorted({*rest[0], *(j for row in rows for j in row[0])})
+    scale = max((abs(c) for c in rest[0].values()), default=0)
+    if not rows or not scale:
+        return [Fraction(0)] * len(rows)
+    sizes = [max(abs(Fraction(c)) for c in row[0].values()) for row in rows]
+    matrix = [
+        [-float(row[0].get(j, 0) / size) for j in columns]
+        for row, size in zip(rows, sizes, strict=True)
+    ]
+    with silenced():
+        answer = linprog(
+            [float(rest[0].get(j, 0) / scale) for j in columns],
+            matrix,
+            [-float(row[1] / size) for row, size in zip(rows, sizes, strict=True)],
+            bounds=[tuple(box.sides[side][j] for side in (LEAST, MOST)) for j in columns],
+        )
+    if answer.status != 0:
+        return [Fraction(0)] * len(rows)
+    duals = [max(-float(y), 0.0) for y in answer.ineqlin.marginals]
+    return [Fraction(y) * scale / size for y, size in zip(duals, sizes, strict=True)]
 
 
 class Distance(NamedTuple):
@@ -688,8 +728,8 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
     right = -sum((a * limit for a, _, limit, *_ in distances), Fraction(0))
     part = right - math.floor(right)
     require(part != 0, f"the right-hand side of cut {number} is whole")
-    cut: tuple[Coefficients, Number] = {}, 1
-    rows: tuple[Coefficients, Number] = {}, 0
+    cut: Inequality = {}, 1
+    rows: list[Inequality] = []
     for a, grain, limit, terms, side, row in distances:
         if side == 0 or a == 0:
             continue
@@ -697,7 +737,7 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
         gamma = rounding_coefficient(Fraction(a * side * unit), grain > 0, part) / unit
         cut = minus(cut, (terms, limit), -side * gamma)
         if row:
-            rows = minus(rows, (terms, limit), -side * (Fraction(1) / unit + gamma))
+            rows.append(minus(({}, 0), (terms, limit), -side * (Fraction(1) / unit + gamma)))
     require(
         implied(checker.cut_rows[number], cut, rows, where),
         f"cut {number} does not follow from its multipliers",
