@@ -80,7 +80,17 @@ class NodeWork:
     def enter(self, branch: Branch) -> bool:
         """Apply the branching bound and what the rules make of it; False if that closed it."""
         self.bounds.set(branch.column, branch.side, branch.value, False)
-        return self._spread([branch.column])
+        propagator = self.context.propagator
+        if propagator.pays():
+            entered = self._spread([branch.column])
+            propagator.note(closed=not entered)
+            return entered
+        self.dictionary.set_bound(
+            branch.column,
+            self.bounds.least.item(branch.column),
+            self.bounds.most.item(branch.column),
+        )
+        return True
 
     def develop(self, branch: Branch | None = None) -> Split | None:
         """Solve the node as far as a decision: None once it is closed, else where to branch."""
@@ -288,7 +298,7 @@ class NodeWork:
         proven = self.context.best.beats(proof.bound) if closed.weight else proof.bound > 0
         closure = None
         if proven:
-            closure = self.context.record.closure(proof, prover.used_bounds(proof), bounds)
+            closure = self.context.record.closure(proof, bounds)
         array[closed.column] = kept
         return closure
 
@@ -438,8 +448,7 @@ class NodeWork:
     def _closure(self, proof: Proof) -> dict[str, Any]:
         """Return the record of a proof, made once."""
         if self._closure_of is None or self._closure_of[0] is not proof:
-            used = self.context.prover.used_bounds(proof)
-            self._closure_of = (proof, self.context.record.closure(proof, used, self.bounds))
+            self._closure_of = (proof, self.context.record.closure(proof, self.bounds))
         return self._closure_of[1]
 
     def _finish(self, outcome: str, bound: float, closure: dict[str, Any]) -> None:

@@ -165,16 +165,3 @@ class Prover:
                     return None
                 share = max(share, 2 * lacking / given)
         return share
-
-    def used_bounds(self, proof: Proof) -> np.ndarray:
-        """Return the numbers ``2 * j + side`` of the activity bounds a proof may have used.
-
-        Where a reduced cost is zero but for rounding, its exact sign is not known: both sides.
-        """
-        sizes = np.abs(proof.reduced)
-        used = (sizes > proof.error).nonzero()[0]
-        numbers = 2 * used + (proof.reduced[used] < 0)
-        unsure = (sizes <= proof.error).nonzero()[0]
-        touched = self.rows.matrix[proof.rows[:, None], unsure].any(axis=0)
-        unsure = 2 * unsure[touched | (self.cost[unsure] != 0 if proof.weight else False)]
-        return np.concatenate((numbers, unsure, unsure + 1))

@@ -78,22 +78,20 @@ class Recorder:
         self.cuts.append(cut)
         self.leaning_rows = np.append(self.leaning_rows, cut.leans)
 
-    def closure(self, proof: Proof, used: np.ndarray, bounds: Bounds) -> dict[str, Any]:
+    def closure(self, proof: Proof, bounds: Bounds) -> dict[str, Any]:
         """Return the record of a proof over a node's bounds.
 
-        Parameters
-        ----------
-        used : numbers ``2 * column + side`` of the activity bounds that the proof used
+        A reduced cost that is zero but for rounding may have needed either bound: both count as
+        used.
         """
-        columns, sides = used >> 1, used & 1
-        values = np.where(sides, bounds.most[columns], bounds.least[columns])
-        own = np.where(sides, self._own[1][columns], self._own[0][columns])
-        tightened = values != own
-        used = used[tightened]
-        leans = bool(bounds.leans[sides[tightened], columns[tightened]].any())
+        own_least, own_most = self._own
+        uses_least = (proof.reduced >= -proof.error) & (bounds.least != own_least)
+        uses_most = (proof.reduced <= proof.error) & (bounds.most != own_most)
+        leans = bool((uses_least & bounds.leans[0]).any() or (uses_most & bounds.leans[1]).any())
         if not leans and len(self.cuts):
             cuts = proof.rows[proof.rows >= self.rules] - self.rules
             leans = bool(self.leaning_rows[cuts].any())
+        used = np.concatenate((2 * uses_least.nonzero()[0], 2 * uses_most.nonzero()[0] + 1))
         return {
             "weight": proof.weight, "rows": proof.rows, "multipliers": proof.multipliers,
             "bound": proof.bound, "bounds": used, "leans": leans, "exact": False,
