@@ -16,6 +16,9 @@ from intplan.search.tightening import Propagator
 from intplan.sheet.problem import Problem
 
 
+DIVE_AFTER = 12  # nodes between the root's dive and the next one
+
+
 @dataclass
 class Context:
     """The parts of one search, and its counts."""
@@ -32,3 +35,11 @@ class Context:
     costs: PseudoCosts
     nodes: int = 0
     pivots: int = 0
+    next_dive: int = 1
+
+    def time_to_dive(self) -> bool:
+        """Tell whether to dive for a plan at this node: at the root, then ever more rarely."""
+        if self.nodes < self.next_dive:
+            return False
+        self.next_dive = 3 * self.nodes + DIVE_AFTER
+        return True

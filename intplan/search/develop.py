@@ -12,6 +12,7 @@ from intplan.relaxation.dictionary import Dictionary, Multipliers, Status
 from intplan.relaxation.start import cold_start
 from intplan.search import branching
 from intplan.search.context import Context
+from intplan.search.diving import dive
 from intplan.search.evidence import LEAST, MOST, Proof
 from intplan.search.exact import ExactAnswer
 from intplan.search.node import Branch
@@ -118,6 +119,15 @@ class NodeWork:
                 if self.closed:
                     return None
                 continue
+            if context.time_to_dive() and dive(
+                context, dictionary, self.bounds, guided=context.nodes > 1
+            ):
+                if context.best.beats(proof.bound):
+                    return self.close("beaten", proof)
+                if not last and self.tighten(proof):
+                    if self.closed:
+                        return None
+                    continue
             choice = branching.choose(dictionary, rows, context.best.cutoff, context.costs)
             context.pivots += choice.pivots
             if not last and choice.closed and self._use_trials(choice):

@@ -247,9 +247,10 @@ class Search:
             Branch(column, MOST, float(floor), value - floor, cost),
             Branch(column, LEAST, float(floor + 1), floor + 1 - value, cost),
         ]
-        down_first = split.down_gain < split.up_gain or (
-            split.down_gain == split.up_gain and value - floor < 0.5
-        )
+        if work.bounds.most[column] - work.bounds.least[column] == 1:
+            down_first = value - floor < 0.5
+        else:
+            down_first = (split.down_gain, value - floor) < (split.up_gain, 0.5)
         if not down_first:
             branches.reverse()
         later = Snapshot(work.dictionary.copy(), work.bounds.copy())

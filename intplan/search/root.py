@@ -27,6 +27,7 @@ CUTS_A_ROUND = 20
 STALL = 0.02  # a round that adds less than this share of the gain so far is a stalled one
 PATIENCE = 2  # stalled rounds in a row that end the cutting
 LARGE = 2.0**53  # whole numbers beyond this may be rounded as doubles
+TIGHT = 0.1  # room, next to a rule's value, up to which a cover cut is sought
 SLACK_CUT = 1e-6  # room at which a cut no longer binds
 
 
@@ -181,7 +182,7 @@ class RootWork(NodeWork):
         )
 
     def _tight_rules(self) -> list[int]:
-        """Return the rules that bind at the point and may have a cover cut."""
+        """Return the rules that bind, or nearly, at the point and may have a cover cut."""
         if self._knapsacks is None:
             problem = self.context.problem
             binary = problem.whole & (self.bounds.least == 0) & (self.bounds.most == 1)
@@ -191,8 +192,14 @@ class RootWork(NodeWork):
                 if len({abs(c) for j, c in zip(row.columns, row.coefficients, strict=True)
                         if binary[j]}) > 1
             }  # fmt: skip
-        numbers = self.dictionary.nonbasic - self.dictionary.columns
-        return [i for i in numbers.tolist() if i in self._knapsacks]
+        dictionary = self.dictionary
+        numbers = np.concatenate((dictionary.nonbasic, dictionary.basic[self._nearly_tight()]))
+        return [i for i in (numbers - dictionary.columns).tolist() if i in self._knapsacks]
+
+    def _nearly_tight(self) -> np.ndarray:
+        """Return the dictionary rows whose value is near one of its limits."""
+        rooms = self.dictionary.rooms.min(axis=1, initial=np.inf)
+        return (rooms < TIGHT * (1.0 + np.abs(self.dictionary.values))).nonzero()[0]
 
     def _rounding(self) -> Rounding:
         """Gather what mixed-integer rounding needs under the root's present bounds."""

@@ -1,0 +1,94 @@
+"""Diving: a plan sought by fixing one fractional activity after the other.
+
+Nothing a dive does is evidence; it only finds plans, which are checked exactly like any other.
+
+References
+----------
+T. Berthold, Primal heuristics for mixed integer programs, Diploma thesis, Technische Universitaet
+Berlin, 2006 (fractional diving).
+E. Danna, E. Rothberg, C. Le Pape, Exploring relaxation induced neighborhoods to improve MIP
+solutions, Mathematical Programming 102:71-90, 2005 (guided dives, towards the best plan).
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from intplan.relaxation.dictionary import Dictionary, Status
+from intplan.search.context import Context
+from intplan.search.tightening import Bounds
+
+FRACTION = 1e-6
+PIVOTS_A_STEP = 40
+DOWN = 3.0  # how much less a step down is liked than one up by the same distance: it settles less
+
+
+def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> bool:
+    """Dive from a relaxed node; tell whether a better plan was found.
+
+    Parameters
+    ----------
+    start, bounds : of the node, left unchanged
+    guided : fix activities towards the best plan so far instead of their nearest whole value
+    """
+    dictionary, bounds = start.copy(), bounds.copy()
+    before = dictionary.pivots
+    found = False
+    while not context.limits.out_of_time():
+        rows = _fractional_rows(dictionary, context.problem.whole)
+        x = dictionary.activities()
+        if not len(rows):
+            plan = context.arithmetic.guess_plan(x)
+            found |= plan is not None and context.best.offer(plan)
+            break
+        for point in context.rounder.round(x, bounds):
+            plan = context.arithmetic.guess_plan(point)
+            found |= plan is not None and context.best.offer(plan)
+        column, up = _choose(context, dictionary, rows, guided)
+        least, most, value = bounds.least.item(column), bounds.most.item(column), x.item(column)
+        rounded_up, rounded_down = (float(np.ceil(value)), most), (least, float(np.floor(value)))
+        first, second = (rounded_up, rounded_down) if up else (rounded_down, rounded_up)
+        if not _fix(context, dictionary, bounds, column, first) and not _fix(
+            context, dictionary, bounds, column, second
+        ):
+            break
+    context.pivots += dictionary.pivots - before
+    return found
+
+
+def _fractional_rows(dictionary: Dictionary, whole: np.ndarray) -> np.ndarray:
+    values = dictionary.values
+    rows = (np.abs(values - np.rint(values)) > FRACTION).nonzero()[0]
+    rows = rows[dictionary.basic[rows] < dictionary.columns]
+    return rows[whole[dictionary.basic[rows]]]
+
+
+def _choose(
+    context: Context, dictionary: Dictionary, rows: np.ndarray, guided: bool
+) -> tuple[int, bool]:
+    """Choose the activity to fix and whether upwards."""
+    columns = dictionary.basic[rows]
+    values = dictionary.values[rows]
+    parts = values - np.floor(values)
+    if guided and context.best.plan is not None:
+        plan = context.best.plan
+        wanted = np.array([float(plan[j]) for j in columns.tolist()])
+        i = np.abs(wanted - values).argmin()
+        return columns.item(i), bool(wanted[i] > values[i])
+    distances = np.minimum(1.0 - parts, DOWN * parts)
+    i = distances.argmin()
+    return columns.item(i), bool(1.0 - parts[i] <= DOWN * parts[i])
+
+
+def _fix(
+    context: Context,
+    dictionary: Dictionary,
+    bounds: Bounds,
+    column: int,
+    ends: tuple[float, float],
+) -> bool:
+    """Give an activity new bounds and re-optimise; False if no better plan lies there."""
+    bounds.least[column], bounds.most[column] = ends
+    dictionary.set_bound(column, *ends)
+    status = dictionary.reoptimise(context.best.cutoff, PIVOTS_A_STEP)
+    return status in (Status.OPTIMAL, Status.LIMIT)
