@@ -43,6 +43,7 @@ FEASIBILITY = 1e-9  # how far past a bound a basic value may lie, for bounds up 
 PIVOT = 1e-9  # smallest pivot of the ratio test
 SLACK = 1e-11  # added to reduced costs in the ratio test, so that near ties take the large pivot
 DRIFT = 1e-8  # residual of the original rows that calls for a refactorisation
+FEW = 8  # a violation below this share of all flips together is settled by a few of them
 REFACTOR_AFTER = 150  # pivots
 CHECK_DRIFT_AFTER = 30  # pivots between two looks at the residual
 VALUE, ABOVE, BELOW = -3, -2, -1  # the set-apart columns
@@ -177,7 +178,7 @@ class Dictionary:
     def shed(self) -> None:
         """Give up the table and keep the basis; `refactor` computes the table again."""
         self.table = self._transposed = self.entries = self.reduced = None
-        self.values = self.rooms = None
+        self.values = self.rooms = self._apart = None
 
     def _take_table(self, entries: np.ndarray) -> None:
         """Make the table from its first n columns, (m + 1, n); the others are not yet valid."""
@@ -192,6 +193,7 @@ class Dictionary:
         self.reduced = table[-1, :VALUE]
         self.values = table[:-1, VALUE]
         self.rooms = table[:-1, ABOVE:]
+        self._apart = table[:, VALUE:]
 
     def _tolerance(self) -> float:
         limits = np.concatenate((self.basic_least, self.basic_most, self.least, self.most))
@@ -314,7 +316,7 @@ class Dictionary:
 
     def _shift(self, change: np.ndarray) -> None:
         """Add to the values of the rows and the cost, (m + 1,)."""
-        self.table[:, VALUE:] += change[:, None] * MOVE
+        self._apart += change[:, None] * MOVE
 
     def add_rows(self, numbers: np.ndarray) -> None:
         """Let rows of the store enter, basic; the basis stays dual feasible.
@@ -393,8 +395,8 @@ class Dictionary:
     def _leaving_row(self, bland: bool) -> tuple[int, int]:
         """Choose the row furthest outside its bounds, next to its norm where that pays.
 
-        Returns the row, -1 when all are inside, and 0 if it lies below its least bound or 1 if above
-        its most.
+        Returns the row, -1 when all are inside, and 0 if it lies below its least bound or 1 if
+        above its most.
         """
         if not len(self.basic):
             return -1, 0
@@ -423,27 +425,26 @@ class Dictionary:
         violated: each flip takes ``range * |entry|`` off the violation.
         """
         helpful = self.entries[row] * self.side
-        if above:
-            np.negative(helpful, out=helpful)
         if self.free:
             loose = (self.side == 0) & (self.least != self.most)
-            helpful[loose] = np.abs(self.entries[row, loose])
-        candidates = (helpful > PIVOT).nonzero()[0]
-        if not len(candidates):
+            helpful[loose] = np.abs(self.entries[row, loose]) * (-1.0 if above else 1.0)
+        candidates = ((helpful < -PIVOT) if above else (helpful > PIVOT)).nonzero()[0]
+        if not candidates.size:
             return -1
-        slopes = helpful[candidates]
-        costs = np.abs(self.reduced[candidates])
+        slopes = np.abs(helpful[candidates])
+        ratios = np.abs(self.reduced[candidates])
         if self.free:
-            costs[loose[candidates]] = 0.0
-        costs += SLACK
-        costs /= slopes
-        first = costs.argmin().item()
-        column = candidates.item(first)
+            ratios[loose[candidates]] = 0.0
+        ratios += SLACK
+        ratios /= slopes
+        first = ratios.argmin().item()
         if bland:
-            return candidates[costs <= costs[first]][0].item()
+            return candidates[ratios <= ratios[first]][0].item()
+        column = candidates.item(first)
         short = -self.rooms.item(row, above)
-        if short > slopes.item(first) * (self.most.item(column) - self.least.item(column)):
-            return self._long_step(candidates, slopes, costs, short)
+        passed = slopes.item(first) * (self.most.item(column) - self.least.item(column))
+        if short > passed:
+            return self._long_step(candidates, slopes, ratios, short)
         return column
 
     def _long_step(
@@ -453,26 +454,45 @@ class Dictionary:
 
         Returns -1 when even all flips together leave the row violated.
         """
-        order = ratios.argsort(kind="stable")
-        ordered = candidates[order]
-        gains = slopes[order] * (self.most[ordered] - self.least[ordered])
-        left = short - gains.cumsum()
-        turn = (left <= 0).argmax().item()
-        if left[turn] > 0:
-            if left[-1] > self.tolerance:
-                return -1
-            turn = len(order) - 1
-        if turn:
-            self._flip(ordered[:turn])
-        return ordered.item(turn)
+        gains = slopes * (self.most[candidates] - self.least[candidates])
+        total = gains.sum()
+        if short - total > self.tolerance:
+            return -1
+        if short * FEW > total:  # many flips: sort once; else take the least ratio a few times
+            order = ratios.argsort(kind="stable")
+            turn = min(int(gains[order].cumsum().searchsorted(short)), len(order) - 1)
+            flipped = candidates[order[:turn]]
+            turn = order.item(turn)
+        else:
+            flipped = []
+            while True:
+                turn = ratios.argmin().item()
+                short -= gains.item(turn)
+                if short <= 0:
+                    break
+                flipped.append(candidates.item(turn))
+                ratios[turn] = np.inf
+        if len(flipped):
+            self._flip(flipped)
+        return candidates.item(turn)
 
-    def _flip(self, columns: np.ndarray) -> None:
+    def _flip(self, columns: list[int] | np.ndarray) -> None:
         """Move non-basic variables to their other bound."""
-        before = self.at[columns]
-        after = np.where(self.side[columns] > 0, self.most[columns], self.least[columns])
-        self.side[columns] *= -1.0
-        self.at[columns] = after
-        self._shift(self.table[:, columns] @ (after - before))
+        if len(columns) == 1:
+            column = int(columns[0])
+            side = self.side.item(column)
+            end = self.most.item(column) if side > 0 else self.least.item(column)
+            change = (end - self.at.item(column)) * self.table[:, column]
+            self.side[column], self.at[column] = -side, end
+            self._shift(change)
+            return
+        columns = np.asarray(columns)
+        sides = self.side.take(columns)
+        least, most = self.least.take(columns), self.most.take(columns)
+        steps = (most - least) * sides
+        self.side[columns] = -sides
+        self.at[columns] = np.where(sides > 0, most, least)
+        self._shift(self.table.take(columns, axis=1) @ steps)
 
     def _pivot(self, row: int, column: int, above: int) -> None:
         """Exchange a basic and a non-basic variable: one rank-1 update of the table."""
@@ -501,7 +521,10 @@ class Dictionary:
         self.basic[row], self.nonbasic[column] = entering, leaving
         self.place[entering], self.place[leaving] = row, -1 - column
         self.basic_least[row], self.basic_most[row] = new_least, new_most
-        self.table[row, VALUE:] = value, value - new_least, new_most - value
+        table = self.table
+        table[row, VALUE] = value
+        table[row, ABOVE] = value - new_least
+        table[row, BELOW] = new_most - value
         self.least[column], self.most[column] = least, most
         self.at[column] = most if above else least
         self.side[column] = 0.0 if least == most else (-1.0 if above else 1.0)
