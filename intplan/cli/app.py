@@ -5,6 +5,7 @@ Exit statuses: 0 yes, 1 no, 2 bad input or usage, 3 unfinished, 130 ended by a s
 
 from __future__ import annotations
 
+import os
 import sys
 import traceback
 from collections.abc import Sequence
@@ -17,6 +18,7 @@ from intplan.cli.console import Console, OutputError, silence
 from intplan.cli.interrupts import ENDED_AT_ONCE, Interrupts
 
 BAD_INPUT, UNFINISHED = 2, 3
+THREADS = ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
 
 
 class Session(NamedTuple):
@@ -44,7 +46,13 @@ def group(ctx: click.Context) -> int:
 
 
 def main() -> NoReturn:
-    """Run the command line of this process and end with its exit status."""
+    """Run the command line of this process and end with its exit status.
+
+    The linear algebra runs on one thread unless the environment says otherwise: at a planner's
+    sizes several threads wait for each other longer than they compute.
+    """
+    for name in THREADS:
+        os.environ.setdefault(name, "1")  # read once, when numpy is first imported
     status = run(sys.argv[1:])
     for stream in (sys.stdout, sys.stderr):
         try:
