@@ -151,7 +151,7 @@ def _one_by_one(array: np.ndarray, place: Place) -> list[Number]:
 
 def _dense_terms(matrix: np.ndarray) -> list[Terms]:
     """Return the terms of each row of a dense array."""
-    at, columns = np.nonzero(matrix)
+    at, columns = np.nonzero(matrix != 0)  # of objects too: None is no zero
     return _terms(matrix[at, columns], at, columns, matrix.shape[0])
 
 
