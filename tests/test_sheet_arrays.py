@@ -150,8 +150,10 @@ def test_a_vast_sparse_matrix_is_refused_before_it_is_built():
 def test_whole_data_are_read_fast():
     rng = np.random.default_rng(1)
     rows = (rng.random((168, 500)) < 0.05).astype(float)
-    Sheet.from_arrays(np.ones(500), rows, row_least=1)
-    started = time.perf_counter()
-    Sheet.from_arrays(np.ones(500), rows, row_least=1)
-    # A hundredth of a second is usual; the limit leaves room for a busy machine.
-    assert time.perf_counter() - started < 0.1
+    best = inf
+    for _ in range(5):
+        started = time.perf_counter()
+        Sheet.from_arrays(np.ones(500), rows, row_least=1)
+        best = min(best, time.perf_counter() - started)
+    # A few milliseconds are usual; entry by entry it would be far beyond this limit.
+    assert best < 0.1

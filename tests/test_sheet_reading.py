@@ -7,6 +7,8 @@ import sys
 from fractions import Fraction
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from intplan.errors import SheetError
 from intplan.sheet import Activity, Aim, Rule, Sheet
@@ -270,6 +272,20 @@ def test_what_is_odd_becomes_a_warning():
 )  # fmt: skip
 def test_bad_sheets_get_one_line(text, line):
     assert error(text).startswith(line)
+
+
+@settings(max_examples=300, derandomize=True, deadline=None)
+@given(
+    st.integers(0, len(BAKERY)),
+    st.integers(0, 12),
+    st.text(alphabet='ab[]{}"=.,0123456789e-+*/()<>\n #\x00\u00f6infa', max_size=6),
+)
+def test_a_damaged_sheet_is_a_sheet_or_one_line(at, cut, put):
+    try:
+        Sheet.parse(BAKERY[:at] + put + BAKERY[at + cut :], "week.toml")
+    except SheetError as problem:
+        assert "\n" not in str(problem)
+        assert str(problem).startswith("week.toml")
 
 
 def test_a_nested_rule_is_refused_in_one_line():
