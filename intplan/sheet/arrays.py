@@ -36,6 +36,7 @@ Place = Callable[[int], str]
 def sheet_from_arrays(
     aim: Any,
     rows: Any,
+    *,
     row_least: Any,
     row_most: Any,
     least: Any,

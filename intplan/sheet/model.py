@@ -185,9 +185,19 @@ class Sheet:
         from intplan.sheet.arrays import sheet_from_arrays
 
         return sheet_from_arrays(
-            aim, rows, row_least, row_most, least, most, whole, maximize, names, rule_names,
-            title, measure,
-        )  # fmt: skip
+            aim,
+            rows,
+            row_least=row_least,
+            row_most=row_most,
+            least=least,
+            most=most,
+            whole=whole,
+            maximize=maximize,
+            names=names,
+            rule_names=rule_names,
+            title=title,
+            measure=measure,
+        )
 
     @classmethod
     def from_record(cls, record: object, where: str = "sheet") -> Sheet:
