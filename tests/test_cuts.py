@@ -178,7 +178,8 @@ def gomory_candidates(
         [2.0**-r.shift if problem.whole[list(r.columns)].all() else 0.0 for r in problem.rows]
     )
     reach = float(np.maximum(np.abs(problem.least), np.abs(problem.most)).sum())
-    rounding = Rounding(rows, problem.whole, grain, reach, np.arange(0))
+    own = problem.least, problem.most
+    rounding = Rounding(rows, problem.whole, grain, reach, np.arange(0), own)
     x = dictionary.activities()
     leaning = np.zeros(rows.count, bool)
     separate = integer_gomory_cut if exactly else gomory_cut
@@ -270,7 +271,11 @@ def sack(weights: Sequence[int], capacity: int, limit: int = 1) -> Problem:
 def cover_of(problem: Problem, limit: int, x: np.ndarray) -> Candidate | None:
     """Separate a cover cut of the only rule at a point."""
     bounds = Bounds(problem.least.copy(), problem.most.copy(), np.zeros((2, len(x)), bool))
-    return cover_cut(0, problem.rows[0], limit, x, bounds, problem.whole)
+    own = problem.least, problem.most
+    nothing = np.zeros((0, len(x))), np.zeros(0), np.zeros(0), np.zeros(0, int)
+    rows = RowStore(*nothing)
+    rounding = Rounding(rows, problem.whole, np.zeros(1), 0.0, np.arange(0), own)
+    return cover_cut(rounding, 0, problem.rows[0], limit, x, bounds)
 
 
 def test_a_minimal_cover_by_hand() -> None:

@@ -194,7 +194,7 @@ class Checker:
         stepped = all(self.whole[j] for j, _ in problem.exact_cost)
         grain = math.gcd(*(c for _, c in problem.exact_cost)) or 1
         self.step = Fraction(grain, 1 << problem.cost_shift) if stepped else None
-        self.good: set[tuple[int, bool]] = set()  # cuts proven: number, without the cut-off
+        self.good: set[int] = set()  # cuts proven
         self.summary = Summary()
         self._aggregates: dict[int, tuple[Any, Any]] = {}
 
@@ -202,7 +202,8 @@ class Checker:
 
     def row(self, number: int) -> Row:
         """Return a row by its number: the rules, then the cuts."""
-        return (self.rules + self.cut_rows)[number] if number >= 0 else self.rules[number]
+        rules = len(self.rules)
+        return self.rules[number] if number < rules else self.cut_rows[number - rules]
 
     def aggregate(self, closure: dict[str, Any]) -> tuple[Coefficients, int, Number] | None:
         """Return what is left of the cost beside the rows, and the rows' least value.
@@ -450,30 +451,30 @@ class Checker:
                 self.prove_cut(cut, box, free)
 
     def prove_cut(self, number: int, box: Box, free: Box) -> None:
-        """Prove a cut over the root's bounds as they are when it is first used."""
+        """Prove a cut over the root's bounds as they are when it is first used.
+
+        A cut that does not lean on the cut-off must hold over the wider bounds without it.
+        """
+        if number in self.good:
+            return
         cut = self.cuts[number]
-        for leaning in (True,) if cut.leans else (True, False):
-            if (number, leaning) in self.good:
-                continue
-            where = box if leaning else free
-            for column, side, value in cut_premises(cut):
-                require(
-                    where.implies(column, side, value),
-                    f"cut {number} used a bound of {column} that was not there",
-                )
-            require(cut.kind in CUT_CHECKS, f"cut {number} is of an unknown kind")
-            self.prove_earlier_cuts(number, box, free)
-            listed = self.own.copy()
-            for column, side, value in cut_premises(cut):
-                listed.tighten(column, side, value)
-            try:
-                CUT_CHECKS[cut.kind](self, number, listed)
-            except Refused:
-                self.summary.unlisted += 1
-                CUT_CHECKS[cut.kind](self, number, where)
-            self.good.add((number, leaning))
-            if leaning:
-                self.summary.cuts[cut.kind] = self.summary.cuts.get(cut.kind, 0) + 1
+        require(cut.kind in CUT_CHECKS, f"cut {number} is of an unknown kind")
+        self.prove_earlier_cuts(number, box, free)
+        where = box if cut.leans else free
+        listed = self.own.copy()
+        for column, side, value in cut_premises(cut):
+            require(
+                where.implies(column, side, value),
+                f"cut {number} used a bound of {column} that was not there",
+            )
+            listed.tighten(column, side, value)
+        try:
+            CUT_CHECKS[cut.kind](self, number, listed)
+        except Refused:
+            self.summary.unlisted += 1
+            CUT_CHECKS[cut.kind](self, number, where)
+        self.good.add(number)
+        self.summary.cuts[cut.kind] = self.summary.cuts.get(cut.kind, 0) + 1
 
     def prove_earlier_cuts(self, number: int, box: Box, free: Box) -> None:
         """Prove the cuts among the rows that a cut was derived from."""
@@ -578,10 +579,19 @@ def cut_row(cut: Any) -> Row:
 
 def cut_premises(cut: Any) -> list[tuple[int, int, Number]]:
     """Return the bounds a cut was derived under: column, side, value."""
-    evidence = cut.evidence
+    return measured_from(cut) + listed_bounds(cut.evidence["box"], cut.evidence["box_values"])
+
+
+def measured_from(cut: Any) -> list[tuple[int, int, Number]]:
+    """Return the bounds a cut measures distances from: column, side, value."""
+    return listed_bounds(cut.evidence["bounds"], cut.evidence["values"])
+
+
+def listed_bounds(numbers: Any, values: Any) -> list[tuple[int, int, Number]]:
+    """Return bounds by their numbers as column, side, value."""
     return [
         (int(number) >> 1, int(number) & 1, rational(value, "a cut's bound"))
-        for number, value in zip(evidence["bounds"], evidence["values"], strict=True)
+        for number, value in zip(numbers, values, strict=True)
     ]
 
 
@@ -646,12 +656,13 @@ def share_of_rows(rest: Inequality, rows: Sequence[Inequality], box: Box) -> boo
     it, with its corners where a coefficient vanishes, so that the corners are all there is to
     try.  Then shares guessed by `scipy.optimize.linprog`; the rest is checked exactly either way.
     """
-    total: Inequality = {}, 0
-    for row in rows:
-        total = minus(total, row, Fraction(-1))
-    for j, r in total[0].items():
-        share = rest[0].get(j, 0) / r if r else 0
-        if share > 0 and spare(minus(rest, total, Fraction(share)), box) >= 0:
+    total: Coefficients = {}
+    for terms, _ in rows:
+        for j, c in terms.items():
+            total[j] = total.get(j, 0) + c
+    whole: Inequality = total, sum(least for _, least in rows)
+    for share in {Fraction(rest[0].get(j, 0)) / r for j, r in total.items() if r}:
+        if share > 0 and spare(minus(rest, whole, share), box) >= 0:
             return True
     for share, row in zip(guessed_shares(rest, rows, box), rows, strict=True):
         rest = minus(rest, row, share)
@@ -720,7 +731,7 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
         for j, a in coefficients_of(row).items():
             own[j] = own.get(j, 0) - y * a
         distances.append(row_distance(checker, index, row, y, side))
-    premises = reversed(cut_premises(checker.cuts[number]))
+    premises = reversed(measured_from(checker.cuts[number]))
     anchors = {column: (side, value) for column, side, value in premises}
     for j, a in own.items():
         if a:
@@ -728,18 +739,21 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
     right = -sum((a * limit for a, _, limit, *_ in distances), Fraction(0))
     part = right - math.floor(right)
     require(part != 0, f"the right-hand side of cut {number} is whole")
-    cut: Inequality = {}, 1
+    coefficients: Coefficients = {}
+    least: Number = 1
     rows: list[Inequality] = []
     for a, grain, limit, terms, side, row in distances:
         if side == 0 or a == 0:
             continue
         unit = grain or 1
         gamma = rounding_coefficient(Fraction(a * side * unit), grain > 0, part) / unit
-        cut = minus(cut, (terms, limit), -side * gamma)
+        for j, c in terms.items():
+            coefficients[j] = coefficients.get(j, 0) + side * gamma * c
+        least += side * gamma * limit
         if row:
             rows.append(minus(({}, 0), (terms, limit), -side * (Fraction(1) / unit + gamma)))
     require(
-        implied(checker.cut_rows[number], cut, rows, where),
+        implied(checker.cut_rows[number], (coefficients, least), rows, where),
         f"cut {number} does not follow from its multipliers",
     )
 
@@ -777,7 +791,7 @@ def check_cover(checker: Checker, number: int, where: Box) -> None:
     rule = checker.problem.rows[evidence["row"]]
     limit, sign = (rule.most, 1) if evidence["limit"] else (rule.least, -1)
     require(limit is not None, f"cut {number} uses a limit that is not there")
-    fixed = {column: (side, value) for column, side, value in cut_premises(cut)}
+    fixed = {column: (side, value) for column, side, value in measured_from(cut)}
     weights: dict[int, int] = {}
     room: Number = sign * limit
     for j, c in zip(rule.columns, rule.coefficients, strict=True):

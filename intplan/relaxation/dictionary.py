@@ -289,7 +289,7 @@ class Dictionary:
     # ------------------------------------------------------------------ bounds and rows
 
     def set_bound(self, variable: int, least: float, most: float) -> None:
-        """Give one variable new bounds; a non-basic one moves along with the bound it sits at."""
+        """Give one variable tighter bounds; a non-basic one moves with the bound it sits at."""
         place = self.place.item(variable)
         if place >= 0:
             self.basic_least[place] = least
@@ -310,7 +310,7 @@ class Dictionary:
             self._shift((new - old) * self.table[:, column])
 
     def set_bounds(self, variables: Iterable[int], least: np.ndarray, most: np.ndarray) -> None:
-        """Give several activities the bounds ``least[j], most[j]``."""
+        """Give several activities the tighter bounds ``least[j], most[j]``."""
         for j in variables:
             self.set_bound(j, least.item(j), most.item(j))
 

@@ -15,7 +15,6 @@ from intplan.search.rounding import Rounder
 from intplan.search.tightening import Propagator
 from intplan.sheet.problem import Problem
 
-
 DIVE_AFTER = 12  # nodes between the root's dive and the next one
 
 

@@ -74,6 +74,7 @@ class NodeWork:
         self.dictionary = dictionary
         self.bounds = bounds
         self.steps = steps
+        self._proof: Proof | None = None  # of the bound, where it is better than the inherited
         self._closure_of: tuple[Proof, dict[str, Any]] | None = None
 
     # ------------------------------------------------------------------ the steps in order
@@ -177,7 +178,8 @@ class NodeWork:
                 continue
             if context.best.ties(proof.bound) and self._settle_tie(proof, "beaten"):
                 return None
-            self.bound = max(self.bound, proof.bound)
+            if proof.bound > self.bound:
+                self.bound, self._proof = proof.bound, proof
             return proof
         return self.solve_exactly()
 
@@ -451,6 +453,11 @@ class NodeWork:
         """Record that the node is closed by a proof."""
         bound = proof.bound if proof.weight else math.inf
         self._finish(outcome, bound, self._closure(proof))
+
+    def leave(self) -> None:
+        """Record what is known of a node whose work was broken off."""
+        if self._proof is not None and not self.closed:
+            self._finish("waiting", self.bound, self._closure(self._proof))
 
     def _keep_open(self, proof: Proof) -> None:
         self._finish("split", self.bound, self._closure(proof))

@@ -34,7 +34,9 @@ def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> b
     dictionary, bounds = start.copy(), bounds.copy()
     before = dictionary.pivots
     found = False
-    while not context.limits.out_of_time():
+    for _ in range(dictionary.columns):  # activities without a bound could climb for ever
+        if context.limits.out_of_time():
+            break
         rows = _fractional_rows(dictionary, context.problem.whole)
         x = dictionary.activities()
         if not len(rows):

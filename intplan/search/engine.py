@@ -146,7 +146,7 @@ class Search:
         self.numbered = 0
         self.open_bound = math.inf  # least bound of nodes left open for good
         self.ended_by: str | None = None
-        self._current: Node | None = None
+        self._current: Node | RootWork | None = None  # what is being solved
 
     # ------------------------------------------------------------------ the whole run
 
@@ -176,6 +176,7 @@ class Search:
             return self._unbounded(_whole_direction(found.direction))
         except Stopped:
             self.ended_by = self.limits.reached(self.context.nodes) or "interrupt"
+            root.leave()
         return self._result()
 
     def _explore(self, node: Node | None) -> None:
@@ -208,7 +209,9 @@ class Search:
         started = perf_counter()
         self.context.nodes = 1
         trials = self.context.pivots
+        self._current = root
         split = root.develop_root()
+        self._current = None
         made = root.dictionary.pivots
         self.context.pivots += made
         entry = self.tree.nodes[0]

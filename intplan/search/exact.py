@@ -141,7 +141,9 @@ class _ExactDictionary:
 
     def point(self) -> list[Fraction]:
         point: list[Fraction] = [Fraction(0)] * self.columns
-        for variable, value in (*zip(self.nonbasic, self.at), *zip(self.basic, self.values())):
+        placed = zip(self.nonbasic, self.at, strict=True)
+        solved = zip(self.basic, self.values()[:-1], strict=True)
+        for variable, value in (*placed, *solved):
             if variable < self.columns:
                 point[variable] = Fraction(value)
         return point
@@ -202,7 +204,7 @@ class _ExactDictionary:
         n = self.columns
         return {
             variable - n: Fraction(entry, self.denominator)
-            for variable, entry in zip(self.nonbasic, entries)
+            for variable, entry in zip(self.nonbasic, entries, strict=False)
             if variable >= n and entry != 0
         }
 

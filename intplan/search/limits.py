@@ -55,7 +55,9 @@ class Limits:
         """Tell whether to leave a long computation: no time left, or an interrupt."""
         return self.reached(-1) is not None
 
-    def report(self, value: Callable[[], Number | None], bound: Callable[[], Number | None]) -> None:
+    def report(
+        self, value: Callable[[], Number | None], bound: Callable[[], Number | None]
+    ) -> None:
         """Tell `progress` where the search stands, if it is time to."""
         if self.progress is None:
             return

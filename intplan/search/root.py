@@ -27,6 +27,7 @@ CUTS_A_ROUND = 20
 STALL = 0.02  # a round that adds less than this share of the gain so far is a stalled one
 PATIENCE = 2  # stalled rounds in a row that end the cutting
 LARGE = 2.0**53  # whole numbers beyond this may be rounded as doubles
+COARSE = 20  # bits of a rule's integers up to which its whole value is of use to a cut
 TIGHT = 0.1  # room, next to a rule's value, up to which a cover cut is sought
 SLACK_CUT = 1e-6  # room at which a cut no longer binds
 
@@ -157,10 +158,9 @@ class RootWork(NodeWork):
             if cut is None:
                 cut = gomory_cut(rounding, dictionary, row, x, bounds, leaning)
             candidates.append(cut)
-        whole = context.problem.whole
         for number in self._tight_rules():
             row = context.problem.rows[number]
-            candidates += [cover_cut(number, row, s, x, bounds, whole) for s in (0, 1)]
+            candidates += [cover_cut(rounding, number, row, s, x, bounds) for s in (0, 1)]
         chosen = choose([c for c in candidates if c is not None], CUTS_A_ROUND)
         if not chosen:
             return np.arange(0)
@@ -207,10 +207,11 @@ class RootWork(NodeWork):
         grain = np.zeros(context.rows.count)
         for i, row in enumerate(problem.rows):
             if row.columns and problem.whole[list(row.columns)].all():
-                grain[i] = 2.0**-row.shift
+                grain[i] = 2.0**-row.shift if row.shift < COARSE else 0.0
         return Rounding(
-            context.rows, problem.whole, grain, context.prover.reach, context.prover.open
-        )
+            context.rows, problem.whole, grain, context.prover.reach, context.prover.open,
+            (problem.least, problem.most),
+        )  # fmt: skip
 
     def _drop_slack_cuts(self) -> None:
         """Let cuts that do not bind leave the dictionary."""

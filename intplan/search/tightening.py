@@ -53,6 +53,11 @@ class Bounds:
         (self.most if side else self.least)[column] = value
         self.leans[side, column] = leans
 
+    def values(self, numbers: np.ndarray) -> np.ndarray:
+        """Return the values of the bounds with the numbers ``2 * column + side``, (k,)."""
+        columns = numbers >> 1
+        return np.where(numbers & 1, self.most[columns], self.least[columns])
+
 
 class Propagator:
     """Bound propagation over the rules.

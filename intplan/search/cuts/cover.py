@@ -21,6 +21,7 @@ from typing import NamedTuple
 import numpy as np
 
 from intplan.search.cuts.candidate import Candidate
+from intplan.search.cuts.gomory import Rounding
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import ExactRow, Number
 
@@ -37,18 +38,19 @@ class Item(NamedTuple):
 
 
 def cover_cut(
-    number: int, row: ExactRow, limit: int, x: np.ndarray, bounds: Bounds, whole: np.ndarray
+    rounding: Rounding, number: int, row: ExactRow, limit: int, x: np.ndarray, bounds: Bounds
 ) -> Candidate | None:
     """Return a violated lifted cover cut of one limit of one rule, or None.
 
     Parameters
     ----------
+    rounding : what is known of the problem
     number, row : the rule
     limit : 0 for its least, 1 for its most
     x : (columns,) the relaxation's point
     bounds : bounds under which the cut will be used, or wider ones
     """
-    knapsack = _knapsack(row, limit, bounds, whole)
+    knapsack = _knapsack(row, limit, bounds, rounding.whole)
     if knapsack is None:
         return None
     items, capacity, others = knapsack
@@ -76,24 +78,26 @@ def cover_cut(
             lifted, right = inequality
             if sum(c * values[i.column] for i, c in lifted) <= right + FULL:
                 continue
-            candidate = _candidate(number, limit, inequality, cover, others, len(x), bounds)
+            candidate = _candidate(
+                rounding, number, limit, inequality, cover, others, bounds
+            )
             if candidate.measure(x) and (best is None or candidate.efficacy > best.efficacy):
                 best = candidate
     return best
 
 
 def _candidate(
+    rounding: Rounding,
     number: int,
     limit: int,
     inequality: tuple[list[tuple[Item, int]], int],
     cover: list[Item],
     others: np.ndarray,
-    columns: int,
     bounds: Bounds,
 ) -> Candidate:
     """Write an inequality over items as a row over the activities."""
     lifted, right = inequality
-    coefficients = np.zeros(columns)
+    coefficients = np.zeros(len(rounding.whole))
     least = -right
     for item, coefficient in lifted:
         if item.flipped:
@@ -101,6 +105,9 @@ def _candidate(
             least += coefficient
         else:
             coefficients[item.column] = -coefficient
+    touched = coefficients != 0
+    touched[others >> 1] = True
+    box, leans = rounding.box(touched, bounds)
     shift = max(coefficient for _, coefficient in lifted).bit_length() - 1
     scale = 2.0**-shift
     return Candidate(
@@ -108,15 +115,10 @@ def _candidate(
         {"row": number, "limit": limit, "cover": [i.column for i in cover],
          "lifted": [(i.column, c) for i, c in lifted],
          "flipped": [i.column for i, _ in lifted if i.flipped],
-         "bounds": others, "values": _values(others, bounds)},
-        bool(bounds.leans[others & 1, others >> 1].any()),
+         "bounds": others, "values": bounds.values(others), **box},
+        leans,
         shift,
     )  # fmt: skip
-
-
-def _values(numbers: np.ndarray, bounds: Bounds) -> np.ndarray:
-    columns = numbers >> 1
-    return np.where(numbers & 1, bounds.most[columns], bounds.least[columns])
 
 
 def _knapsack(

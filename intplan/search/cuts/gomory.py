@@ -42,6 +42,7 @@ class Rounding:
     grain : (rows,) the row values of all-whole plans are multiples of this, 0 if of nothing
     reach : sum over the bounded activities of their greatest size
     open : activities without both bounds
+    own : the sheet's own bounds, a pair of (columns,)
     """
 
     rows: RowStore
@@ -49,6 +50,22 @@ class Rounding:
     grain: np.ndarray
     reach: float
     open: np.ndarray
+    own: tuple[np.ndarray, np.ndarray]
+
+    def box(
+        self, touched: np.ndarray, bounds: Bounds
+    ) -> tuple[dict[str, np.ndarray], bool]:
+        """Return, as evidence, the bounds of some activities that are not the sheet's own.
+
+        Errors are bounded over the box of the activities touched, (columns,) bool, so a cut
+        leans on these bounds even where it measures no distance from them.  Returned as well:
+        whether any of them leans on the cut-off.
+        """
+        least = touched & (bounds.least != self.own[0])
+        most = touched & (bounds.most != self.own[1])
+        leans = bool((least & bounds.leans[0]).any() or (most & bounds.leans[1]).any())
+        numbers = np.concatenate((2 * least.nonzero()[0], 2 * most.nonzero()[0] + 1))
+        return {"box": numbers, "box_values": bounds.values(numbers)}, leans
 
 
 def gomory_cut(
@@ -127,10 +144,11 @@ def gomory_cut(
     if bare is None:
         return None
     coefficients, least = bare
-    used_bounds, leans = bounds_used(live, at_least, sides, bounds)
+    box, leans = rounding.box(matrix.any(axis=0), bounds)
     candidate = Candidate(
         "gomory", coefficients, least,
-        {"rows": numbers, "multipliers": multipliers, "row_sides": row_sides, **used_bounds},
+        {"rows": numbers, "multipliers": multipliers, "row_sides": row_sides, **box,
+         **bounds_used(live, at_least, sides, bounds)},
         leans or bool(leaning_rows[numbers].any()),
     )  # fmt: skip
     return candidate if candidate.measure(x) else None
@@ -138,17 +156,15 @@ def gomory_cut(
 
 def bounds_used(
     live: np.ndarray, at_least: np.ndarray, sides: np.ndarray, bounds: Bounds
-) -> tuple[dict[str, np.ndarray], bool]:
-    """Return the bounds that distances are measured from, as evidence, and whether any leans.
+) -> dict[str, np.ndarray]:
+    """Return the bounds that distances are measured from, as evidence.
 
     ``bounds`` holds the numbers ``2 * column + side`` and ``values`` what they are; a fixed
     activity, whose distance is zero, appears with both.
     """
     fixed = live[sides == 0]
     numbers = np.concatenate((2 * live + ~at_least, 2 * fixed + at_least[sides == 0]))
-    columns, ends = numbers >> 1, numbers & 1
-    values = np.where(ends, bounds.most[columns], bounds.least[columns])
-    return {"bounds": numbers, "values": values}, bool(bounds.leans[ends, columns].any())
+    return {"bounds": numbers, "values": bounds.values(numbers)}
 
 
 def _nearer_least(x: np.ndarray, least: np.ndarray, most: np.ndarray) -> np.ndarray:

@@ -136,12 +136,16 @@ def _assemble(
     shift = largest.bit_length() - 1
     scale = 2.0**-shift
     weights, unit, shifts = origin
-    used_bounds, leans = bounds_used(live, at_least, sides, bounds)
+    touched = np.zeros(integers.shape[1], bool)
+    touched[live] = True
+    box, leans = rounding.box(touched, bounds)
     candidate = Candidate(
         "gomory", coefficients * scale, least * scale,
         {"rows": numbers,
-         "multipliers": [f"{int(w) << int(s)}/{unit}" for w, s in zip(weights, shifts, strict=True)],
-         "row_sides": row_sides, **used_bounds},
+         "multipliers": [
+             f"{int(w) << int(s)}/{unit}" for w, s in zip(weights, shifts, strict=True)
+         ],
+         "row_sides": row_sides, **box, **bounds_used(live, at_least, sides, bounds)},
         leans or bool(leaning_rows[numbers].any()),
         shift,
     )  # fmt: skip
