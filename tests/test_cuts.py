@@ -19,7 +19,7 @@ from intplan.relaxation.start import cold_start
 from intplan.search import Cut, branch_and_cut, root
 from intplan.search.cuts.candidate import EFFICACY, PARALLEL, Candidate, choose
 from intplan.search.cuts.cover import cover_cut
-from intplan.search.cuts.gomory import Rounding, gomory_cut
+from intplan.search.cuts.gomory import Rounding, gomory_cuts
 from intplan.search.cuts.integers import integer_gomory_cut
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import Problem
@@ -182,15 +182,22 @@ def gomory_candidates(
     rounding = Rounding(rows, problem.whole, grain, reach, np.arange(0), own)
     x = dictionary.activities()
     leaning = np.zeros(rows.count, bool)
-    separate = integer_gomory_cut if exactly else gomory_cut
-    for row, variable in enumerate(dictionary.basic.tolist()):
-        value = dictionary.values[row]
-        if variable < dictionary.columns and problem.whole[variable]:
-            if abs(value - round(value)) < 1e-6:
-                continue
-            cut = separate(rounding, dictionary, row, x, bounds, leaning)
+    values = dictionary.values
+    rows = [
+        row
+        for row, variable in enumerate(dictionary.basic.tolist())
+        if variable < dictionary.columns
+        and problem.whole[variable]
+        and abs(values[row] - round(values[row])) >= 1e-6
+    ]
+    if exactly:
+        for row in rows:
+            cut = integer_gomory_cut(rounding, dictionary, row, x, bounds, leaning)
             if cut is not None:
                 yield cut, x
+    elif rows:
+        for cut in gomory_cuts(rounding, dictionary, np.array(rows), x, bounds, leaning):
+            yield cut, x
 
 
 @pytest.mark.parametrize("exactly", [False, True], ids=["doubles", "integers"])
@@ -206,7 +213,7 @@ def test_gomory_cuts_of_boxed_problems(exactly: bool) -> None:
             assert not len(cuts_off(columns, cut.coefficients, cut.least, plans)), seed
             assert float(cut.coefficients @ x) < cut.least
             assert cut.efficacy > EFFICACY
-            assert not cut.leans
+            assert not cut.explain()[1]
     assert made > 100
 
 
@@ -219,7 +226,7 @@ def test_gomory_cuts_in_integers_are_no_weaker() -> None:
             gomory_candidates(problem, True), gomory_candidates(problem, False), strict=False
         )
         for (exact, x), (rounded, _) in pairs:
-            if exact.evidence["rows"].tolist() != rounded.evidence["rows"].tolist():
+            if exact.explain()[0]["rows"].tolist() != rounded.explain()[0]["rows"].tolist():
                 break
             compared += 1
             assert exact.efficacy >= rounded.efficacy - 1e-9 * (1 + np.abs(x).max())
@@ -311,7 +318,8 @@ def test_cover_cuts_against_every_choice(limit: int) -> None:
         if cut is None:
             continue
         made += 1
-        lifted += len(cut.evidence["lifted"]) > len(cut.evidence["cover"])
+        evidence, _ = cut.explain()
+        lifted += len(evidence["lifted"]) > len(evidence["cover"])
         assert not len(cuts_off(range(n), cut.coefficients, cut.least, plans_of(problem))), seed
         assert float(cut.coefficients @ x) < cut.least
     assert made > 60
@@ -338,7 +346,7 @@ def test_covers_leave_other_activities_their_room() -> None:
     cut = cover_of(problem, 1, np.array([1.0, 0.5, 0.6, 1.0]))
     assert cut is not None
     assert not len(cuts_off(range(4), cut.coefficients, cut.least, plans_of(problem)))
-    assert cut.evidence["bounds"].tolist() == [6]
+    assert cut.explain()[0]["bounds"].tolist() == [6]
     assert cut.coefficients[3] == 0
 
 
@@ -365,11 +373,16 @@ def test_the_published_assignment_is_nearly_closed_by_its_root() -> None:
 # ---------------------------------------------------------------------- the choice
 
 
+def nothing() -> tuple[dict[str, Any], bool]:
+    """Return no evidence, which the choice does not look at."""
+    return {}, False
+
+
 def test_the_choice_prefers_deep_cuts_and_drops_parallel_ones() -> None:
     x = np.zeros(3)
 
     def candidate(coefficients: list[float], least: float) -> Candidate:
-        made = Candidate("gomory", np.array(coefficients), least, {}, False)
+        made = Candidate("gomory", np.array(coefficients), least, nothing)
         assert made.measure(x)
         return made
 
@@ -382,8 +395,8 @@ def test_the_choice_prefers_deep_cuts_and_drops_parallel_ones() -> None:
     cosine = float(twin.coefficients @ deep.coefficients) / np.linalg.norm(twin.coefficients)
     assert cosine > PARALLEL
     assert third.efficacy == 0.25
-    assert not Candidate("gomory", np.array([1.0, 0, 0]), 0.0, {}, False).measure(x)
-    assert not Candidate("gomory", np.zeros(3), 1.0, {}, False).measure(x)
+    assert not Candidate("gomory", np.array([1.0, 0, 0]), 0.0, nothing).measure(x)
+    assert not Candidate("gomory", np.zeros(3), 1.0, nothing).measure(x)
 
 
 def test_cuts_are_kept_as_the_rows_they_are(

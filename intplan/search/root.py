@@ -13,7 +13,7 @@ from intplan.relaxation.start import cold_start
 from intplan.search.context import Context
 from intplan.search.cuts.candidate import Candidate, choose
 from intplan.search.cuts.cover import cover_cut
-from intplan.search.cuts.gomory import Rounding, gomory_cut
+from intplan.search.cuts.gomory import Rounding, gomory_cuts
 from intplan.search.cuts.integers import integer_gomory_cut
 from intplan.search.develop import NodeWork, Split
 from intplan.search.evidence import Proof
@@ -149,15 +149,16 @@ class RootWork(NodeWork):
         )
         values = dictionary.values[rows]
         order = (-np.abs(values - np.floor(values) - 0.5)).argsort(kind="stable")[::-1]
-        exactly = context.problem.cost_step is None
+        rows = rows[order[:GOMORY_ROWS]]
         candidates: list[Candidate | None] = []
-        for row in rows[order[:GOMORY_ROWS]].tolist():
-            cut = None
-            if exactly:
-                cut = integer_gomory_cut(rounding, dictionary, row, x, bounds, leaning)
-            if cut is None:
-                cut = gomory_cut(rounding, dictionary, row, x, bounds, leaning)
-            candidates.append(cut)
+        if context.problem.cost_step is None:
+            exact = [
+                integer_gomory_cut(rounding, dictionary, row, x, bounds, leaning)
+                for row in rows.tolist()
+            ]
+            rows = rows[[cut is None for cut in exact]]
+            candidates += exact
+        candidates += gomory_cuts(rounding, dictionary, rows, x, bounds, leaning)
         for number in self._tight_rules():
             row = context.problem.rows[number]
             candidates += [cover_cut(rounding, number, row, s, x, bounds) for s in (0, 1)]
@@ -166,11 +167,12 @@ class RootWork(NodeWork):
             return np.arange(0)
         for candidate in chosen:
             columns = candidate.coefficients.nonzero()[0]
+            evidence, leans = candidate.explain()
             context.record.note_cut(
                 Cut(
                     candidate.kind, tuple(columns.tolist()),
                     tuple(candidate.coefficients[columns].tolist()), candidate.least, math.inf,
-                    candidate.leans, candidate.evidence,
+                    leans, evidence,
                 )
             )  # fmt: skip
         least = np.array([c.least for c in chosen])

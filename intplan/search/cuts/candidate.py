@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
@@ -20,8 +21,8 @@ class Candidate:
     kind : "gomory" or "cover"
     coefficients : (columns,) doubles, exact as given
     least : double, exact as given
-    evidence : what it was derived from
-    leans : whether a bound it used leans on the cut-off
+    explain : returns the evidence, what it was derived from, and whether a bound it used leans on
+        the cut-off; called for the cuts that are chosen
     shift : the row times ``2**shift`` is in integers, -1 where that is not known
     efficacy : distance from the relaxation's point
     """
@@ -29,8 +30,7 @@ class Candidate:
     kind: str
     coefficients: np.ndarray
     least: float
-    evidence: dict[str, Any]
-    leans: bool
+    explain: Callable[[], tuple[dict[str, Any], bool]]
     shift: int = -1
     efficacy: float = 0.0
 

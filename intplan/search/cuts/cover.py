@@ -16,7 +16,7 @@ from __future__ import annotations
 import math
 from bisect import bisect_right
 from fractions import Fraction
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
@@ -75,9 +75,6 @@ def cover_cut(
             )
             if inequality is None:
                 continue
-            lifted, right = inequality
-            if sum(c * values[i.column] for i, c in lifted) <= right + FULL:
-                continue
             candidate = _candidate(
                 rounding, number, limit, inequality, cover, others, bounds
             )
@@ -105,20 +102,22 @@ def _candidate(
             least += coefficient
         else:
             coefficients[item.column] = -coefficient
-    touched = coefficients != 0
-    touched[others >> 1] = True
-    box, leans = rounding.box(touched, bounds)
     shift = max(coefficient for _, coefficient in lifted).bit_length() - 1
     scale = 2.0**-shift
-    return Candidate(
-        "cover", coefficients * scale, least * scale,
-        {"row": number, "limit": limit, "cover": [i.column for i in cover],
-         "lifted": [(i.column, c) for i, c in lifted],
-         "flipped": [i.column for i, _ in lifted if i.flipped],
-         "bounds": others, "values": bounds.values(others), **box},
-        leans,
-        shift,
-    )  # fmt: skip
+
+    def explain() -> tuple[dict[str, Any], bool]:
+        touched = coefficients != 0
+        touched[others >> 1] = True
+        box, leans = rounding.box(touched, bounds)
+        evidence = {
+            "row": number, "limit": limit, "cover": [i.column for i in cover],
+            "lifted": [(i.column, c) for i, c in lifted],
+            "flipped": [i.column for i, _ in lifted if i.flipped],
+            "bounds": others, "values": bounds.values(others), **box,
+        }  # fmt: skip
+        return evidence, leans
+
+    return Candidate("cover", coefficients * scale, least * scale, explain, shift)
 
 
 def _knapsack(
@@ -203,7 +202,8 @@ def _lift(
 
     Returns
     -------
-    (item, coefficient) pairs and the right-hand side, or None if too little is left of the cover.
+    (item, coefficient) pairs and the right-hand side, or None if too little is left of the cover
+    or the point does not violate it.
     First items with a value are lifted up, then the fixed ones down, then the rest up; the least
     weight for each left-hand value gives every coefficient.
     """
@@ -240,6 +240,8 @@ def _lift(
             right += coefficient
             lifted.append((item, coefficient))
             _admit(lightest, item.weight, coefficient)
+    if sum(c * values[i.column] for i, c in lifted) <= right + FULL:
+        return None  # the rest, at 0, adds nothing to it
     for item in rest[len(taken) :]:
         lift_up(item)
     return lifted, right

@@ -16,6 +16,8 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import partial
+from typing import Any
 
 import numpy as np
 
@@ -68,90 +70,182 @@ class Rounding:
         return {"box": numbers, "box_values": bounds.values(numbers)}, leans
 
 
-def gomory_cut(
+def gomory_cuts(
     rounding: Rounding,
     dictionary: Dictionary,
-    row: int,
+    rows: np.ndarray,
     x: np.ndarray,
     bounds: Bounds,
     leaning_rows: np.ndarray,
-) -> Candidate | None:
-    """Return the cut of one dictionary row whose basic whole activity has a fractional value.
+) -> list[Candidate]:
+    """Return the cuts of dictionary rows whose basic whole activity has a fractional value.
+
+    Rows that give no cut that is violated, safe and well scaled are passed over.  All rows are
+    worked on at once, as matrices with a line a row.
 
     Parameters
     ----------
-    row : the dictionary row
+    rows : (k,) dictionary rows
     x : (columns,) the dictionary's point
-    bounds : bounds under which the cut will be used, or wider ones
+    bounds : bounds under which the cuts will be used, or wider ones
     leaning_rows : (rows,) bool, rows that lean on the cut-off
+    """
+    n = dictionary.columns
+    entries = dictionary.entries[rows]
+    entries = np.where(np.abs(entries) > TINY, entries, 0.0)
+    used = ((dictionary.nonbasic >= n) & entries.any(axis=0)).nonzero()[0]
+    base = _Base.of(rounding, dictionary, used, x, bounds)
+    work = _combine(base, entries[:, used])
+    if not len(work.multipliers):
+        return []
+    coefficients, least, slip = _round(base, work)
+    cuts = []
+    for i in range(len(least)):
+        loss = 0.0
+        if len(rounding.open):
+            loss = _settle_open(base, work, i, coefficients[i], slip.item(i))
+        bare = None if loss is None else _trim(coefficients[i], least.item(i) - loss, bounds)
+        if bare is None:
+            continue
+        candidate = Candidate("gomory", *bare, partial(_explain, base, work, i, leaning_rows))
+        if candidate.measure(x):
+            cuts.append(candidate)
+    return cuts
+
+
+@dataclass
+class _Base:
+    """What all combinations of one round share.
+
+    Attributes
+    ----------
+    numbers, matrix, limits, row_sides : (u, ...) the rows whose values are not basic, what they
+        are at, and the side they are on
+    at_least, anchors, sides : (columns,) which bound distances are measured from, its value (0
+        where there is none), and the sign of the distance, 0 if it is fixed
+    grounded : (columns,) whether there is such a bound
+    """
+
+    rounding: Rounding
+    bounds: Bounds
+    numbers: np.ndarray
+    matrix: np.ndarray
+    limits: np.ndarray
+    row_sides: np.ndarray
+    at_least: np.ndarray
+    anchors: np.ndarray
+    sides: np.ndarray
+    grounded: np.ndarray
+
+    @classmethod
+    def of(
+        cls,
+        rounding: Rounding,
+        dictionary: Dictionary,
+        used: np.ndarray,
+        x: np.ndarray,
+        bounds: Bounds,
+    ) -> _Base:
+        """Gather it for the non-basic columns used."""
+        numbers = dictionary.nonbasic[used] - dictionary.columns
+        at_least = nearer_least(x, bounds)
+        anchors = np.where(at_least, bounds.least, bounds.most)
+        grounded = np.isfinite(anchors)
+        sides = np.where(at_least, 1.0, -1.0)
+        sides[bounds.least == bounds.most] = 0.0
+        return cls(
+            rounding, bounds, numbers, rounding.rows.matrix[numbers], dictionary.at[used],
+            dictionary.side[used], at_least, np.where(grounded, anchors, 0.0), sides, grounded,
+        )  # fmt: skip
+
+
+@dataclass
+class _Combinations:
+    """Combinations of rows in distances, one a line.
+
+    Attributes
+    ----------
+    multipliers : (k, u)
+    own : (k, columns) coefficients on the activities, 0 where `live` is false
+    live : (k, columns) coefficients beyond their error
+    error : (k,) of the coefficients
+    right_error : (k,) of the right-hand side
+    fraction : (k,) fractional part of the right-hand side
+    near : (k,) its distance from 0 and 1
+    """
+
+    multipliers: np.ndarray
+    own: np.ndarray
+    live: np.ndarray
+    error: np.ndarray
+    right_error: np.ndarray
+    fraction: np.ndarray
+    near: np.ndarray
+
+    def only(self, chosen: np.ndarray) -> _Combinations:
+        """Return some of them."""
+        return _Combinations(
+            self.multipliers[chosen], self.own[chosen], self.live[chosen], self.error[chosen],
+            self.right_error[chosen], self.fraction[chosen], self.near[chosen],
+        )  # fmt: skip
+
+
+def _combine(base: _Base, multipliers: np.ndarray) -> _Combinations:
+    """Add the rows up; leave out combinations without a bound to measure from or a fraction."""
+    own = -(multipliers @ base.matrix)
+    count = multipliers.shape[1] + own.shape[1]
+    error = (multipliers.shape[1] + 3) * ROUNDING * 2.0 * np.abs(multipliers).sum(axis=1)
+    live = np.abs(own) > error[:, None]
+    own = np.where(live, own, 0.0)
+    right = -(multipliers @ base.limits + own @ base.anchors)
+    size = np.abs(multipliers) @ np.abs(base.limits) + np.abs(own) @ np.abs(base.anchors)
+    right_error = error * base.rounding.reach + (count + 3) * ROUNDING * size
+    fraction = right - np.floor(right)
+    near = np.minimum(fraction, 1.0 - fraction)
+    good = (near >= AWAY) & (right_error <= AWAY * 1e-3)
+    good &= ~(live & ~base.grounded).any(axis=1)
+    work = _Combinations(multipliers, own, live, error, right_error, fraction, near)
+    return work.only(good.nonzero()[0])
+
+
+def _round(base: _Base, work: _Combinations) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return the rounded combinations as rows over the activities.
 
     Returns
     -------
-    Candidate or None
-        None if the row gives no cut that is violated, safe and well scaled.
+    coefficients : (k, columns)
+    least : (k,) what rounding errors may have added at activities with both bounds is taken off
+    slip : (k,) the error that each coefficient may have
     """
-    n = dictionary.columns
-    entries = dictionary.entries[row]
-    used = ((dictionary.nonbasic >= n) & (np.abs(entries) > TINY)).nonzero()[0]
-    numbers = dictionary.nonbasic[used] - n
-    multipliers = entries[used]
-    store = rounding.rows
-    row_sides = dictionary.side[used]
-    limits = dictionary.at[used]
-    matrix = store.matrix[numbers]
-    own = -(multipliers @ matrix)
-    weight = float(np.abs(multipliers).sum())
-    error = (len(used) + 3) * ROUNDING * 2.0 * weight
-    live = (np.abs(own) > error).nonzero()[0]
-    at_least = _nearer_least(x[live], bounds.least[live], bounds.most[live])
-    anchors = np.where(at_least, bounds.least[live], bounds.most[live])
-    if not np.isfinite(anchors).all():
-        return None
-    sides = np.where(at_least, 1.0, -1.0)
-    sides[bounds.least[live] == bounds.most[live]] = 0.0
-    terms = np.concatenate((multipliers * limits, own[live] * anchors))
-    right = -float(terms.sum())
-    right_error = (
-        error * rounding.reach + (len(terms) + 3) * ROUNDING * float(np.abs(terms).sum())
-    )
-    fraction = right - math.floor(right)
-    near = min(fraction, 1.0 - fraction)
-    if near < AWAY or right_error > AWAY * 1e-3:
-        return None
-    row_gamma = _rounded(
-        multipliers * row_sides, rounding.grain[numbers], fraction, error + right_error, near
-    )
-    own_gamma = _rounded(
-        own[live] * sides, rounding.whole[live] * 1.0, fraction, error + right_error, near
-    )
-    row_weights = row_gamma * row_sides
-    own_weights = own_gamma * sides
-    coefficients = row_weights @ matrix
-    coefficients[live] += own_weights
-    shifts = np.concatenate((row_weights * limits, own_weights * anchors))
-    least = 1.0 + float(shifts.sum())
-    spent = (len(shifts) + 4) * ROUNDING * (1.0 + float(np.abs(shifts).sum()))
-    spent += 4.0 * rounding.reach * error / near
-    slip = (len(used) + 4) * ROUNDING * (2.0 * float(np.abs(row_weights).sum()) + 1.0)
-    slip += (len(used) + 4) * ROUNDING * float(np.abs(own_weights).max(initial=0.0))
-    spent += slip * rounding.reach
-    if len(rounding.open):
-        loss = _settle_open(rounding, coefficients, own, error, slip, matrix, bounds)
-        if loss is None:
-            return None
-        spent += loss
-    bare = _trim(coefficients, least - spent * 1.001, bounds)
-    if bare is None:
-        return None
-    coefficients, least = bare
-    box, leans = rounding.box(matrix.any(axis=0), bounds)
-    candidate = Candidate(
-        "gomory", coefficients, least,
-        {"rows": numbers, "multipliers": multipliers, "row_sides": row_sides, **box,
-         **bounds_used(live, at_least, sides, bounds)},
-        leans or bool(leaning_rows[numbers].any()),
-    )  # fmt: skip
-    return candidate if candidate.measure(x) else None
+    rounding = base.rounding
+    row_gamma = _rounded(work.multipliers * base.row_sides, rounding.grain[base.numbers], work)
+    own_gamma = _rounded(work.own * base.sides, rounding.whole * 1.0, work)
+    row_weights = row_gamma * base.row_sides
+    own_weights = own_gamma * base.sides
+    coefficients = row_weights @ base.matrix + own_weights
+    least = 1.0 + row_weights @ base.limits + own_weights @ base.anchors
+    size = np.abs(row_weights) @ np.abs(base.limits) + np.abs(own_weights) @ np.abs(base.anchors)
+    count = sum(base.matrix.shape)
+    spent = (count + 4) * ROUNDING * (1.0 + size) + 4.0 * rounding.reach * work.error / work.near
+    weight = 2.0 * np.abs(row_weights).sum(axis=1) + np.abs(own_weights).max(axis=1, initial=0.0)
+    slip = (len(base.numbers) + 4) * ROUNDING * (weight + 1.0)
+    return coefficients, least - 1.001 * (spent + slip * rounding.reach), slip
+
+
+def _explain(
+    base: _Base, work: _Combinations, i: int, leaning_rows: np.ndarray
+) -> tuple[dict[str, Any], bool]:
+    """Return the evidence of one cut, and whether it leans on the cut-off."""
+    used = work.multipliers[i].nonzero()[0]
+    numbers = base.numbers[used]
+    box, leans = base.rounding.box(base.matrix[used].any(axis=0), base.bounds)
+    live = work.live[i].nonzero()[0]
+    evidence = {
+        "rows": numbers, "multipliers": work.multipliers[i, used],
+        "row_sides": base.row_sides[used], **box,
+        **bounds_used(live, base.at_least[live], base.sides[live], base.bounds),
+    }  # fmt: skip
+    return evidence, leans or bool(leaning_rows[numbers].any())
 
 
 def bounds_used(
@@ -167,52 +261,44 @@ def bounds_used(
     return {"bounds": numbers, "values": bounds.values(numbers)}
 
 
-def _nearer_least(x: np.ndarray, least: np.ndarray, most: np.ndarray) -> np.ndarray:
-    """Choose for each activity the bound to measure from: the nearer one."""
-    return x - least <= most - x
+def nearer_least(x: np.ndarray, bounds: Bounds) -> np.ndarray:
+    """Choose for each activity the bound to measure from, the nearer one: true for its least."""
+    return x - bounds.least <= bounds.most - x
 
 
-def _rounded(
-    a: np.ndarray, grain: np.ndarray, fraction: float, error: float, near: float
-) -> np.ndarray:
-    """Return the cut's coefficients on distances, rounded up by the error they may carry.
+def _rounded(a: np.ndarray, grain: np.ndarray, work: _Combinations) -> np.ndarray:
+    """Return the cuts' coefficients on distances, rounded up by the error they may carry.
 
     Parameters
     ----------
-    a : coefficients of the combination on distances, (k,)
-    grain : distances are multiples of this, 0 for divisible ones, (k,)
-    fraction : fractional part of the right-hand side
-    error : of the coefficients and the right-hand side together
-    near : distance of `fraction` from 0 and 1
+    a : (k, m) coefficients of the combinations on distances
+    grain : (m,) distances are multiples of this, 0 for divisible ones
     """
     stepped = grain > 0
     steps = np.where(stepped, grain, 1.0)
+    fraction, near = work.fraction[:, None], work.near[:, None]
     scaled = a * steps
     part = scaled - np.floor(scaled)
     divisible = np.where(a > 0, a / fraction, -a / (1.0 - fraction))
     whole = np.minimum(part / fraction, (1.0 - part) / (1.0 - fraction)) / steps
     gamma = np.where(stepped, whole, divisible)
+    error = (work.error + work.right_error)[:, None]
     gamma += (error / near + 4 * ROUNDING) * (1.0 / steps + gamma)
     gamma[a == 0] = 0.0
     return gamma
 
 
 def _settle_open(
-    rounding: Rounding,
-    coefficients: np.ndarray,
-    own: np.ndarray,
-    error: float,
-    slip: float,
-    matrix: np.ndarray,
-    bounds: Bounds,
+    base: _Base, work: _Combinations, i: int, coefficients: np.ndarray, slip: float
 ) -> float | None:
     """Raise coefficients of activities with one bound by their error; None if that cannot be."""
-    loss = 0.0
-    for j in rounding.open:
-        if not matrix[:, j].any():
+    bounds, loss = base.bounds, 0.0
+    touched = base.matrix[work.multipliers[i].nonzero()[0]].any(axis=0)
+    for j in base.rounding.open.tolist():
+        if not touched[j]:
             continue
         low, high = bounds.least.item(j), bounds.most.item(j)
-        if abs(own.item(j)) <= error or (low == -math.inf and high == math.inf):
+        if not work.live[i, j] or (low == -math.inf and high == math.inf):
             return None
         if high == math.inf:
             coefficients[j] += slip
@@ -222,7 +308,7 @@ def _settle_open(
             loss += 2.0 * slip * abs(high)
         else:
             loss += slip * max(abs(low), abs(high))
-    return loss
+    return 1.001 * loss
 
 
 def _trim(

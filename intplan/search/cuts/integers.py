@@ -10,13 +10,14 @@ integer arithmetic.
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary
 from intplan.search.arithmetic import common_denominator
 from intplan.search.cuts.candidate import Candidate
-from intplan.search.cuts.gomory import AWAY, SPREAD, TINY, Rounding, bounds_used
+from intplan.search.cuts.gomory import AWAY, SPREAD, TINY, Rounding, bounds_used, nearer_least
 from intplan.search.tightening import Bounds
 
 DENOMINATOR = 50_000  # greatest common denominator of the multipliers
@@ -35,7 +36,7 @@ def integer_gomory_cut(
 ) -> Candidate | None:
     """Return the exact cut of a dictionary row, or None where its numbers grow too large.
 
-    Parameters and meaning as `intplan.search.cuts.gomory.gomory_cut`.
+    Parameters and meaning as `intplan.search.cuts.gomory.gomory_cuts`, for one row.
     """
     n = dictionary.columns
     entries = dictionary.entries[row]
@@ -56,7 +57,7 @@ def integer_gomory_cut(
     own = -(whole_weights @ integers)
     row_sides = dictionary.side[used].astype(np.int64)
     live = own.nonzero()[0]
-    at_least = x[live] - bounds.least[live] <= bounds.most[live] - x[live]
+    at_least = nearer_least(x, bounds)[live]
     anchors = np.where(at_least, bounds.least[live], bounds.most[live])
     limits = np.ldexp(dictionary.at[used], shifts)
     if not (_whole(anchors) and _whole(limits)):
@@ -136,17 +137,17 @@ def _assemble(
     shift = largest.bit_length() - 1
     scale = 2.0**-shift
     weights, unit, shifts = origin
-    touched = np.zeros(integers.shape[1], bool)
-    touched[live] = True
-    box, leans = rounding.box(touched, bounds)
-    candidate = Candidate(
-        "gomory", coefficients * scale, least * scale,
-        {"rows": numbers,
-         "multipliers": [
-             f"{int(w) << int(s)}/{unit}" for w, s in zip(weights, shifts, strict=True)
-         ],
-         "row_sides": row_sides, **box, **bounds_used(live, at_least, sides, bounds)},
-        leans or bool(leaning_rows[numbers].any()),
-        shift,
-    )  # fmt: skip
+
+    def explain() -> tuple[dict[str, Any], bool]:
+        touched = np.zeros(integers.shape[1], bool)
+        touched[live] = True
+        box, leans = rounding.box(touched, bounds)
+        fractions = [f"{int(w) << int(s)}/{unit}" for w, s in zip(weights, shifts, strict=True)]
+        evidence = {
+            "rows": numbers, "multipliers": fractions, "row_sides": row_sides, **box,
+            **bounds_used(live, at_least, sides, bounds),
+        }  # fmt: skip
+        return evidence, leans or bool(leaning_rows[numbers].any())
+
+    candidate = Candidate("gomory", coefficients * scale, least * scale, explain, shift)
     return candidate if candidate.measure(x) else None
