@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import re
 from fractions import Fraction
-from pathlib import Path
 
 import pytest
 
@@ -15,12 +14,13 @@ from intplan.sheet.model import MOST_CELLS
 from intplan.sheet.names import LONGEST_NAME
 from intplan.sheet.numbers import MOST_BITS, MOST_DIGITS
 from intplan.sheet.reading import ACTIVITY_KEYS, MOST_BYTES, RULE_KEYS, SHEET_KEYS
+from tests import pages
 
-PAGE = (Path(__file__).parent.parent / "docs" / "sheet.md").read_text(encoding="utf-8")
+PAGE = pages.page("docs/sheet.md")
 
 
 def blocks(language):
-    return re.findall(rf"^```{language}\n(.*?)^```$", PAGE, re.DOTALL | re.MULTILINE)
+    return pages.blocks(PAGE, language)
 
 
 @pytest.mark.parametrize("text", blocks("toml"))
@@ -52,7 +52,9 @@ SLIPS = [
 ]
 
 
-@pytest.mark.parametrize("slip, line", zip(SLIPS, blocks("text")[0].splitlines(), strict=True))
+@pytest.mark.parametrize(
+    ("slip", "line"), list(zip(SLIPS, blocks("text")[0].splitlines(), strict=True))
+)
 def test_every_error_on_the_page_is_real(slip, line):
     with pytest.raises(SheetError) as caught:
         Sheet.parse(slip, "week.toml")
