@@ -720,7 +720,11 @@ def rounding_coefficient(a: Fraction, whole: bool, part: Fraction) -> Fraction:
 
 
 def check_gomory(checker: Checker, number: int, where: Box) -> None:
-    """Round the exact combination of rows again; the stored cut must follow from it."""
+    """Round the exact combination of rows again; the stored cut must follow from it.
+
+    The cut may be given in another form: with a multiple of the combination itself, which is an
+    equation, added to it.
+    """
     evidence = checker.cuts[number].evidence
     distances: list[Distance] = []
     own: Coefficients = {}
@@ -739,14 +743,16 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
     right = -sum((a * limit for a, _, limit, *_ in distances), Fraction(0))
     part = right - math.floor(right)
     require(part != 0, f"the right-hand side of cut {number} is whole")
+    plus = Fraction(rational(evidence["plus"], "multiple of the combination"))
     coefficients: Coefficients = {}
-    least: Number = 1
+    least: Number = 1 + plus * right
     rows: list[Inequality] = []
     for a, grain, limit, terms, side, row in distances:
         if side == 0 or a == 0:
             continue
         unit = grain or 1
         gamma = rounding_coefficient(Fraction(a * side * unit), grain > 0, part) / unit
+        gamma += plus * a * side
         for j, c in terms.items():
             coefficients[j] = coefficients.get(j, 0) + side * gamma * c
         least += side * gamma * limit

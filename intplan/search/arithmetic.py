@@ -9,14 +9,17 @@ from typing import NamedTuple
 
 import numpy as np
 
+from intplan.relaxation.dictionary import Dictionary
 from intplan.relaxation.rows import RowStore
 from intplan.search.exact import ExactAnswer, ExactSystem, solve_exactly
+from intplan.search.rational import solve_rationally
 from intplan.sheet.problem import ExactRow, Number, Problem, lowest
 
 SAFE = 2.0**52  # sums of integers below this are exact in doubles
 GUESS = 10**6  # greatest denominator guessed for a divisible amount
 MULTIPLIER_GUESS = 10**7  # greatest denominator guessed for multipliers
 MULTIPLIER_ACCURACY = 1e-10
+COARSE = 40  # bits of a row's integers up to which its basis is solved exactly
 
 
 class IntegerRow(NamedTuple):
@@ -242,6 +245,50 @@ class Arithmetic:
             i: Fraction(int(v), unit)
             for i, v in zip(numbers.tolist(), integers.tolist(), strict=True)
             if v
+        }
+
+    def cost_multipliers(self, dictionary: Dictionary) -> dict[int, Fraction] | None:
+        """Return the multipliers that a basis gives the cost, exactly; None if they are too long.
+
+        All rows at their limits must be known in integers.
+        """
+        cost = dict(self.problem.exact_cost)
+        return self._of_basis(dictionary, cost, 1 << self.problem.cost_shift)
+
+    def row_multipliers(self, dictionary: Dictionary, row: int) -> dict[int, Fraction] | None:
+        """Return the multipliers that leave only one basic variable beside non-basic ones."""
+        variable = dictionary.basic.item(row)
+        if variable < dictionary.columns:
+            return self._of_basis(dictionary, {variable: 1}, 1)
+        number = variable - dictionary.columns
+        if self.rows.shift[number] < 0:
+            return None
+        own = self.integer_row(number)
+        line = dict(zip(own.columns, own.coefficients, strict=True))
+        found = self._of_basis(dictionary, line, 1 << own.shift)
+        if found is not None:
+            found[number] = Fraction(-1)
+        return found
+
+    def _of_basis(
+        self, dictionary: Dictionary, line: dict[int, int], divisor: int
+    ) -> dict[int, Fraction] | None:
+        """Combine the rows at their limits to ``line / divisor`` on the basic activities."""
+        n = dictionary.columns
+        numbers = dictionary.nonbasic[dictionary.nonbasic >= n] - n
+        shifts = self.rows.shift[numbers]
+        if (shifts < 0).any() or (shifts > COARSE).any():
+            return None
+        columns = dictionary.basic[dictionary.basic < n]
+        matrix = np.ldexp(self.rows.matrix[numbers][:, columns].T, shifts).astype(np.int64)
+        solution = solve_rationally(matrix, [line.get(j, 0) for j in columns.tolist()])
+        if solution is None:
+            return None
+        numerators, unit = solution
+        return {
+            number: Fraction(y << shift, unit * divisor)
+            for number, shift, y in zip(numbers.tolist(), shifts.tolist(), numerators, strict=True)
+            if y
         }
 
     def solve_node(

@@ -170,6 +170,8 @@ class NodeWork:
                 )  # fmt: skip
                 if proof.bound > 0:
                     return self.close("empty", proof)
+                if fresh and self._settle_empty():
+                    return None
                 continue
             proof = self._cost_proof()
             if context.best.beats(proof.bound):
@@ -394,11 +396,13 @@ class NodeWork:
     # ------------------------------------------------------------------ exact arithmetic
 
     def _settle_tie(self, proof: Proof, outcome: str) -> bool:
-        """Close a node whose bound equals the best value, if guessed exact multipliers show it."""
+        """Close a node whose bound equals the best value, if exact multipliers show it."""
         context = self.context
         if (context.rows.shift[proof.rows] < 0).any():
             return False
         multipliers = context.arithmetic.guess_multipliers(proof.rows, proof.multipliers)
+        if multipliers is None:
+            multipliers = context.arithmetic.cost_multipliers(self.dictionary)
         if multipliers is None:
             return False
         bound = context.arithmetic.exact_bound(
@@ -409,6 +413,19 @@ class NodeWork:
         closure = context.record.exact_closure(1, multipliers, bound, self.bounds)
         self._finish(outcome, _rounded_down(bound), closure)
         return True
+
+    def _settle_empty(self) -> bool:
+        """Close a node whose failing row shows in rationals that it holds no plan."""
+        context, bounds = self.context, self.bounds
+        found = context.arithmetic.row_multipliers(self.dictionary, self.dictionary.failing_row)
+        for sign in (1, -1) if found is not None else ():
+            multipliers = {i: sign * y for i, y in found.items()}
+            proven = context.arithmetic.exact_bound(0, multipliers, bounds.least, bounds.most)
+            if proven is not None and proven > 0:
+                closure = context.record.exact_closure(0, multipliers, proven, bounds)
+                self._finish("empty", math.inf, closure)
+                return True
+        return False
 
     def solve_exactly(self) -> Split | None:
         """Settle the node in rationals: closed, or the activity to branch on."""

@@ -11,9 +11,11 @@ import numpy as np
 from intplan.relaxation.dictionary import Dictionary, Multipliers
 from intplan.relaxation.start import cold_start
 from intplan.search.context import Context
+from intplan.search.cuts.aggregation import Aggregator
 from intplan.search.cuts.candidate import Candidate, choose
 from intplan.search.cuts.cover import cover_cut
-from intplan.search.cuts.gomory import Rounding, gomory_cuts
+from intplan.search.cuts.distances import Limits, Rounding
+from intplan.search.cuts.gomory import deepest_combinations, gomory_cuts
 from intplan.search.cuts.integers import integer_gomory_cut
 from intplan.search.develop import NodeWork, Split
 from intplan.search.evidence import Proof
@@ -23,7 +25,7 @@ from intplan.sheet.problem import ExactRow, Problem
 
 CUT_ROUNDS = 12
 GOMORY_ROWS = 30  # dictionary rows tried in a round
-CUTS_A_ROUND = 20
+CUTS_A_ROUND = 30
 STALL = 0.02  # a round that adds less than this share of the gain so far is a stalled one
 PATIENCE = 2  # stalled rounds in a row that end the cutting
 LARGE = 2.0**53  # whole numbers beyond this may be rounded as doubles
@@ -42,6 +44,7 @@ class RootWork(NodeWork):
         steps: list[dict[str, Any]] = []
         super().__init__(context, 0, -math.inf, None, bounds, steps)
         self._knapsacks: set[int] | None = None
+        self._aggregator = Aggregator(context.rows, context.record.rules, problem.whole)
 
     def prepare(self) -> bool:
         """Tighten what the sheet states; False if that already shows that no plan exists.
@@ -141,28 +144,16 @@ class RootWork(NodeWork):
 
     def _separate(self, rows: np.ndarray) -> np.ndarray:
         """Find cuts at the dictionary's point and put the chosen ones into the store."""
-        context, dictionary, bounds = self.context, self.dictionary, self.bounds
-        x = dictionary.activities()
+        context = self.context
+        x = self.dictionary.activities()
         rounding = self._rounding()
         leaning = np.concatenate(
             (np.zeros(context.record.rules, bool), context.record.leaning_rows)
         )
-        values = dictionary.values[rows]
-        order = (-np.abs(values - np.floor(values) - 0.5)).argsort(kind="stable")[::-1]
-        rows = rows[order[:GOMORY_ROWS]]
-        candidates: list[Candidate | None] = []
-        if context.problem.cost_step is None:
-            exact = [
-                integer_gomory_cut(rounding, dictionary, row, x, bounds, leaning)
-                for row in rows.tolist()
-            ]
-            rows = rows[[cut is None for cut in exact]]
-            candidates += exact
-        candidates += gomory_cuts(rounding, dictionary, rows, x, bounds, leaning)
-        for number in self._tight_rules():
-            row = context.problem.rows[number]
-            candidates += [cover_cut(rounding, number, row, s, x, bounds) for s in (0, 1)]
-        chosen = choose([c for c in candidates if c is not None], CUTS_A_ROUND)
+        candidates = self._round_rows(rounding, rows, x, leaning)
+        candidates += self._round_sums(rounding, x, leaning)
+        candidates += self._covers(rounding, x)
+        chosen = choose(candidates, CUTS_A_ROUND)
         if not chosen:
             return np.arange(0)
         for candidate in chosen:
@@ -182,6 +173,62 @@ class RootWork(NodeWork):
             np.full(len(chosen), np.inf),
             np.array([c.shift for c in chosen]),
         )
+
+    def _round_rows(
+        self, rounding: Rounding, rows: np.ndarray, x: np.ndarray, leaning: np.ndarray
+    ) -> list[Candidate]:
+        """Round the dictionary rows of the activities furthest from whole values."""
+        dictionary = self.dictionary
+        values = dictionary.values[rows]
+        order = (-np.abs(values - np.floor(values) - 0.5)).argsort(kind="stable")[::-1]
+        limits, columns = Limits.of_dictionary(dictionary)
+        lines = dictionary.entries[rows[order[:GOMORY_ROWS]]][:, columns]
+        return self._rounded(rounding, limits, lines, x, leaning)
+
+    def _round_sums(
+        self, rounding: Rounding, x: np.ndarray, leaning: np.ndarray
+    ) -> list[Candidate]:
+        """Round sums of rules."""
+        if not self._aggregator.useful:
+            return []
+        limits = Limits.nearest(self.context.rows, x)
+        lines = self._aggregator.combinations(x, self.bounds, limits)
+        return self._rounded(rounding, limits, lines, x, leaning)
+
+    def _rounded(
+        self,
+        rounding: Rounding,
+        limits: Limits,
+        lines: np.ndarray,
+        x: np.ndarray,
+        leaning: np.ndarray,
+    ) -> list[Candidate]:
+        """Return the deepest rounding cuts of some combinations of rows.
+
+        Where the aim has no step they are made in integers or not at all: a cut weakened by a
+        rounding error leaves the bound a hair below the best plan, and with no step to bridge
+        the hair it costs more branching than it saves.
+        """
+        if self.context.problem.cost_step is not None:
+            return gomory_cuts(
+                rounding, limits, lines, x, self.bounds, leaning, 2 * CUTS_A_ROUND
+            )
+        best = deepest_combinations(rounding, limits, lines, x, self.bounds, CUTS_A_ROUND)
+        cuts = (
+            integer_gomory_cut(rounding, limits, line, x, self.bounds, leaning) for line in best
+        )
+        return [cut for cut in cuts if cut is not None]
+
+    def _covers(self, rounding: Rounding, x: np.ndarray) -> list[Candidate]:
+        """Return cover cuts of the rules that bind, or nearly."""
+        found = []
+        for number in self._tight_rules():
+            row = self.context.problem.rows[number]
+            for limit in (0, 1):
+                cut = cover_cut(rounding, number, row, limit, x, self.bounds)
+                if cut is not None:
+                    found.append(cut)
+        return found
 
     def _tight_rules(self) -> list[int]:
         """Return the rules that bind, or nearly, at the point and may have a cover cut."""

@@ -45,15 +45,29 @@ class Candidate:
 
 def choose(candidates: list[Candidate], most: int) -> list[Candidate]:
     """Return the cuts of greatest efficacy that are not nearly parallel to a better one."""
-    chosen: list[Candidate] = []
-    directions: list[np.ndarray] = []
-    for candidate in sorted(candidates, key=lambda c: -c.efficacy):
-        if len(chosen) == most:
-            break
-        vector = candidate.coefficients
-        direction = vector / np.sqrt(vector @ vector)
-        if directions and max(np.abs(np.array(directions) @ direction)) > PARALLEL:
-            continue
-        chosen.append(candidate)
-        directions.append(direction)
+    ordered = sorted(candidates, key=lambda c: -c.efficacy)
+    vectors = np.array([c.coefficients for c in ordered])
+    return [ordered[i] for i in unlike(vectors, most)]
+
+
+def unlike(vectors: np.ndarray, most: int) -> list[int]:
+    """Return which vectors, in order, are not nearly parallel to one returned before.
+
+    Parameters
+    ----------
+    vectors : (k, columns), none of them zero
+    most : how many to return at most
+    """
+    if not len(vectors):
+        return []
+    units = vectors / np.sqrt(np.einsum("ij,ij->i", vectors, vectors))[:, None]
+    cosines = np.abs(units @ units.T)
+    chosen: list[int] = []
+    barred = np.zeros(len(vectors), bool)
+    for i in range(len(vectors)):
+        if not barred[i]:
+            chosen.append(i)
+            if len(chosen) == most:
+                break
+            barred |= cosines[i] > PARALLEL
     return chosen

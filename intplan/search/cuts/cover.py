@@ -21,7 +21,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from intplan.search.cuts.candidate import Candidate
-from intplan.search.cuts.gomory import Rounding
+from intplan.search.cuts.distances import Rounding
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import ExactRow, Number
 
@@ -117,7 +117,7 @@ def _candidate(
         }  # fmt: skip
         return evidence, leans
 
-    return Candidate("cover", coefficients * scale, least * scale, explain, shift)
+    return Candidate("cover", coefficients * scale, least * scale, explain, shift=shift)
 
 
 def _knapsack(

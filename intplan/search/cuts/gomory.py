@@ -15,15 +15,14 @@ Computing 21:641-649, 2009.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from functools import partial
 from typing import Any
 
 import numpy as np
 
-from intplan.relaxation.dictionary import Dictionary
-from intplan.relaxation.rows import RowStore
-from intplan.search.cuts.candidate import Candidate
+from intplan.search.cuts.candidate import EFFICACY, Candidate, unlike
+from intplan.search.cuts.distances import Limits, Rounding, bounds_used, nearer_least
 from intplan.search.evidence import ROUNDING
 from intplan.search.tightening import Bounds
 
@@ -33,74 +32,33 @@ SMALL = 1e-7  # coefficients this small next to the largest are removed by their
 SPREAD = 1e6  # greatest ratio of two coefficients of a cut
 
 
-@dataclass
-class Rounding:
-    """What mixed-integer rounding needs to know of a problem.
-
-    Attributes
-    ----------
-    rows : the store
-    whole : (columns,) bool
-    grain : (rows,) the row values of all-whole plans are multiples of this, 0 if of nothing
-    reach : sum over the bounded activities of their greatest size
-    open : activities without both bounds
-    own : the sheet's own bounds, a pair of (columns,)
-    """
-
-    rows: RowStore
-    whole: np.ndarray
-    grain: np.ndarray
-    reach: float
-    open: np.ndarray
-    own: tuple[np.ndarray, np.ndarray]
-
-    def box(
-        self, touched: np.ndarray, bounds: Bounds
-    ) -> tuple[dict[str, np.ndarray], bool]:
-        """Return, as evidence, the bounds of some activities that are not the sheet's own.
-
-        Errors are bounded over the box of the activities touched, (columns,) bool, so a cut
-        leans on these bounds even where it measures no distance from them.  Returned as well:
-        whether any of them leans on the cut-off.
-        """
-        least = touched & (bounds.least != self.own[0])
-        most = touched & (bounds.most != self.own[1])
-        leans = bool((least & bounds.leans[0]).any() or (most & bounds.leans[1]).any())
-        numbers = np.concatenate((2 * least.nonzero()[0], 2 * most.nonzero()[0] + 1))
-        return {"box": numbers, "box_values": bounds.values(numbers)}, leans
-
-
 def gomory_cuts(
     rounding: Rounding,
-    dictionary: Dictionary,
-    rows: np.ndarray,
+    limits: Limits,
+    multipliers: np.ndarray,
     x: np.ndarray,
     bounds: Bounds,
     leaning_rows: np.ndarray,
+    most: int,
 ) -> list[Candidate]:
-    """Return the cuts of dictionary rows whose basic whole activity has a fractional value.
+    """Return the deepest cuts of combinations of rows.
 
-    Rows that give no cut that is violated, safe and well scaled are passed over.  All rows are
-    worked on at once, as matrices with a line a row.
+    Combinations that give no cut that is violated, safe and well scaled are passed over.  All
+    are worked on at once, as matrices with a line a combination.
 
     Parameters
     ----------
-    rows : (k,) dictionary rows
-    x : (columns,) the dictionary's point
+    multipliers : (k, u) of the rows of `limits`
+    x : (columns,) the relaxation's point
     bounds : bounds under which the cuts will be used, or wider ones
     leaning_rows : (rows,) bool, rows that lean on the cut-off
+    most : how many cuts to return at most
     """
-    n = dictionary.columns
-    entries = dictionary.entries[rows]
-    entries = np.where(np.abs(entries) > TINY, entries, 0.0)
-    used = ((dictionary.nonbasic >= n) & entries.any(axis=0)).nonzero()[0]
-    base = _Base.of(rounding, dictionary, used, x, bounds)
-    work = _combine(base, entries[:, used])
-    if not len(work.multipliers):
-        return []
+    base = _Base.of(rounding, limits, x, bounds)
+    work = _combine(base, multipliers)
     coefficients, least, slip = _round(base, work)
-    cuts = []
-    for i in range(len(least)):
+    cuts: list[Candidate] = []
+    for i in _by_depth(coefficients, least, x):
         loss = 0.0
         if len(rounding.open):
             loss = _settle_open(base, work, i, coefficients[i], slip.item(i))
@@ -110,7 +68,36 @@ def gomory_cuts(
         candidate = Candidate("gomory", *bare, partial(_explain, base, work, i, leaning_rows))
         if candidate.measure(x):
             cuts.append(candidate)
+            if len(cuts) == most:
+                break
     return cuts
+
+
+def deepest_combinations(
+    rounding: Rounding,
+    limits: Limits,
+    multipliers: np.ndarray,
+    x: np.ndarray,
+    bounds: Bounds,
+    most: int,
+) -> np.ndarray:
+    """Return the combinations whose cuts are deepest and unlike each other, (most, u).
+
+    Parameters as of `gomory_cuts`; nothing here is safe against rounding.
+    """
+    base = _Base.of(rounding, limits, x, bounds)
+    work = _combine(base, multipliers)
+    coefficients, least, _ = _round(base, work)
+    order = np.array(_by_depth(coefficients, least, x)[: 4 * most], int)
+    return work.multipliers[order[unlike(coefficients[order], most)]]
+
+
+def _by_depth(coefficients: np.ndarray, least: np.ndarray, x: np.ndarray) -> list[int]:
+    """Return which cuts are violated at a point, deepest first."""
+    norms = np.sqrt(np.einsum("ij,ij->i", coefficients, coefficients))
+    depths = (least - coefficients @ x) / norms
+    order = (-depths).argsort(kind="stable")
+    return order[depths[order] > EFFICACY].tolist()
 
 
 @dataclass
@@ -119,8 +106,7 @@ class _Base:
 
     Attributes
     ----------
-    numbers, matrix, limits, row_sides : (u, ...) the rows whose values are not basic, what they
-        are at, and the side they are on
+    limits, matrix : (u, ...) the rows
     at_least, anchors, sides : (columns,) which bound distances are measured from, its value (0
         where there is none), and the sign of the distance, 0 if it is fixed
     grounded : (columns,) whether there is such a bound
@@ -128,34 +114,24 @@ class _Base:
 
     rounding: Rounding
     bounds: Bounds
-    numbers: np.ndarray
+    limits: Limits
     matrix: np.ndarray
-    limits: np.ndarray
-    row_sides: np.ndarray
     at_least: np.ndarray
     anchors: np.ndarray
     sides: np.ndarray
     grounded: np.ndarray
 
     @classmethod
-    def of(
-        cls,
-        rounding: Rounding,
-        dictionary: Dictionary,
-        used: np.ndarray,
-        x: np.ndarray,
-        bounds: Bounds,
-    ) -> _Base:
-        """Gather it for the non-basic columns used."""
-        numbers = dictionary.nonbasic[used] - dictionary.columns
+    def of(cls, rounding: Rounding, limits: Limits, x: np.ndarray, bounds: Bounds) -> _Base:
+        """Measure the activities from their nearer bounds."""
         at_least = nearer_least(x, bounds)
         anchors = np.where(at_least, bounds.least, bounds.most)
         grounded = np.isfinite(anchors)
         sides = np.where(at_least, 1.0, -1.0)
         sides[bounds.least == bounds.most] = 0.0
         return cls(
-            rounding, bounds, numbers, rounding.rows.matrix[numbers], dictionary.at[used],
-            dictionary.side[used], at_least, np.where(grounded, anchors, 0.0), sides, grounded,
+            rounding, bounds, limits, rounding.rows.matrix[limits.numbers], at_least,
+            np.where(grounded, anchors, 0.0), sides, grounded,
         )  # fmt: skip
 
 
@@ -184,21 +160,19 @@ class _Combinations:
 
     def only(self, chosen: np.ndarray) -> _Combinations:
         """Return some of them."""
-        return _Combinations(
-            self.multipliers[chosen], self.own[chosen], self.live[chosen], self.error[chosen],
-            self.right_error[chosen], self.fraction[chosen], self.near[chosen],
-        )  # fmt: skip
+        return _Combinations(*(getattr(self, f.name)[chosen] for f in fields(self)))
 
 
 def _combine(base: _Base, multipliers: np.ndarray) -> _Combinations:
     """Add the rows up; leave out combinations without a bound to measure from or a fraction."""
+    multipliers = np.where(np.abs(multipliers) > TINY, multipliers, 0.0)
     own = -(multipliers @ base.matrix)
     count = multipliers.shape[1] + own.shape[1]
     error = (multipliers.shape[1] + 3) * ROUNDING * 2.0 * np.abs(multipliers).sum(axis=1)
     live = np.abs(own) > error[:, None]
     own = np.where(live, own, 0.0)
-    right = -(multipliers @ base.limits + own @ base.anchors)
-    size = np.abs(multipliers) @ np.abs(base.limits) + np.abs(own) @ np.abs(base.anchors)
+    right = -(multipliers @ base.limits.at + own @ base.anchors)
+    size = np.abs(multipliers) @ np.abs(base.limits.at) + np.abs(own) @ np.abs(base.anchors)
     right_error = error * base.rounding.reach + (count + 3) * ROUNDING * size
     fraction = right - np.floor(right)
     near = np.minimum(fraction, 1.0 - fraction)
@@ -217,18 +191,18 @@ def _round(base: _Base, work: _Combinations) -> tuple[np.ndarray, np.ndarray, np
     least : (k,) what rounding errors may have added at activities with both bounds is taken off
     slip : (k,) the error that each coefficient may have
     """
-    rounding = base.rounding
-    row_gamma = _rounded(work.multipliers * base.row_sides, rounding.grain[base.numbers], work)
+    rounding, limits = base.rounding, base.limits
+    row_gamma = _rounded(work.multipliers * limits.sides, rounding.grain[limits.numbers], work)
     own_gamma = _rounded(work.own * base.sides, rounding.whole * 1.0, work)
-    row_weights = row_gamma * base.row_sides
+    row_weights = row_gamma * limits.sides
     own_weights = own_gamma * base.sides
     coefficients = row_weights @ base.matrix + own_weights
-    least = 1.0 + row_weights @ base.limits + own_weights @ base.anchors
-    size = np.abs(row_weights) @ np.abs(base.limits) + np.abs(own_weights) @ np.abs(base.anchors)
+    least = 1.0 + row_weights @ limits.at + own_weights @ base.anchors
+    size = np.abs(row_weights) @ np.abs(limits.at) + np.abs(own_weights) @ np.abs(base.anchors)
     count = sum(base.matrix.shape)
     spent = (count + 4) * ROUNDING * (1.0 + size) + 4.0 * rounding.reach * work.error / work.near
     weight = 2.0 * np.abs(row_weights).sum(axis=1) + np.abs(own_weights).max(axis=1, initial=0.0)
-    slip = (len(base.numbers) + 4) * ROUNDING * (weight + 1.0)
+    slip = (len(limits.numbers) + 4) * ROUNDING * (weight + 1.0)
     return coefficients, least - 1.001 * (spent + slip * rounding.reach), slip
 
 
@@ -237,33 +211,15 @@ def _explain(
 ) -> tuple[dict[str, Any], bool]:
     """Return the evidence of one cut, and whether it leans on the cut-off."""
     used = work.multipliers[i].nonzero()[0]
-    numbers = base.numbers[used]
+    numbers = base.limits.numbers[used]
     box, leans = base.rounding.box(base.matrix[used].any(axis=0), base.bounds)
     live = work.live[i].nonzero()[0]
     evidence = {
         "rows": numbers, "multipliers": work.multipliers[i, used],
-        "row_sides": base.row_sides[used], **box,
+        "row_sides": base.limits.sides[used], "plus": "0", **box,
         **bounds_used(live, base.at_least[live], base.sides[live], base.bounds),
     }  # fmt: skip
     return evidence, leans or bool(leaning_rows[numbers].any())
-
-
-def bounds_used(
-    live: np.ndarray, at_least: np.ndarray, sides: np.ndarray, bounds: Bounds
-) -> dict[str, np.ndarray]:
-    """Return the bounds that distances are measured from, as evidence.
-
-    ``bounds`` holds the numbers ``2 * column + side`` and ``values`` what they are; a fixed
-    activity, whose distance is zero, appears with both.
-    """
-    fixed = live[sides == 0]
-    numbers = np.concatenate((2 * live + ~at_least, 2 * fixed + at_least[sides == 0]))
-    return {"bounds": numbers, "values": bounds.values(numbers)}
-
-
-def nearer_least(x: np.ndarray, bounds: Bounds) -> np.ndarray:
-    """Choose for each activity the bound to measure from, the nearer one: true for its least."""
-    return x - bounds.least <= bounds.most - x
 
 
 def _rounded(a: np.ndarray, grain: np.ndarray, work: _Combinations) -> np.ndarray:

@@ -10,14 +10,17 @@ integer arithmetic.
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
+from fractions import Fraction
+from functools import partial
 from typing import Any
 
 import numpy as np
 
-from intplan.relaxation.dictionary import Dictionary
 from intplan.search.arithmetic import common_denominator
 from intplan.search.cuts.candidate import Candidate
-from intplan.search.cuts.gomory import AWAY, SPREAD, TINY, Rounding, bounds_used, nearer_least
+from intplan.search.cuts.distances import Limits, Rounding, bounds_used, nearer_least
+from intplan.search.cuts.gomory import AWAY, SPREAD, TINY
 from intplan.search.tightening import Bounds
 
 DENOMINATOR = 50_000  # greatest common denominator of the multipliers
@@ -28,24 +31,22 @@ EXACT = 1 << 53
 
 def integer_gomory_cut(
     rounding: Rounding,
-    dictionary: Dictionary,
-    row: int,
+    limits: Limits,
+    multipliers: np.ndarray,
     x: np.ndarray,
     bounds: Bounds,
     leaning_rows: np.ndarray,
 ) -> Candidate | None:
-    """Return the exact cut of a dictionary row, or None where its numbers grow too large.
+    """Return the exact cut of one combination of rows, or None where its numbers grow too large.
 
-    Parameters and meaning as `intplan.search.cuts.gomory.gomory_cuts`, for one row.
+    Parameters and meaning as `intplan.search.cuts.gomory.gomory_cuts`, `multipliers` being (u,).
     """
-    n = dictionary.columns
-    entries = dictionary.entries[row]
-    used = ((dictionary.nonbasic >= n) & (np.abs(entries) > TINY)).nonzero()[0]
-    numbers = dictionary.nonbasic[used] - n
+    used = (np.abs(multipliers) > TINY).nonzero()[0]
+    numbers = limits.numbers[used]
     shifts = rounding.rows.shift[numbers]
     if (shifts < 0).any():
         return None
-    common = common_denominator(np.ldexp(entries[used], -shifts), DENOMINATOR, NEAR)
+    common = common_denominator(np.ldexp(multipliers[used], -shifts), DENOMINATOR, NEAR)
     if common is None:
         return None
     weights, unit = common
@@ -55,17 +56,17 @@ def integer_gomory_cut(
     whole_weights = weights.astype(np.int64)
     integers = matrix.astype(np.int64)
     own = -(whole_weights @ integers)
-    row_sides = dictionary.side[used].astype(np.int64)
+    row_sides = limits.sides[used].astype(np.int64)
     live = own.nonzero()[0]
     at_least = nearer_least(x, bounds)[live]
     anchors = np.where(at_least, bounds.least[live], bounds.most[live])
-    limits = np.ldexp(dictionary.at[used], shifts)
-    if not (_whole(anchors) and _whole(limits)):
+    at = np.ldexp(limits.at[used], shifts)
+    if not (_whole(anchors) and _whole(at)):
         return None
     sides = np.where(at_least, 1, -1)
     sides[bounds.least[live] == bounds.most[live]] = 0
-    whole_limits, whole_anchors = limits.astype(np.int64), anchors.astype(np.int64)
-    size = float(np.abs(weights) @ np.abs(limits) + np.abs(own[live]) @ np.abs(anchors))
+    whole_limits, whole_anchors = at.astype(np.int64), anchors.astype(np.int64)
+    size = float(np.abs(weights) @ np.abs(at) + np.abs(own[live]) @ np.abs(anchors))
     if size > LARGEST:
         return None
     right = -int(whole_weights @ whole_limits) - int(own[live] @ whole_anchors)
@@ -75,12 +76,104 @@ def integer_gomory_cut(
     stepped = rounding.grain[numbers] > 0
     row_gamma = _rounded(whole_weights * row_sides, stepped, part, unit)
     own_gamma = _rounded(own[live] * sides, rounding.whole[live], part, unit)
-    return _assemble(
-        rounding, dictionary, x, bounds, leaning_rows,
-        (numbers, entries[used], row_sides, row_gamma * row_sides, integers, whole_limits),
-        (live, at_least, sides, own_gamma * sides, whole_anchors),
-        part * (unit - part), (whole_weights, unit, shifts),
+    combination = _Combination(
+        rounding, bounds, numbers, whole_weights, unit, shifts, row_sides, integers, whole_limits,
+        live, at_least, sides, own[live], whole_anchors, part, right,
     )  # fmt: skip
+    forms = [part, part - unit] if (row_sides == 0).any() else [0]
+    best: tuple[int, np.ndarray, int, int] | None = None
+    for added in forms:
+        made = combination.written_out(row_gamma, own_gamma, added)
+        if made is not None:
+            filled = int(np.count_nonzero(made[0]))
+            if best is None or filled < best[0]:
+                best = (filled, *made, added)
+    if best is None:
+        return None
+    _, coefficients, least, added = best
+    shift = int(np.abs(coefficients).max()).bit_length() - 1
+    scale = 2.0**-shift
+    candidate = Candidate(
+        "gomory", coefficients * scale, least * scale,
+        partial(combination.explain, added, leaning_rows), shift,
+    )  # fmt: skip
+    return candidate if candidate.measure(x) else None
+
+
+@dataclass
+class _Combination:
+    """A combination of rows over the denominator `unit`, in distances.
+
+    Attributes
+    ----------
+    numbers, weights, shifts, sides, rows, at : (u, ...) the rows, in integers
+    live, at_least, own_sides, own, anchors : (k,) the activities with a coefficient
+    part : fractional part of the right-hand side, times `unit`
+    right : the right-hand side, times `unit`
+    """
+
+    rounding: Rounding
+    bounds: Bounds
+    numbers: np.ndarray
+    weights: np.ndarray
+    unit: int
+    shifts: np.ndarray
+    sides: np.ndarray
+    rows: np.ndarray
+    at: np.ndarray
+    live: np.ndarray
+    at_least: np.ndarray
+    own_sides: np.ndarray
+    own: np.ndarray
+    anchors: np.ndarray
+    part: int
+    right: int
+
+    def written_out(
+        self, row_gamma: np.ndarray, own_gamma: np.ndarray, added: int
+    ) -> tuple[np.ndarray, int] | None:
+        """Write the rounded combination over the activities, coprime; None if it is too large.
+
+        Parameters
+        ----------
+        row_gamma, own_gamma : coefficients on distances, times ``part * (unit - part)``
+        added : the multiple of the combination itself to add, in the same scale and times `unit`
+        """
+        row_weights = row_gamma * self.sides + added * self.weights * np.abs(self.sides)
+        own_weights = own_gamma * self.own_sides + added * self.own * np.abs(self.own_sides)
+        size = np.abs(row_weights.astype(float)) @ np.abs(self.rows).max(axis=1, initial=1)
+        if float(size) + float(np.abs(own_weights).max(initial=0)) > LARGEST:
+            return None
+        coefficients = row_weights @ self.rows
+        coefficients[self.live] += own_weights
+        least = self.part * (self.unit - self.part) + added * self.right
+        for weights, limits in ((row_weights, self.at), (own_weights, self.anchors)):
+            least += sum(w * v for w, v in zip(weights.tolist(), limits.tolist(), strict=True))
+        divisor = math.gcd(*coefficients[coefficients != 0].tolist(), least)
+        if not divisor or not coefficients.any():
+            return None
+        coefficients //= divisor
+        least //= divisor
+        sizes = np.abs(coefficients[coefficients != 0])
+        largest = int(sizes.max())
+        if max(largest, abs(least)) >= EXACT or largest > SPREAD * int(sizes.min()):
+            return None
+        return coefficients, least
+
+    def explain(self, added: int, leaning_rows: np.ndarray) -> tuple[dict[str, Any], bool]:
+        """Return the evidence of the cut, and whether it leans on the cut-off."""
+        touched = np.zeros(self.rows.shape[1], bool)
+        touched[self.live] = True
+        box, leans = self.rounding.box(touched, self.bounds)
+        pairs = zip(self.weights.tolist(), self.shifts.tolist(), strict=True)
+        plus = Fraction(added * self.unit, self.part * (self.unit - self.part))
+        evidence = {
+            "rows": self.numbers,
+            "multipliers": [f"{w << shift}/{self.unit}" for w, shift in pairs],
+            "row_sides": self.sides, "plus": str(plus), **box,
+            **bounds_used(self.live, self.at_least, self.own_sides, self.bounds),
+        }  # fmt: skip
+        return evidence, leans or bool(leaning_rows[self.numbers].any())
 
 
 def _whole(values: np.ndarray) -> bool:
@@ -100,54 +193,3 @@ def _rounded(a: np.ndarray, stepped: np.ndarray, part: int, unit: int) -> np.nda
     whole = np.minimum(left * (unit - part), (unit - left) * part)
     divisible = np.where(a > 0, a * (unit - part), -a * part)
     return np.where(stepped, whole, divisible)
-
-
-def _assemble(
-    rounding: Rounding,
-    dictionary: Dictionary,
-    x: np.ndarray,
-    bounds: Bounds,
-    leaning_rows: np.ndarray,
-    of_rows: tuple[np.ndarray, ...],
-    of_columns: tuple[np.ndarray, ...],
-    right: int,
-    origin: tuple[np.ndarray, int, np.ndarray],
-) -> Candidate | None:
-    """Write the cut over the activities; None if it is not violated or not exact in doubles."""
-    numbers, _, row_sides, row_weights, integers, limits = of_rows
-    live, at_least, sides, own_weights, anchors = of_columns
-    bound = float(np.abs(row_weights.astype(float)) @ np.abs(integers).max(axis=1, initial=1))
-    if bound + float(np.abs(own_weights).max(initial=0)) > LARGEST:
-        return None
-    coefficients = row_weights @ integers
-    coefficients[live] += own_weights
-    least = right + sum(
-        int(w) * int(v)
-        for w, v in zip((*row_weights, *own_weights), (*limits, *anchors), strict=True)
-    )
-    divisor = math.gcd(*coefficients[coefficients != 0].tolist(), least)
-    if not divisor or not coefficients.any():
-        return None
-    coefficients //= divisor
-    least //= divisor
-    sizes = np.abs(coefficients[coefficients != 0])
-    largest = int(sizes.max())
-    if max(largest, abs(least)) >= EXACT or largest > SPREAD * int(sizes.min()):
-        return None
-    shift = largest.bit_length() - 1
-    scale = 2.0**-shift
-    weights, unit, shifts = origin
-
-    def explain() -> tuple[dict[str, Any], bool]:
-        touched = np.zeros(integers.shape[1], bool)
-        touched[live] = True
-        box, leans = rounding.box(touched, bounds)
-        fractions = [f"{int(w) << int(s)}/{unit}" for w, s in zip(weights, shifts, strict=True)]
-        evidence = {
-            "rows": numbers, "multipliers": fractions, "row_sides": row_sides, **box,
-            **bounds_used(live, at_least, sides, bounds),
-        }  # fmt: skip
-        return evidence, leans or bool(leaning_rows[numbers].any())
-
-    candidate = Candidate("gomory", coefficients * scale, least * scale, explain, shift)
-    return candidate if candidate.measure(x) else None
