@@ -133,7 +133,7 @@ def test_every_source_listed_is_used_and_every_one_used_is_listed() -> None:
     text = " ".join(WORDS[: WORDS.index("## Sources")].split())
     assert listed == sorted(set(listed))
     assert [source for source in listed if source not in text] == []
-    year = r"[A-Z]\w+(?:(?:,| and) (?:Le )?[A-Z]\w+)* (?:19|20)\d\d"
+    year = r"[A-Z]\w+(?:(?:,| and) (?:Le |Van )?[A-Z]\w+)* (?:19|20)\d\d"
     assert set(re.findall(year, text)) == set(listed)
 
 
