@@ -315,7 +315,7 @@ def test_compare_of_an_aim_without_a_limit(call):
 def test_compare_says_so_if_they_differ(call, monkeypatch):
     node = compare_module.NodeComparison(1, 1, 2, 3, 0.1, 0.2, 5.0, 6.0, False, "a <= 3")
     monkeypatch.setattr(
-        compare_module, "compare", lambda standing: compare_module.Comparison.of((node,))
+        compare_module, "compare", lambda standing, stop=None: compare_module.Comparison.of((node,))
     )
     status, out, _ = call("compare", "crates.toml")
     assert status == 1 and "They disagree at 1 node: 1." in out

@@ -258,13 +258,18 @@ def test_plans_fit_exactly_or_not_at_all() -> None:
     assert not arithmetic.fits([0, 0, F(-1, 10**30)])
 
 
+def never() -> bool:
+    """Ask for no early end."""
+    return False
+
+
 def test_plans_are_guessed_and_solved_from_points_in_doubles() -> None:
     arithmetic, _ = arithmetic_of(small_problem())
     assert arithmetic.guess_plan(np.array([1 + 1e-9, 1 - 1e-9, 2 / 3])) == [1, 1, F(2, 3)]
     assert arithmetic.guess_plan(np.array([2.0, 1.0, 0.0])) is None
-    assert arithmetic.solve_divisible(np.array([1.0, 1.0, 0.0])) == [1, 1, F(2, 3)]
-    assert arithmetic.solve_divisible(np.array([0.0, 0.0, 0.0])) == [0, 0, F(4, 3)]
-    assert arithmetic.solve_divisible(np.array([3.0, 1.0, 0.0])) is None
+    assert arithmetic.solve_divisible(np.array([1.0, 1.0, 0.0]), never) == [1, 1, F(2, 3)]
+    assert arithmetic.solve_divisible(np.array([0.0, 0.0, 0.0]), never) == [0, 0, F(4, 3)]
+    assert arithmetic.solve_divisible(np.array([3.0, 1.0, 0.0]), never) is None
 
 
 def test_plans_of_large_integers_are_checked_in_integers() -> None:

@@ -9,7 +9,7 @@ from fractions import Fraction
 import numpy as np
 import pytest
 
-from intplan.relaxation.dictionary import DRIFT, Dictionary, Status
+from intplan.relaxation.dictionary import DRIFT, Dictionary, Status, Stopped
 from intplan.relaxation.rows import RowStore
 from intplan.relaxation.start import NoDualBasis, cold_start
 from intplan.search.exact import ExactSystem, solve_exactly
@@ -398,10 +398,28 @@ def test_copies_and_kept_bases_are_independent(solved: list[tuple[int, Instance]
         child.set_bound(j, min(instance.least[j], x), x)
         child.reoptimise()
         assert np.array_equal(meaning(dictionary), kept)
-        other = dictionary.copy()
-        other.shed()
-        other.refactor()
-        assert meaning(other) == pytest.approx(kept, rel=1e-8, abs=1e-8)
+        other = Dictionary.at_basis(
+            dictionary.rows, dictionary.cost, instance.least, instance.most,
+            (dictionary.basic, dictionary.nonbasic),
+        )  # fmt: skip
+        assert other.entries == pytest.approx(dictionary.entries, rel=1e-8, abs=1e-8)
+        assert other.value == pytest.approx(dictionary.value, rel=1e-8, abs=1e-8)
+
+
+def test_a_singular_basis_gives_way_to_the_slack_basis() -> None:
+    rows = RowStore(np.array([[1.0, 1.0], [2.0, 2.0]]), np.zeros(2), np.full(2, 9.0))
+    basis = (np.array([0, 1]), np.array([2, 3]))
+    made = Dictionary.at_basis(rows, np.ones(2), np.zeros(2), np.full(2, 5.0), basis)
+    assert sorted(made.basic.tolist()) == [2, 3]
+    assert made.reoptimise() is Status.OPTIMAL
+
+
+def test_a_run_is_stopped_from_outside() -> None:
+    for instance in LARGER:
+        rows = store_of(instance)
+        dictionary = cold_start(rows, minimised(instance), instance.least, instance.most)
+        with pytest.raises(Stopped):
+            dictionary.reoptimise(stop=lambda: True)
 
 
 def test_runs_stop_at_the_cutoff_and_at_the_limit() -> None:

@@ -866,24 +866,21 @@ def verify(problem: Problem, result: Any, gap: Number = 0) -> Summary:
         require(result.value is None, "a value without a plan")
     require(result.outcome in OUTCOMES, f"an outcome {result.outcome!r} is unknown")
     OUTCOMES[result.outcome](problem, result, gap)
-    for_any = not problem.exact_cost and any(
-        None in ends for ends in zip(problem.exact_least, problem.exact_most, strict=True)
-    )
-    if for_any or result.outcome == "unbounded":
+    if result.any_plan:
+        sought = result.bound is None or not problem.exact_cost
+        require(sought, "a tree that looks for any plan proves nothing about the aim")
+    if result.any_plan or result.outcome == "unbounded":
         return walk_for_any(problem, result)
     if result.bound is not None:
         cost = (Fraction(result.bound) - problem.aim_constant) * Fraction(problem.cost_factor)
         return Checker(problem, result.tree, result.cuts, cost).walk()
     claim = -math.inf if result.outcome == "unfinished" else None
-    try:
-        return Checker(problem, result.tree, result.cuts, claim).walk()
-    except Refused:  # the aim has no limit if there is a plan, and the tree looks for any
-        return Checker(drawn_home(problem), result.tree, result.cuts, claim).walk()
+    return Checker(problem, result.tree, result.cuts, claim).walk()
 
 
 def walk_for_any(problem: Problem, result: Any) -> Summary:
     """Check the tree of a search for any plan: its steps, cuts and closed nodes."""
-    stand_in = drawn_home(problem)
+    stand_in = drawn_home(problem) if result.any_plan else problem
     claim = -math.inf if result.plan is not None or result.outcome == "unfinished" else None
     return Checker(stand_in, result.tree, result.cuts, claim).walk()
 

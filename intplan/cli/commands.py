@@ -126,12 +126,16 @@ def compare_command(
     sheet = _read_sheet(session, sheet_file)
     with session.interrupts.softened() as stop:
         standing = _search(session, sheet, time_limit, gap, node_limit, stop)
-    bounded = standing.outcome != "unbounded"
-    comparison = compare(standing) if bounded else Comparison.of(())
+        bounded = standing.outcome != "unbounded"
+        interrupted = stop()  # the search was ended: what it solved is compared all the same
+        comparison = Comparison.of(())
+        if bounded:
+            comparison = compare(standing, None if interrupted else stop)
     session.console.answer(compare_text(comparison, standing), compare_data(comparison, standing))
     if not (bounded and comparison.agree):
         return NO
-    return UNFINISHED if standing.outcome == "unfinished" else YES
+    finished = standing.outcome != "unfinished" and comparison.complete
+    return YES if finished else UNFINISHED
 
 
 @group.command("tree", short_help="Write the search tree for other programs.")

@@ -44,8 +44,8 @@ class Percent(click.ParamType):
             percent = Decimal(str(value).removesuffix("%"))
         except InvalidOperation:
             percent = Decimal(-1)
-        if not (percent.is_finite() and percent >= 0 and abs(percent.adjusted()) < 300):
-            self.fail(f"{value!r} is no percentage from 0, such as 0.5.", param, ctx)
+        if not (percent.is_finite() and 0 <= percent <= 100 and abs(percent.adjusted()) < 300):
+            self.fail(f"{value!r} is no percentage from 0 to 100, such as 0.5.", param, ctx)
         return Fraction(percent)
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from fractions import Fraction
 from typing import TYPE_CHECKING
@@ -50,6 +51,7 @@ class Comparison:
         warm from, is not among them
     warm_pivots, cold_pivots, warm_seconds, cold_seconds : totals over `nodes`
     agree : both agreed at every node
+    complete : no node was left out
     """
 
     nodes: tuple[NodeComparison, ...]
@@ -58,9 +60,10 @@ class Comparison:
     warm_seconds: float
     cold_seconds: float
     agree: bool
+    complete: bool = True
 
     @classmethod
-    def of(cls, nodes: tuple[NodeComparison, ...]) -> Comparison:
+    def of(cls, nodes: tuple[NodeComparison, ...], complete: bool = True) -> Comparison:
         """Sum the nodes up."""
         return cls(
             nodes=nodes,
@@ -69,17 +72,24 @@ class Comparison:
             warm_seconds=sum(node.warm_seconds for node in nodes),
             cold_seconds=sum(node.cold_seconds for node in nodes),
             agree=all(node.agree for node in nodes),
+            complete=complete,
         )
 
 
-def compare(standing: StandingPlan) -> Comparison:
+def compare(standing: StandingPlan, stop: Callable[[], bool] | None = None) -> Comparison:
     """Solve the nodes of a standing plan's tree again, warm and cold.
+
+    Parameters
+    ----------
+    standing : its tree is taken
+    stop : polled between nodes; true asks for an early end
 
     Raises
     ------
     IntplanError
         If the aim has no limit: such a sheet has no bounds to compare.
     """
+    from intplan.search.engine import drawn_home
     from intplan.search.replay import replay
 
     if standing.outcome == "unbounded":
@@ -88,10 +98,15 @@ def compare(standing: StandingPlan) -> Comparison:
     names = column_names(standing.sheet)
 
     def in_aim_units(cost: float | None) -> float | None:
-        return None if cost is None else float(problem.aim_from_cost(Fraction(cost)))
+        if cost is None or result.any_plan:
+            return None
+        return float(problem.aim_from_cost(Fraction(cost)))
 
+    solved = drawn_home(problem) if result.any_plan else problem
     nodes = []
-    for entry in replay(problem, result.tree, result.cuts):
+    for entry in replay(solved, result.tree, result.cuts):
+        if stop is not None and stop():
+            break
         node = result.tree.nodes[entry.node]
         added = (added_text(a, names, result.cuts) for a in node["added"])
         nodes.append(
@@ -108,4 +123,5 @@ def compare(standing: StandingPlan) -> Comparison:
                 name=", ".join(added) or ROOT_NAME,
             )
         )
-    return Comparison.of(tuple(sorted(nodes, key=lambda n: n.node)))
+    compared = tuple(sorted(nodes, key=lambda n: n.node))
+    return Comparison.of(compared, complete=len(nodes) >= len(result.tree) - 1)

@@ -17,7 +17,7 @@ from intplan.planning.numbers import nearest
 from intplan.sheet import Sheet
 
 if TYPE_CHECKING:
-    from intplan.search import Added, Cut
+    from intplan.search import Added, Cut, SearchResult
 
 ROOT_NAME = "the whole sheet"
 TERMS_SHOWN = 12  # terms of a cut that are written out
@@ -84,36 +84,38 @@ def _digits(value: float) -> str:
     return f"{value:.6g}"
 
 
-def named_tree(sheet: Sheet, raw: nx.DiGraph, cuts: Sequence[Cut]) -> nx.DiGraph:
+def named_tree(sheet: Sheet, result: SearchResult) -> nx.DiGraph:
     """Return the search tree with readable attributes.
 
     Parameters
     ----------
     sheet : what was solved
-    raw : the tree as the search keeps it
-    cuts : the cuts of the search, by number
+    result : what the search gave
 
     Returns
     -------
     networkx.DiGraph
-        The same nodes and edges. Each node has `bound` (a number in units of the aim, None
-        where nothing finite is known or the sheet has no aim), `depth`, `outcome`, `added` (a
+        The same nodes and edges. Each node has `bound` (a number in units of the aim, None where
+        nothing finite is known or the tree looks for any plan), `depth`, `outcome`, `added` (a
         list of texts), `pivots`, `seconds`, `start` and `evidence`.
     """
     problem = sheet.problem()
     names = column_names(sheet)
     tree = nx.DiGraph()
-    for node, raw_attributes in raw.nodes(data=True):
+    for node, raw_attributes in result.tree.nodes(data=True):
         attributes: dict[str, Any] = {
             key: raw_attributes[key]
             for key in ("depth", "outcome", "pivots", "seconds", "start", "evidence")
         }
         bound = raw_attributes["bound"]
-        finite = bool(problem.exact_cost) and bound is not None and math.isfinite(bound)
+        told = bool(problem.exact_cost) and not result.any_plan
+        finite = told and bound is not None and math.isfinite(bound)
         attributes["bound"] = nearest(problem.aim_from_cost(Fraction(bound))) if finite else None
-        attributes["added"] = [added_text(a, names, cuts) for a in raw_attributes["added"]]
+        attributes["added"] = [
+            added_text(a, names, result.cuts) for a in raw_attributes["added"]
+        ]
         tree.add_node(node, **attributes)
-    tree.add_edges_from(raw.edges())
+    tree.add_edges_from(result.tree.edges())
     return tree
 
 

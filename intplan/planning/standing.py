@@ -57,8 +57,8 @@ class StandingPlan:
     def ended_by(self) -> str | None:
         """What ended an unfinished search: ``time``, ``nodes``, ``interrupt``, or ``range``.
 
-        ``range`` means that whole activities without a bound ran past the magnitude at which
-        the search gives up.
+        ``range`` means that a whole activity would have to be branched on beyond the magnitude
+        at which the search gives up.
         """
         return self.result.ended_by
 
@@ -134,7 +134,7 @@ class StandingPlan:
         rows it adds to its parent), `pivots`, `seconds`, `start` (``warm`` or ``cold``) and
         `evidence` (what closed it, in the search's own numbering).
         """
-        return named_tree(self.sheet, self.result.tree, self.result.cuts)
+        return named_tree(self.sheet, self.result)
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the standing plan to a JSON file, whole or not at all.
@@ -293,9 +293,9 @@ def _exact_percent(gap: object) -> Fraction:
             percent = Fraction(repr(float(gap)))
         else:
             percent = Fraction(-1)
-        if percent >= 0:
+        if 0 <= percent <= 100:
             return percent
-    raise IntplanError("a gap is a percentage from 0, such as 0.5", where="gap")
+    raise IntplanError("a gap is a percentage from 0 to 100, such as 0.5", where="gap")
 
 
 def _least_bends(sheet: Sheet, check: CheckResult) -> list[Number]:

@@ -30,7 +30,7 @@ practical dual phase 1 algorithms, Computational Optimization and Applications 3
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from enum import Enum
 from typing import NamedTuple
 
@@ -48,7 +48,12 @@ REFACTOR_AFTER = 150  # pivots
 CHECK_DRIFT_AFTER = 30  # pivots between two looks at the residual
 VALUE, ABOVE, BELOW = -3, -2, -1  # the set-apart columns
 MOVE = np.array([1.0, 1.0, -1.0])  # how they change when a basic value grows by one
+POLL_EVERY = 32  # pivots between two looks at `stop`
 NORMS_FROM = 30  # rows from which steepest-edge pricing pays for its norms
+
+
+class Stopped(Exception):
+    """Raised when the caller's `stop` asks for an end in the middle of a long computation."""
 
 
 class Status(Enum):
@@ -135,6 +140,35 @@ class Dictionary:
         self.evaluate()
         return self
 
+    @classmethod
+    def at_basis(
+        cls,
+        rows: RowStore,
+        cost: np.ndarray,
+        least: np.ndarray,
+        most: np.ndarray,
+        basis: tuple[np.ndarray, np.ndarray],
+    ) -> Dictionary:
+        """Return the dictionary of a basis, or the slack basis where doubles find it singular.
+
+        Parameters
+        ----------
+        rows, cost, least, most : as in `at_slack_basis`
+        basis : basic and non-basic variable numbers, all activities and the rows to hold
+
+        Notes
+        -----
+        A slack basis put in its place need not be dual feasible.  Nothing it leads to is believed
+        without a proof, so all that is lost is time.
+        """
+        held = np.sort(np.concatenate(basis))[len(least) :] - len(least)
+        self = cls.at_slack_basis(rows, cost, least, most, held)
+        try:
+            self.adopt_basis(*basis)
+        except np.linalg.LinAlgError:
+            self = cls.at_slack_basis(rows, cost, least, most, held)
+        return self
+
     def adopt_basis(self, basic: np.ndarray, nonbasic: np.ndarray) -> None:
         """Go to another basis of the same rows, given as variable numbers (m,) and (n,).
 
@@ -174,11 +208,6 @@ class Dictionary:
         other.side = self.side.copy()
         other._view(self.table.copy())
         return other
-
-    def shed(self) -> None:
-        """Give up the table and keep the basis; `refactor` computes the table again."""
-        self.table = self._transposed = self.entries = self.reduced = None
-        self.values = self.rooms = self._apart = None
 
     def _take_table(self, entries: np.ndarray) -> None:
         """Make the table from its first n columns, (m + 1, n); the others are not yet valid."""
@@ -289,7 +318,10 @@ class Dictionary:
     # ------------------------------------------------------------------ bounds and rows
 
     def set_bound(self, variable: int, least: float, most: float) -> None:
-        """Give one variable tighter bounds; a non-basic one moves with the bound it sits at."""
+        """Give one variable new bounds; a non-basic one moves with the bound it sits at.
+
+        That bound must be finite.
+        """
         place = self.place.item(variable)
         if place >= 0:
             self.basic_least[place] = least
@@ -310,7 +342,7 @@ class Dictionary:
             self._shift((new - old) * self.table[:, column])
 
     def set_bounds(self, variables: Iterable[int], least: np.ndarray, most: np.ndarray) -> None:
-        """Give several activities the tighter bounds ``least[j], most[j]``."""
+        """Give several activities the bounds ``least[j], most[j]``; see `set_bound`."""
         for j in variables:
             self.set_bound(j, least.item(j), most.item(j))
 
@@ -354,18 +386,29 @@ class Dictionary:
 
     # ------------------------------------------------------------------ dual simplex
 
-    def reoptimise(self, cutoff: float = np.inf, limit: int = 1 << 30) -> Status:
+    def reoptimise(
+        self,
+        cutoff: float = np.inf,
+        limit: int = 1 << 30,
+        stop: Callable[[], bool] | None = None,
+    ) -> Status:
         """Run the dual simplex method from this dual-feasible basis.
 
         Parameters
         ----------
         cutoff : stop as soon as the cost passes this value
         limit : most pivots to make; a run with a small limit does not refactorise
+        stop : polled now and then
 
         Returns
         -------
         Status
             After EMPTY, `failing_row` is the dictionary row that cannot be satisfied.
+
+        Raises
+        ------
+        Stopped
+            When `stop` says so.
         """
         patience = 2 * (len(self.basic) + self.columns) + 20
         standing, best = 0, self.value
@@ -381,6 +424,8 @@ class Dictionary:
                 self.failing_row = row
                 return Status.EMPTY
             self._pivot(row, column, above)
+            if stop is not None and made % POLL_EVERY == 0 and stop():
+                raise Stopped
             value = self.table.item(-1, VALUE)
             if value > cutoff:
                 return Status.BEATEN
@@ -439,7 +484,8 @@ class Dictionary:
         ratios /= slopes
         first = ratios.argmin().item()
         if bland:
-            return candidates[ratios <= ratios[first]][0].item()
+            least = candidates[ratios <= ratios[first]]
+            return least[self.nonbasic[least].argmin()].item()
         column = candidates.item(first)
         short = -self.rooms.item(row, above)
         passed = slopes.item(first) * (self.most.item(column) - self.least.item(column))

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary
@@ -31,15 +33,21 @@ def cold_start(
     least: np.ndarray,
     most: np.ndarray,
     active: np.ndarray | None = None,
+    stop: Callable[[], bool] | None = None,
 ) -> Dictionary:
     """Return a dual-feasible dictionary made from nothing.
 
     Parameters
     ----------
     rows, cost, least, most, active : as in `Dictionary.at_slack_basis`
+    stop : as in `Dictionary.reoptimise`
 
     Raises
     ------
+    Stopped
+        When `stop` says so.
+    numpy.linalg.LinAlgError
+        If the basis found is singular in doubles.
     NoDualBasis
         If none exists.
 
@@ -66,7 +74,7 @@ def cold_start(
         np.where(np.isfinite(least), 0.0, -1.0),
         np.where(np.isfinite(most), 0.0, 1.0),
     )
-    boxed.reoptimise()
+    boxed.reoptimise(stop=stop)
     if boxed.value < -RAY:
         raise NoDualBasis(boxed.activities(), boxed.pivots)
     dictionary.adopt_basis(

@@ -70,6 +70,8 @@ def compare_data(comparison: Comparison, standing: StandingPlan) -> Data:
     if standing.ended_by is not None:
         data["ended_by"] = standing.ended_by
     data["agree"] = comparison.agree
+    if not comparison.complete:
+        data["complete"] = False
     for side in ("warm", "cold"):
         data[side] = {
             "pivots": getattr(comparison, f"{side}_pivots"),

@@ -27,7 +27,7 @@ ENDED = {
     "nodes": "The node limit came before the proof was complete.",
     "interrupt": "The search was interrupted before the proof was complete.",
     "range": (
-        "A whole activity without a limit grew too large to go on with; "
+        "A whole activity grew too large to go on with; "
         "give whole activities a `most` (and a `least`) to settle this."
     ),
 }
@@ -211,6 +211,8 @@ def compare_text(comparison: Comparison, standing: StandingPlan) -> str:
     blocks.append(f"{heading}\n" + _nodes_table(costly))
     if standing.ended_by:
         blocks.append(ENDED[standing.ended_by] + " The nodes solved until then were compared.")
+    if not comparison.complete:
+        blocks.append("The comparison was interrupted; the other nodes were not compared.")
     return "\n\n".join(blocks)
 
 

@@ -71,10 +71,18 @@ class Arithmetic:
             plan[j] = lowest(self._clipped(j, nearest_fraction(x.item(j))))
         return plan if self.fits(plan) else None
 
-    def solve_divisible(self, x: np.ndarray) -> list[Number] | None:
-        """Return the best plan with the whole activities of a point, solved in rationals."""
+    def solve_divisible(
+        self, x: np.ndarray, stop: Callable[[], bool]
+    ) -> list[Number] | None:
+        """Return the best plan with the whole activities of a point, solved in rationals.
+
+        Raises
+        ------
+        Stopped
+            When `stop` says so.
+        """
         plan: list[Number] = [int(v) for v in np.rint(x).tolist()]
-        answer = solve_exactly(self._divisible_system(plan))
+        answer = solve_exactly(self._divisible_system(plan), (), stop)
         if answer.status != "optimal":
             return None
         for j, value in zip(self.divisible, answer.point, strict=True):

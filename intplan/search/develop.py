@@ -9,7 +9,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary, Multipliers, Status
-from intplan.relaxation.start import cold_start
+from intplan.relaxation.start import NoDualBasis, cold_start
 from intplan.search import branching
 from intplan.search.context import Context
 from intplan.search.diving import dive
@@ -19,6 +19,7 @@ from intplan.search.node import Branch
 from intplan.search.tightening import Bounds, tighten_by_cost
 from intplan.sheet.problem import Number, lowest
 
+PIVOTS_A_PLACE = 50  # pivots a variable after which a run is not believed to end
 FRACTION = 1e-6  # distance from a whole value that counts as fractional
 ATTEMPTS = 12  # times a node is solved again after its own tightenings
 ROUND_ALWAYS = 64  # nodes at which rounding is tried; later at every eighth
@@ -53,10 +54,14 @@ class NodeWork:
     ----------
     context : the search
     number, depth : of the node
-    inherited : safe bound of its parent
-    dictionary : the parent's last dictionary, owned
+    inherited, closure : safe bound of its parent, and the record of what proves it
+    dictionary : the parent's last dictionary, owned; the root makes its own
     bounds : the node's bounds, owned
-    steps : receives the node's tightenings; see `intplan.search.record`
+
+    Attributes
+    ----------
+    bound : the best safe bound so far
+    steps : the node's tightenings; see `intplan.search.record`
     """
 
     def __init__(
@@ -64,17 +69,20 @@ class NodeWork:
         context: Context,
         number: int,
         inherited: float,
-        dictionary: Dictionary,
+        closure: dict[str, Any] | None,
+        dictionary: Dictionary | None,
         bounds: Bounds,
-        steps: list[dict[str, Any]],
     ) -> None:
         self.context = context
         self.number = number
         self.bound = inherited
-        self.dictionary = dictionary
+        if dictionary is not None:
+            self.dictionary = dictionary
         self.bounds = bounds
-        self.steps = steps
+        self.steps: list[dict[str, Any]] = []
+        self._inherited_closure = closure
         self._proof: Proof | None = None  # of the bound, where it is better than the inherited
+        self._exact_closure: dict[str, Any] | None = None  # the same, where rationals proved it
         self._closure_of: tuple[Proof, dict[str, Any]] | None = None
 
     # ------------------------------------------------------------------ the steps in order
@@ -109,16 +117,12 @@ class NodeWork:
                 if self._take_plan(proof):
                     return None
                 if attempt + 1 < ATTEMPTS and self.tighten(proof):
-                    if self.closed:
-                        return None
                     continue
                 return self._pin(proof)
             if self.try_rounding() and context.best.beats(proof.bound):
                 return self.close("beaten", proof)
             last = attempt + 1 == ATTEMPTS
             if not last and self.tighten(proof):
-                if self.closed:
-                    return None
                 continue
             if context.time_to_dive() and dive(
                 context, dictionary, self.bounds, guided=context.nodes > 1
@@ -126,8 +130,6 @@ class NodeWork:
                 if context.best.beats(proof.bound):
                     return self.close("beaten", proof)
                 if not last and self.tighten(proof):
-                    if self.closed:
-                        return None
                     continue
             choice = branching.choose(dictionary, rows, context.best.cutoff, context.costs)
             context.pivots += choice.pivots
@@ -141,8 +143,15 @@ class NodeWork:
 
     @property
     def closed(self) -> bool:
-        """Whether the node's end has been recorded."""
-        return self.context.record.tree.nodes[self.number]["outcome"] != "waiting"
+        """Whether the node is known to hold nothing better."""
+        return self.context.record.tree.nodes[self.number]["outcome"] in ("beaten", "empty", "plan")
+
+    @property
+    def closure(self) -> dict[str, Any] | None:
+        """The record of what proves the bound."""
+        if self._exact_closure is not None:
+            return self._exact_closure
+        return self._inherited_closure if self._proof is None else self._closure(self._proof)
 
     # ------------------------------------------------------------------ relaxation
 
@@ -158,11 +167,15 @@ class NodeWork:
             if fresh:
                 self._refactor()
             status = self._reoptimise(cutoff)
+            if status is Status.LIMIT:
+                continue
             if status is Status.BEATEN:
                 proof = self._cost_proof()
                 if context.best.beats(proof.bound):
                     return self.close("beaten", proof)
                 status = self._reoptimise(math.inf)
+                if status is Status.LIMIT:
+                    continue
             if status is Status.EMPTY:
                 proof = context.prover.prove(
                     0, self.dictionary.row_multipliers(self.dictionary.failing_row),
@@ -186,16 +199,21 @@ class NodeWork:
         return self.solve_exactly()
 
     def _reoptimise(self, cutoff: float) -> Status:
-        dictionary = self.dictionary
+        """Re-optimise; LIMIT where doubles go on for ever, as they may from a bad basis."""
+        dictionary, stop = self.dictionary, self.context.limits.out_of_time
+        most = PIVOTS_A_PLACE * len(dictionary.place)
         try:
-            status = dictionary.reoptimise(cutoff)
+            status = dictionary.reoptimise(cutoff, most, stop)
             if status is Status.OPTIMAL and dictionary.drifted():
                 dictionary.refactor()
-                status = dictionary.reoptimise(cutoff)
+                status = dictionary.reoptimise(cutoff, most, stop)
+            return status
         except np.linalg.LinAlgError:
             self._start_again()
-            status = self.dictionary.reoptimise(cutoff)
-        return status
+        try:
+            return self.dictionary.reoptimise(cutoff, most, stop)
+        except np.linalg.LinAlgError:
+            return Status.LIMIT
 
     def _refactor(self) -> None:
         try:
@@ -205,11 +223,21 @@ class NodeWork:
 
     def _start_again(self) -> None:
         """Replace a basis that is singular in doubles by a cold start with the same rows."""
-        old = self.dictionary
-        self.dictionary = cold_start(
-            old.rows, old.cost, self.bounds.least, self.bounds.most, old.held_rows()
-        )
-        self.dictionary.pivots += old.pivots
+        self._start_with(self.dictionary.held_rows())
+        self.context.record.tree.nodes[self.number]["start"] = "cold"
+
+    def _start_with(self, held: np.ndarray) -> None:
+        """Make a dictionary from nothing; the slack basis where doubles find no better one."""
+        old, bounds = self.dictionary, self.bounds
+        try:
+            new = cold_start(
+                old.rows, old.cost, bounds.least, bounds.most, held,
+                self.context.limits.out_of_time,
+            )  # fmt: skip
+        except (NoDualBasis, np.linalg.LinAlgError):
+            new = Dictionary.at_slack_basis(old.rows, old.cost, bounds.least, bounds.most, held)
+        new.pivots += old.pivots
+        self.dictionary = new
 
     def _cost_proof(self) -> Proof:
         return self.context.prover.prove(
@@ -252,7 +280,7 @@ class NodeWork:
         return False
 
     def tighten(self, proof: Proof) -> bool:
-        """Tighten by reduced costs; tell whether the node must be solved again (or closed)."""
+        """Tighten by reduced costs; tell whether the node must be solved again."""
         context = self.context
         if context.best.value is None:
             return False
@@ -355,10 +383,14 @@ class NodeWork:
         fixed = self.dictionary.copy()
         values = np.rint(x)
         fixed.set_bounds(whole.nonzero()[0].tolist(), values, values)
-        if fixed.reoptimise() is not Status.OPTIMAL:
-            return None
-        plan = arithmetic.guess_plan(np.where(whole, values, fixed.activities()))
-        return plan if plan is not None else arithmetic.solve_divisible(x)
+        stop = self.context.limits.out_of_time
+        try:
+            if fixed.reoptimise(stop=stop) is not Status.OPTIMAL:
+                return None
+            plan = arithmetic.guess_plan(np.where(whole, values, fixed.activities()))
+        except np.linalg.LinAlgError:
+            plan = None
+        return plan if plan is not None else arithmetic.solve_divisible(x, stop)
 
     def _pin(self, proof: Proof) -> Split | None:
         """Go on from a whole point whose bound is a hair below its plan, or that is none.
@@ -380,12 +412,7 @@ class NodeWork:
 
     def _settle_pinned(self) -> Split | None:
         """Solve the node without its cuts, guess exact multipliers, and else go to rationals."""
-        context, old = self.context, self.dictionary
-        self.dictionary = cold_start(
-            old.rows, old.cost, self.bounds.least, self.bounds.most,
-            np.arange(context.record.rules),
-        )  # fmt: skip
-        self.dictionary.pivots += old.pivots
+        self._start_with(np.arange(self.context.record.rules))
         if self._reoptimise(math.inf) is Status.OPTIMAL:
             self._refactor()
             proof = self._cost_proof()
@@ -455,8 +482,9 @@ class NodeWork:
         whole = context.problem.whole
         for j, x in enumerate(answer.point):
             if whole[j] and x.denominator != 1:
-                self.bound = max(self.bound, bound)
-                self._finish("split", self.bound, closure)
+                if bound > self.bound:
+                    self.bound, self._exact_closure = bound, closure
+                self._finish("split", self.bound, self.closure or closure)
                 return Split(j, _inside(x), 0.0, 0.0)
         plan = [lowest(x) for x in answer.point]
         if not context.arithmetic.fits(plan):
@@ -473,11 +501,12 @@ class NodeWork:
 
     def leave(self) -> None:
         """Record what is known of a node whose work was broken off."""
-        if self._proof is not None and not self.closed:
-            self._finish("waiting", self.bound, self._closure(self._proof))
+        waiting = self.context.record.tree.nodes[self.number]["outcome"] == "waiting"
+        if waiting and self.closure is not None:
+            self._finish("waiting", self.bound, self.closure)
 
     def _keep_open(self, proof: Proof) -> None:
-        self._finish("split", self.bound, self._closure(proof))
+        self._finish("split", self.bound, self.closure or self._closure(proof))
 
     def _closure(self, proof: Proof) -> dict[str, Any]:
         """Return the record of a proof, made once."""

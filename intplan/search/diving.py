@@ -50,10 +50,11 @@ def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> b
         least, most, value = bounds.least.item(column), bounds.most.item(column), x.item(column)
         rounded_up, rounded_down = (float(np.ceil(value)), most), (least, float(np.floor(value)))
         first, second = (rounded_up, rounded_down) if up else (rounded_down, rounded_up)
-        if not _fix(context, dictionary, bounds, column, first) and not _fix(
-            context, dictionary, bounds, column, second
-        ):
-            break
+        kept = dictionary.copy()
+        if not _fix(context, dictionary, bounds, column, first):
+            kept.pivots, dictionary = dictionary.pivots, kept
+            if not _fix(context, dictionary, bounds, column, second):
+                break
     context.pivots += dictionary.pivots - before
     return found
 

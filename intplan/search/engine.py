@@ -25,6 +25,7 @@ from time import perf_counter
 
 import numpy as np
 
+from intplan.relaxation.dictionary import Stopped
 from intplan.relaxation.rows import RowStore
 from intplan.relaxation.start import NoDualBasis
 from intplan.search.arithmetic import Arithmetic
@@ -32,7 +33,6 @@ from intplan.search.branching import PseudoCosts
 from intplan.search.context import Context
 from intplan.search.develop import NodeWork, NoLimit, Split
 from intplan.search.evidence import LEAST, MOST, Prover
-from intplan.search.exact import Stopped
 from intplan.search.incumbent import Incumbent
 from intplan.search.limits import Limits, Progress
 from intplan.search.node import Branch, Node, Shelf, Snapshot
@@ -80,15 +80,14 @@ def branch_and_cut(
     return Search(problem, gap, limits).run()
 
 
-def find_plan(problem: Problem, limits: Limits) -> SearchResult:
-    """Find any whole-unit plan, whatever the aim: optimal means that one was found.
+def drawn_home(problem: Problem) -> Problem:
+    """Return the problem with an aim that draws activities without a bound to the one they have.
 
-    The search is given an aim that draws activities without a bound towards the bound they
-    have, so that it does not wander off.
+    A search for any plan takes it, so that it does not wander off.
     """
     pull = np.isfinite(problem.least) * 1 - np.isfinite(problem.most) * 1
     columns = [int(j) for j in pull.nonzero()[0]]
-    stand_in = replace(
+    return replace(
         problem,
         cost=pull.astype(float),
         exact_cost=tuple((j, int(pull[j])) for j in columns),
@@ -96,7 +95,12 @@ def find_plan(problem: Problem, limits: Limits) -> SearchResult:
         cost_factor=Fraction(1),
         cost_step=Fraction(1) if problem.whole[columns].all() else None,
     )
-    result = Search(stand_in, Fraction(0), limits, first_plan=True).run()
+
+
+def find_plan(problem: Problem, limits: Limits) -> SearchResult:
+    """Find any whole-unit plan, whatever the aim: optimal means that one was found."""
+    result = Search(drawn_home(problem), Fraction(0), limits, first_plan=True).run()
+    result.any_plan = True
     result.bound = None
     if result.plan is not None:
         result.outcome, result.ended_by = "optimal", None
@@ -142,7 +146,7 @@ class Search:
         self.tree = record.tree
         self.longest_dive = 2 * len(problem.cost) + DIVE
         self.heap: list[Node] = []
-        self.shelf = Shelf(SHELF)
+        self.shelf = Shelf(rows, problem.cost, SHELF)
         self.numbered = 0
         self.open_bound = math.inf  # least bound of nodes left open for good
         self.ended_by: str | None = None
@@ -225,7 +229,7 @@ class Search:
         context = self.context
         dictionary, bounds = self.shelf.take(node.origin)
         before, total = dictionary.pivots, context.pivots
-        work = NodeWork(context, node.number, node.bound, dictionary, bounds, [])
+        work = NodeWork(context, node.number, node.bound, node.closure, dictionary, bounds)
         context.nodes += 1
         split = work.develop(node.branch) if work.enter(node.branch) else None
         context.pivots += work.dictionary.pivots - before
@@ -251,7 +255,7 @@ class Search:
             Branch(column, LEAST, float(floor + 1), floor + 1 - value, cost),
         ]
         if work.bounds.most[column] - work.bounds.least[column] == 1:
-            down_first = value - floor < 0.5
+            down_first = value - floor <= 0.5
         else:
             down_first = (split.down_gain, value - floor) < (split.up_gain, 0.5)
         if not down_first:
@@ -260,20 +264,21 @@ class Search:
         now = Snapshot(work.dictionary, work.bounds)
         children = []
         for branch, origin in zip(branches, (now, later), strict=True):
-            child = Node(self.numbered, work.number, depth + 1, work.bound, branch, origin)
+            child = Node(
+                self.numbered, work.number, depth + 1, work.bound, work.closure, branch, origin
+            )
             self.numbered += 1
             self.context.record.open(child.number, work.number, depth + 1, branch.added())
             children.append(child)
-        self.shelf.put(now)
         self.shelf.put(later)
+        self.shelf.put(now, at_once=True)
         heapq.heappush(self.heap, children[1])
         return children[0]
 
     def _close_unsolved(self, node: Node) -> None:
         """Close a node by the bound it inherited, which its parent's multipliers prove."""
         self.shelf.forget(node.origin)
-        closure = self.tree.nodes[node.parent]["evidence"]["closure"]
-        self.context.record.close(node.number, "beaten", node.bound, [], closure)
+        self.context.record.close(node.number, "beaten", node.bound, [], node.closure)
 
     # ------------------------------------------------------------------ aims without a limit
 
@@ -296,10 +301,17 @@ class Search:
         one whole-unit plan exists (R. R. Meyer, On the existence of optimal solutions to integer
         and mixed-integer programming problems, Mathematical Programming 7:223-235, 1974).
         """
-        result = find_plan(self.problem, self.limits)
-        result.seconds = self.limits.seconds()
+        if self.best.plan is not None:
+            self.ended_by = None
+            result = self._result()
+        else:
+            result = find_plan(self.problem, self.limits)
+            result.nodes += self.context.nodes
+            result.pivots += self.context.pivots
+            result.seconds = self.limits.seconds()
         if result.plan is not None:
-            result.outcome, result.ray, result.bound = "unbounded", ray, None
+            result.outcome, result.ended_by = "unbounded", None
+            result.ray, result.bound = ray, None
         return result
 
     # ------------------------------------------------------------------ answers
@@ -329,6 +341,11 @@ class Search:
         bound = self.best.rounded_up(lowest)
         return bound if value is None else min(bound, value)
 
+    def _within_gap(self, value: Number | None, bound: Number | None) -> bool:
+        if value is None or bound is None:
+            return False
+        return abs(Fraction(bound) - value) * 100 <= self.best.gap * abs(value)
+
     def _result(self) -> SearchResult:
         value, best = self._value(), self.best
         if self.ended_by is None and self.open_bound < math.inf:
@@ -337,7 +354,9 @@ class Search:
         bound = self._bound() if best.value is not None or not exhausted else None
         if value is not None and bound == value:
             outcome, self.ended_by = "optimal", None
-        elif exhausted:
+        elif self._within_gap(value, bound):
+            outcome, self.ended_by = "within_gap", None
+        elif exhausted:  # with a plan, its caller knows better: it sought a plan or has a ray
             outcome = "infeasible" if value is None else "within_gap"
         else:
             outcome = "unfinished"

@@ -21,13 +21,10 @@ from fractions import Fraction
 
 import numpy as np
 
+from intplan.relaxation.dictionary import Stopped
 from intplan.sheet.problem import Number
 
 GREEDY = 200  # pivots by greatest violation before the least-index rule takes over
-
-
-class Stopped(Exception):
-    """Raised when the caller's `stop` asks for an end in the middle of an exact run."""
 
 
 @dataclass

@@ -3,21 +3,39 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary
+from intplan.relaxation.rows import RowStore
 from intplan.search.evidence import LEAST
 from intplan.search.result import Added
 from intplan.search.tightening import Bounds
 
 
 class Snapshot:
-    """The last dictionary and bounds of a split node, for the children that still wait."""
+    """The last dictionary and bounds of a split node, for a child that still waits.
 
-    __slots__ = ("bounds", "dictionary")
+    Attributes
+    ----------
+    dictionary : None once it was shed; then `basis` holds its basic and non-basic variables
+    """
+
+    __slots__ = ("basis", "bounds", "dictionary")
 
     def __init__(self, dictionary: Dictionary, bounds: Bounds) -> None:
-        self.dictionary = dictionary
+        self.dictionary: Dictionary | None = dictionary
         self.bounds = bounds
+        self.basis: tuple[np.ndarray, np.ndarray] | None = None
+
+    def shed(self) -> None:
+        """Keep nothing of the dictionary but its basis."""
+        if self.dictionary is not None:
+            self.basis = (
+                self.dictionary.basic.astype(np.int32), self.dictionary.nonbasic.astype(np.int32)
+            )  # fmt: skip
+            self.dictionary = None
 
 
 @dataclass(slots=True)
@@ -45,13 +63,15 @@ class Node:
     Attributes
     ----------
     bound : safe bound inherited from the parent
-    origin : basis and bounds of the parent; the child that is solved at once owns them
+    closure : the record of what proves it
+    origin : basis and bounds of the parent, owned
     """
 
     number: int
     parent: int
     depth: int
     bound: float
+    closure: dict[str, Any]
     branch: Branch
     origin: Snapshot
 
@@ -61,44 +81,48 @@ class Node:
 
 
 class Shelf:
-    """Keeps the tables of waiting snapshots within a limit of memory.
+    """Keeps the dictionaries of waiting snapshots within a limit of memory.
 
-    A snapshot that does not fit gives up its table and keeps its basis, from which the table is
-    computed again by one dense solve when its turn comes.
+    A snapshot that does not fit keeps its basis only, from which the dictionary is computed again
+    by one dense solve when its turn comes.
 
     Parameters
     ----------
+    rows, cost : what the dictionaries are of
     limit : bytes of tables to keep
     """
 
-    def __init__(self, limit: int) -> None:
+    def __init__(self, rows: RowStore, cost: np.ndarray, limit: int) -> None:
+        self.rows = rows
+        self.cost = cost
         self.limit = limit
         self.held = 0
 
-    def put(self, snapshot: Snapshot) -> None:
-        """Account for a snapshot, shedding its table if the shelf is full."""
+    def put(self, snapshot: Snapshot, at_once: bool = False) -> None:
+        """Account for a snapshot, shedding its dictionary if the shelf is full.
+
+        One that is wanted `at_once` is kept all the same.
+        """
+        assert snapshot.dictionary is not None
         size = snapshot.dictionary.table.nbytes
-        if self.held + size > self.limit:
-            snapshot.dictionary.shed()
+        if self.held + size > self.limit and not at_once:
+            snapshot.shed()
         else:
             self.held += size
 
     def take(self, snapshot: Snapshot) -> tuple[Dictionary, Bounds]:
-        """Return the snapshot's dictionary and bounds for the last child to use them.
-
-        Raises
-        ------
-        numpy.linalg.LinAlgError
-            If the table was shed and the basis is singular in doubles.
-        """
-        dictionary = snapshot.dictionary
-        if dictionary.table is None:
-            dictionary.refactor()
-        else:
-            self.held -= dictionary.table.nbytes
-        return dictionary, snapshot.bounds
+        """Return the snapshot's dictionary and bounds, for its child to own."""
+        self.forget(snapshot)
+        dictionary, bounds = snapshot.dictionary, snapshot.bounds
+        if dictionary is None:
+            assert snapshot.basis is not None
+            basic, nonbasic = (part.astype(int) for part in snapshot.basis)
+            dictionary = Dictionary.at_basis(
+                self.rows, self.cost, bounds.least, bounds.most, (basic, nonbasic)
+            )
+        return dictionary, bounds
 
     def forget(self, snapshot: Snapshot) -> None:
-        """Account for a snapshot that nobody will use."""
-        if snapshot.dictionary.table is not None:
+        """Account for a snapshot that leaves."""
+        if snapshot.dictionary is not None:
             self.held -= snapshot.dictionary.table.nbytes

@@ -31,7 +31,7 @@ class Cut:
     kind : "gomory" or "cover"
     columns, coefficients, least, most : the row, doubles that are exact as given
     leans : whether it leans on the cut-off, through bounds that do
-    evidence : what it was derived from; see `intplan.search.cuts`
+    evidence : what it was derived from; see `docs/design.md`
     """
 
     kind: str
@@ -50,13 +50,16 @@ class SearchResult:
     Attributes
     ----------
     outcome : "optimal", "within_gap", "infeasible", "unbounded" or "unfinished"
-    ended_by : None, "time", "nodes", "interrupt", or "range" where whole activities without a
-        bound ran past `intplan.search.engine.RANGE`
+    ended_by : None, "time", "nodes", "interrupt", or "range" where a whole activity without a
+        bound would have to be branched on beyond `intplan.search.engine.RANGE`, or any beyond
+        what doubles count
     plan : exact amounts by column (activities, then bends), or None
     value : exact value of the plan in the aim's units
     bound : exact number that no plan's value can pass, None where there is no finite one
     ray : integers by column, a direction along which the aim improves for ever
     tree : the search tree; node attributes as in `docs/design.md`
+    any_plan : the tree looks for any plan, whatever the aim; its bounds are of another aim,
+        that of `intplan.search.engine.drawn_home`
     cuts : the cuts in the order of their numbers
     nodes, pivots : nodes solved and pivots made, trials included
     seconds : time spent
@@ -69,6 +72,7 @@ class SearchResult:
     bound: Number | None
     ray: list[int] | None
     tree: nx.DiGraph
+    any_plan: bool = False
     cuts: list[Cut] = field(default_factory=list)
     nodes: int = 0
     pivots: int = 0

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from fractions import Fraction
-from typing import Any
 
 import numpy as np
 
@@ -21,7 +20,7 @@ from intplan.search.develop import NodeWork, Split
 from intplan.search.evidence import Proof
 from intplan.search.result import Added, Cut
 from intplan.search.tightening import Bounds
-from intplan.sheet.problem import ExactRow, Problem
+from intplan.sheet.problem import ExactRow, Number, Problem
 
 CUT_ROUNDS = 12
 GOMORY_ROWS = 30  # dictionary rows tried in a round
@@ -41,8 +40,7 @@ class RootWork(NodeWork):
         problem = context.problem
         columns = len(problem.cost)
         bounds = Bounds(*_outward(problem), np.zeros((2, columns), bool))
-        steps: list[dict[str, Any]] = []
-        super().__init__(context, 0, -math.inf, None, bounds, steps)
+        super().__init__(context, 0, -math.inf, None, None, bounds)
         self._knapsacks: set[int] | None = None
         self._aggregator = Aggregator(context.rows, context.record.rules, problem.whole)
 
@@ -65,28 +63,28 @@ class RootWork(NodeWork):
         """Make the first dictionary."""
         context = self.context
         self.dictionary = cold_start(
-            context.rows, context.problem.cost, self.bounds.least, self.bounds.most
-        )
+            context.rows, context.problem.cost, self.bounds.least, self.bounds.most,
+            stop=context.limits.out_of_time,
+        )  # fmt: skip
 
     def start_from_basis(self, basis: list[int]) -> None:
         """Make the first dictionary at a basis that exact arithmetic found dual feasible."""
         context = self.context
-        self.dictionary = Dictionary.at_slack_basis(
-            context.rows, context.problem.cost, self.bounds.least, self.bounds.most
-        )
         inside = set(basis)
         variables = range(len(context.problem.cost) + context.rows.count)
-        self.dictionary.adopt_basis(
-            np.array(basis, int), np.array([v for v in variables if v not in inside], int)
-        )
+        outside = np.array([v for v in variables if v not in inside], int)
+        self.dictionary = Dictionary.at_basis(
+            context.rows, context.problem.cost, self.bounds.least, self.bounds.most,
+            (np.array(basis, int), outside),
+        )  # fmt: skip
 
     def develop_root(self) -> Split | None:
         """Solve the root with rounds of cuts; None once it is closed, else where to branch."""
         opened = self._open_relaxation()
         if not isinstance(opened, Proof):
             return opened
-        self.cut()
-        return None if self.closed else self.develop()
+        split = self.cut()
+        return split if split is not None or self.closed else self.develop()
 
     def _open_relaxation(self) -> Proof | Split | None:
         """Solve the relaxation and tighten by a first plan, where rounding finds one."""
@@ -95,10 +93,9 @@ class RootWork(NodeWork):
             return proof
         if self.try_rounding() and len(self.context.prover.open):
             self._bound_by_cost()
-        if not self.closed:
-            self.tighten(proof)
+        self.tighten(proof)
         self.context.prover.set_box(self.bounds.least, self.bounds.most)
-        return None if self.closed else proof
+        return proof
 
     def _bound_by_cost(self) -> None:
         """Bound activities by what a better plan may cost at all: no multipliers, own bounds."""
@@ -108,39 +105,42 @@ class RootWork(NodeWork):
 
     # ------------------------------------------------------------------ cuts
 
-    def cut(self) -> None:
-        """Add cuts in rounds while they lift the bound; keep those that bind."""
+    def cut(self) -> Split | None:
+        """Add cuts while they lift the bound; a split if that had to be settled in rationals."""
+        split = self._cut_in_rounds()
+        rules = self.context.record.rules
+        self.context.record.tree.nodes[0]["added"] = tuple(
+            Added("cut", int(i) - rules, float(self.context.rows.least[i]))
+            for i in self.dictionary.held_rows()
+            if i >= rules
+        )
+        return split
+
+    def _cut_in_rounds(self) -> Split | None:
         started, stalled = self.dictionary.value, 0
         for _ in range(CUT_ROUNDS):
             rows = self.fractional_rows()
             if not len(rows) or self.context.limits.out_of_time():
-                break
+                return None
             before = self.dictionary.value
             numbers = self._separate(rows)
             if not len(numbers):
-                break
+                return None
             self.dictionary.add_rows(numbers)
             proof = self.relax()
             if not isinstance(proof, Proof):
-                break
+                return proof
             self._drop_slack_cuts()
             self.try_rounding()
             if self.context.best.beats(proof.bound):
-                self.close("beaten", proof)
-                break
-            if self.tighten(proof) and self.closed:
-                break
+                return self.close("beaten", proof)
+            self.tighten(proof)
             gain = self.dictionary.value - before
             total = self.dictionary.value - started
             stalled = stalled + 1 if gain < STALL * max(total, 1e-9) else 0
             if stalled >= PATIENCE:
-                break
-        held = self.dictionary.held_rows()
-        self.context.record.tree.nodes[0]["added"] = tuple(
-            Added("cut", int(i) - self.context.record.rules, float(self.context.rows.least[i]))
-            for i in held
-            if i >= self.context.record.rules
-        )
+                return None
+        return None
 
     def _separate(self, rows: np.ndarray) -> np.ndarray:
         """Find cuts at the dictionary's point and put the chosen ones into the store."""
@@ -279,11 +279,12 @@ class RootWork(NodeWork):
             low, high = problem.exact_least[j], problem.exact_most[j]
             for side, limit, inward in ((0, low, math.ceil), (1, high, math.floor)):
                 if limit is not None and limit.denominator != 1:
-                    value = float(inward(limit))
-                    bounds.set(j, side, value, False)
-                    self.steps.append(
-                        {"by": "whole", "changes": [(j, side, value)], "leans": False}
-                    )
+                    value = _outward_double(inward(limit), side)
+                    if (value < limit) if side else (value > limit):
+                        bounds.set(j, side, value, False)
+                        self.steps.append(
+                            {"by": "whole", "changes": [(j, side, value)], "leans": False}
+                        )
             if bounds.least[j] > bounds.most[j]:
                 self._finish("empty", math.inf, {"column": j, "leans": False})
                 return False
@@ -344,8 +345,16 @@ def _outward(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     least, most = problem.least.copy(), problem.most.copy()
     for j in (np.maximum(np.abs(least), np.abs(most)) > LARGE).nonzero()[0].tolist():
         low, high = problem.exact_least[j], problem.exact_most[j]
-        if low is not None and Fraction(least.item(j)) > low:
-            least[j] = np.nextafter(least[j], -np.inf)
-        if high is not None and Fraction(most.item(j)) < high:
-            most[j] = np.nextafter(most[j], np.inf)
+        if low is not None:
+            least[j] = _outward_double(low, 0)
+        if high is not None:
+            most[j] = _outward_double(high, 1)
     return least, most
+
+
+def _outward_double(value: Number, side: int) -> float:
+    """Return the nearest double that is no tighter than a bound of a side."""
+    nearest = float(value)
+    if side:
+        return nearest if nearest >= value else math.nextafter(nearest, math.inf)
+    return nearest if nearest <= value else math.nextafter(nearest, -math.inf)

@@ -201,10 +201,10 @@ class Propagator:
             low, high = bounds.least.item(j), bounds.most.item(j)
             if abs(a) * (high - low) <= slack or math.isinf(low if side else high):
                 continue
-            margin = max(MARGIN, error / abs(a))
-            if margin > 0.25:
+            share = error / abs(a)
+            if share > 0.25:
                 continue
-            value = self._rounded(j, side, slack / a, margin, divisible, low, high)
+            value = self._rounded(j, side, slack / a, share, divisible, low, high)
             if value is None or abs(value) > EXACT:
                 continue
             leans = self._leans(row, j, limit, bounds)
@@ -220,16 +220,18 @@ class Propagator:
         column: int,
         side: int,
         step: float,
-        margin: float,
+        share: float,
         divisible: bool,
         low: float,
         high: float,
     ) -> float | None:
         """Return the bound a step away from the other one, rounded to what is proven.
 
-        None where it is no better than the bound there is.
+        `share` is the error that may be in the step.  None where the bound is no better than the
+        one there is.
         """
         value = (low if side else high) + step
+        margin = max(MARGIN, share)
         if self.whole[column]:
             if side:
                 value = math.floor(value + margin)
@@ -238,7 +240,7 @@ class Propagator:
             return float(value) if value > low else None
         if not divisible:
             return None
-        margin = margin - MARGIN + 1e-9 * (1.0 + abs(value) + abs(step))
+        margin = share + 1e-9 * (1.0 + abs(value) + abs(step))
         if side:
             value += margin
             gain = high - value

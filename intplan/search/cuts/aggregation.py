@@ -51,7 +51,8 @@ class Aggregator:
         self.rows = rows
         self.rules = rules
         self.whole = whole
-        self.filled = rows.matrix != 0
+        limited = np.isfinite(rows.least) | np.isfinite(rows.most)
+        self.filled = (rows.matrix != 0) & limited[:, None]
         parts = (self.filled & ~whole).sum(axis=1)
         equal = rows.least == rows.most
         switching = (parts == 1) & self.filled[:, whole].any(axis=1) & ~equal
@@ -92,7 +93,8 @@ class Aggregator:
         """Return by activity the switch that leaves it least room."""
         matrix = self.rows.matrix
         parts = (matrix != 0) & ~self.whole
-        single = (parts.sum(axis=1) == 1) & (self.rows.least != self.rows.most)
+        limited = np.isfinite(self.rows.least) | np.isfinite(self.rows.most)
+        single = (parts.sum(axis=1) == 1) & (self.rows.least != self.rows.most) & limited
         single &= (matrix[:, self.whole] != 0).any(axis=1)
         numbers = single.nonzero()[0]
         columns = parts[numbers].argmax(axis=1)

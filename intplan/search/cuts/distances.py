@@ -77,7 +77,9 @@ class Limits:
         below = values - rows.least <= rows.most - values
         sides = np.where(below, 1.0, -1.0)
         sides[rows.least == rows.most] = 0.0
-        return cls(np.arange(rows.count), np.where(below, rows.least, rows.most), sides)
+        at = np.where(below, rows.least, rows.most)
+        limited = np.isfinite(at)  # a row without any limit is measured from nothing
+        return cls(np.arange(rows.count), np.where(limited, at, 0.0), np.where(limited, sides, 0.0))
 
 
 def nearer_least(x: np.ndarray, bounds: Bounds) -> np.ndarray:
