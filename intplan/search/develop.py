@@ -351,11 +351,7 @@ class NodeWork:
         context = self.context
         if context.nodes > ROUND_ALWAYS and context.nodes % 8:
             return False
-        found = False
-        for point in context.rounder.round(self.dictionary.activities(), self.bounds):
-            plan = context.arithmetic.guess_plan(point)
-            found |= plan is not None and context.best.offer(plan)
-        return found
+        return context.round_to_plan(self.dictionary.activities(), self.bounds)
 
     def _take_plan(self, proof: Proof) -> bool:
         """Take the plan at a point with whole values; tell whether it closed the node."""

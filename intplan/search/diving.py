@@ -43,9 +43,7 @@ def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> b
             plan = context.arithmetic.guess_plan(x)
             found |= plan is not None and context.best.offer(plan)
             break
-        for point in context.rounder.round(x, bounds):
-            plan = context.arithmetic.guess_plan(point)
-            found |= plan is not None and context.best.offer(plan)
+        found |= context.round_to_plan(x, bounds)
         column, up = _choose(context, dictionary, rows, guided)
         least, most, value = bounds.least.item(column), bounds.most.item(column), x.item(column)
         rounded_up, rounded_down = (float(np.ceil(value)), most), (least, float(np.floor(value)))

@@ -11,7 +11,6 @@ import numpy as np
 from intplan.search.tightening import Bounds
 
 NEAR = 1e-9
-STEPS = 60  # most activities moved by one improvement
 
 
 class Rounder:
@@ -43,9 +42,15 @@ class Rounder:
         self.tolerance = 1e-9 * (1.0 + np.abs(matrix).sum(axis=1))
         self.direction = -np.sign(cost)
         self.sizes = np.abs(cost)
+        self._moves = matrix * self.direction
+        self._still = self._moves == 0
+        self._sizes = np.where(self._still, 1.0, np.abs(self._moves))
+        self._columns: dict[int, tuple[np.ndarray, np.ndarray, np.ndarray]] = {}
 
-    def round(self, x: np.ndarray, bounds: Bounds) -> list[np.ndarray]:
-        """Return whole points near x that meet the rules, improved; for all-whole problems.
+    def round(self, x: np.ndarray, bounds: Bounds) -> np.ndarray | None:
+        """Return a whole point near x that meets the rules, improved; for all-whole problems.
+
+        None where none is found.
 
         Parameters
         ----------
@@ -53,53 +58,47 @@ class Rounder:
         bounds : the bounds to keep to
         """
         if not self.all_whole or not len(x):
-            return []
+            return None
         nearest = np.rint(x)
         close = np.abs(x - nearest) < 1e-6
-        found = []
         locked = np.where(self.down_locks <= self.up_locks, np.floor(x), np.ceil(x))
         for point in (np.where(close, nearest, locked), nearest):
             values = self.matrix @ point
             if (values >= self.row_least - self.tolerance).all() and (
                 values <= self.row_most + self.tolerance
             ).all():
-                found.append(self._improve(point, values, bounds))
-                break
-        return found
+                return self._improve(point, values, bounds)
+        return None
 
     def _improve(self, point: np.ndarray, values: np.ndarray, bounds: Bounds) -> np.ndarray:
-        """Move activities one after the other as far as the aim and the rules allow.
+        """Move activities as far as the aim and the rules allow, those that gain most first.
 
-        A row that gains room does not lengthen the steps found before: what is moved stays
-        feasible, and only the rows that changed are looked at again.
+        What a move leaves to the others is looked up when their turn comes.
         """
-        point = point.copy()
-        below = np.where(np.isfinite(self.row_most), self.row_most - values, np.inf)
-        above = np.where(np.isfinite(self.row_least), values - self.row_least, np.inf)
-        rows = np.arange(len(values))
-        steps = np.full(len(point), np.inf)
-        for _ in range(STEPS):
-            steps = np.minimum(steps, self._steps(rows, below, above))
-            room = np.where(self.direction > 0, bounds.most - point, point - bounds.least)
-            units = np.floor(np.minimum(steps, room) + NEAR)
-            units[~np.isfinite(units) | (self.direction == 0)] = 0.0
-            gains = units * self.sizes
-            j = gains.argmax()
-            if gains[j] <= 0:
-                break
-            step = units[j] * self.direction[j]
-            point[j] += step
-            steps[j] -= units[j]
-            rows = self.matrix[:, j].nonzero()[0]
-            change = self.matrix[rows, j] * step
-            below[rows] -= change
-            above[rows] += change
+        below, above = self.row_most - values, values - self.row_least
+        np.maximum(below, 0.0, out=below)
+        np.maximum(above, 0.0, out=above)
+        room = np.where(self.direction > 0, bounds.most - point, point - bounds.least)
+        slack = np.where(self._moves > 0, below[:, None], above[:, None])
+        steps = np.where(self._still, np.inf, slack / self._sizes).min(axis=0, initial=np.inf)
+        units = np.floor(np.minimum(steps, room) + NEAR)
+        gains = np.where(np.isfinite(units), units, 0.0) * self.sizes
+        order = (-gains).argsort(kind="stable")
+        for j in order[: np.count_nonzero(gains > 0)].tolist():
+            rows, moves, sizes = self._column(j)
+            left = np.where(moves > 0, below[rows], above[rows]) / sizes
+            step = min(left.min(initial=np.inf), room.item(j))
+            step = float(np.floor(step + NEAR))
+            if step > 0:
+                point[j] += step * self.direction[j]
+                below[rows] -= moves * step
+                above[rows] += moves * step
         return point
 
-    def _steps(self, rows: np.ndarray, below: np.ndarray, above: np.ndarray) -> np.ndarray:
-        """Return how many units some rows let each activity move as its cost asks, (columns,)."""
-        moves = self.matrix[rows] * self.direction
-        below, above = np.maximum(below[rows], 0.0), np.maximum(above[rows], 0.0)
-        steps = np.where(moves > 0, below[:, None], above[:, None]) / np.abs(moves)
-        steps[moves == 0] = np.inf
-        return steps.min(axis=0, initial=np.inf)
+    def _column(self, j: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Return the rows an activity stands in, and what a unit as its cost asks adds to them."""
+        if j not in self._columns:
+            rows = self.matrix[:, j].nonzero()[0]
+            moves = self._moves[rows, j]
+            self._columns[j] = rows, moves, np.abs(moves)
+        return self._columns[j]
