@@ -325,8 +325,10 @@ class NodeWork:
                     {"column": column, "leans": bool(self.bounds.leans[:, column].any())},
                 )  # fmt: skip
                 return True
-        if used:
+        if used and self.context.propagator.pays():
             self._spread(used)
+        elif used:
+            self.dictionary.set_bounds(used, self.bounds.least, self.bounds.most)
         return bool(used)
 
     def _trial_closure(self, closed: branching.Closed) -> dict[str, Any] | None:
