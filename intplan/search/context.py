@@ -40,8 +40,8 @@ class Context:
 
     def round_to_plan(self, x: np.ndarray, bounds: Bounds) -> bool:
         """Look for a plan near a point of the relaxation; tell whether a better one was found."""
-        point = self.rounder.round(x, bounds)
-        if point is None or not self.best.improved_by(float(self.problem.cost @ point)):
+        point = self.rounder.round(x, bounds, self.best.ceiling)
+        if point is None:
             return False
         plan = self.arithmetic.guess_plan(point)
         return plan is not None and self.best.offer(plan)

@@ -53,12 +53,13 @@ class Incumbent:
         self.cutoff = self.threshold + margin
         return True
 
-    def improved_by(self, cost: float) -> bool:
-        """Tell whether a plan of this cost, in doubles, would be worth checking exactly."""
+    @property
+    def ceiling(self) -> float:
+        """The cost, in doubles, below which a plan is worth checking exactly."""
         if self.value is None:
-            return True
+            return math.inf
         value = float(self.value)
-        return cost < value - max(0.5 * float(self.step), 1e-12 * (1.0 + abs(value)))
+        return value - max(0.5 * float(self.step), 1e-12 * (1.0 + abs(value)))
 
     def beats(self, bound: float) -> bool:
         """Tell whether a safe bound closes a node."""

@@ -6,6 +6,8 @@ Universitaet Berlin, 2006 (simple rounding by locks, and one-opt).
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from intplan.search.tightening import Bounds
@@ -43,19 +45,18 @@ class Rounder:
         self.direction = -np.sign(cost)
         self.sizes = np.abs(cost)
         self._moves = matrix * self.direction
-        self._still = self._moves == 0
-        self._sizes = np.where(self._still, 1.0, np.abs(self._moves))
         self._columns: dict[int, tuple[np.ndarray, np.ndarray, np.ndarray]] = {}
 
-    def round(self, x: np.ndarray, bounds: Bounds) -> np.ndarray | None:
+    def round(self, x: np.ndarray, bounds: Bounds, ceiling: float) -> np.ndarray | None:
         """Return a whole point near x that meets the rules, improved; for all-whole problems.
 
-        None where none is found.
+        None where none is found that costs less than the ceiling.
 
         Parameters
         ----------
         x : (columns,) an optimal point of the relaxation
         bounds : the bounds to keep to
+        ceiling : a cost
         """
         if not self.all_whole or not len(x):
             return None
@@ -67,10 +68,12 @@ class Rounder:
             if (values >= self.row_least - self.tolerance).all() and (
                 values <= self.row_most + self.tolerance
             ).all():
-                return self._improve(point, values, bounds)
+                return self._improve(point, values, bounds, ceiling)
         return None
 
-    def _improve(self, point: np.ndarray, values: np.ndarray, bounds: Bounds) -> np.ndarray:
+    def _improve(
+        self, point: np.ndarray, values: np.ndarray, bounds: Bounds, ceiling: float
+    ) -> np.ndarray | None:
         """Move activities as far as the aim and the rules allow, those that gain most first.
 
         What a move leaves to the others is looked up when their turn comes.
@@ -79,21 +82,26 @@ class Rounder:
         np.maximum(below, 0.0, out=below)
         np.maximum(above, 0.0, out=above)
         room = np.where(self.direction > 0, bounds.most - point, point - bounds.least)
-        slack = np.where(self._moves > 0, below[:, None], above[:, None])
-        steps = np.where(self._still, np.inf, slack / self._sizes).min(axis=0, initial=np.inf)
-        units = np.floor(np.minimum(steps, room) + NEAR)
-        gains = np.where(np.isfinite(units), units, 0.0) * self.sizes
+        movable = ((room > 0.5) & (self.direction != 0)).nonzero()[0]
+        moves = self._moves[:, movable]
+        slack = np.where(moves > 0, below[:, None], above[:, None])
+        sizes = np.abs(moves)
+        steps = np.where(sizes > 0, slack / sizes, np.inf).min(axis=0, initial=np.inf)
+        units = np.floor(np.minimum(steps, room[movable]) + NEAR)
+        gains = np.where(np.isfinite(units), units, 0.0) * self.sizes[movable]
+        missing = float(self.cost @ point) - ceiling
+        if gains.sum() <= missing:
+            return None
         order = (-gains).argsort(kind="stable")
-        for j in order[: np.count_nonzero(gains > 0)].tolist():
+        for j in movable[order[: np.count_nonzero(gains > 0)]].tolist():
             rows, moves, sizes = self._column(j)
             left = np.where(moves > 0, below[rows], above[rows]) / sizes
-            step = min(left.min(initial=np.inf), room.item(j))
-            step = float(np.floor(step + NEAR))
+            step = math.floor(min(left.min(initial=np.inf), room.item(j)) + NEAR)
             if step > 0:
                 point[j] += step * self.direction[j]
                 below[rows] -= moves * step
                 above[rows] += moves * step
-        return point
+        return point if float(self.cost @ point) < ceiling else None
 
     def _column(self, j: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Return the rows an activity stands in, and what a unit as its cost asks adds to them."""
