@@ -16,6 +16,7 @@ N. J. Higham, Accuracy and Stability of Numerical Algorithms, 2nd ed., SIAM, 200
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -98,14 +99,16 @@ class Prover:
     ) -> Proof:
         store = self.rows
         limits = np.where(values > 0, store.least[numbers], store.most[numbers])
-        usable = np.isfinite(limits)
-        if not usable.all():
+        from_rows = float(values @ limits)
+        if not math.isfinite(from_rows):
+            usable = np.isfinite(limits)
             numbers, values, limits = numbers[usable], values[usable], limits[usable]
+            from_rows = float(values @ limits)
         cost = self.cost if weight else self.nothing
         reduced = cost - values @ store.matrix[numbers]
-        sizes = float(np.abs(values).sum())
+        absolute = np.abs(values)
+        sizes = float(absolute.sum())
         error = (len(values) + 4) * ROUNDING * 2.0 * (weight + sizes)
-        from_rows = values * limits
         sides = np.where(reduced > 0, least, most)
         if len(self.open):
             exact = ~store.matrix[numbers][:, self.open].any(axis=0)
@@ -114,9 +117,8 @@ class Prover:
                 return Proof(weight, numbers, values, -np.inf, reduced, error)
         else:
             slip = 0.0
-        from_bounds = reduced * sides
-        total = float(from_rows.sum() + from_bounds.sum())
-        size = float(np.abs(from_rows).sum() + np.abs(from_bounds).sum())
+        total = from_rows + float(reduced @ sides)
+        size = float(absolute @ np.abs(limits) + np.abs(reduced) @ np.abs(sides))
         count = len(values) + len(reduced) + 4
         slip += error * self.reach + count * ROUNDING * size
         return Proof(weight, numbers, values, total - slip * (1 + 1e-9), reduced, error)
