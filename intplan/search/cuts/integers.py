@@ -12,7 +12,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from fractions import Fraction
-from functools import partial
+from functools import cached_property, partial
 from typing import Any
 
 import numpy as np
@@ -25,7 +25,7 @@ from intplan.search.tightening import Bounds
 
 DENOMINATOR = 50_000  # greatest common denominator of the multipliers
 NEAR = 1e-11  # how near a multiplier must be to its fraction
-LARGEST = float(1 << 62)
+LARGEST = float(1 << 60)  # int64 holds the sum of a few numbers of this size
 EXACT = 1 << 53
 
 
@@ -41,49 +41,12 @@ def integer_gomory_cut(
 
     Parameters and meaning as `intplan.search.cuts.gomory.gomory_cuts`, `multipliers` being (u,).
     """
-    used = (np.abs(multipliers) > TINY).nonzero()[0]
-    numbers = limits.numbers[used]
-    shifts = rounding.rows.shift[numbers]
-    if (shifts < 0).any():
+    combination = _Combination.of(rounding, limits, multipliers, x, bounds)
+    if combination is None:
         return None
-    common = common_denominator(np.ldexp(multipliers[used], -shifts), DENOMINATOR, NEAR)
-    if common is None:
-        return None
-    weights, unit = common
-    matrix = np.ldexp(rounding.rows.matrix[numbers], shifts[:, None])
-    if float((np.abs(weights) @ np.abs(matrix)).max(initial=0.0)) * unit > LARGEST:
-        return None
-    whole_weights = weights.astype(np.int64)
-    integers = matrix.astype(np.int64)
-    own = -(whole_weights @ integers)
-    row_sides = limits.sides[used].astype(np.int64)
-    live = own.nonzero()[0]
-    at_least = nearer_least(x, bounds)[live]
-    anchors = np.where(at_least, bounds.least[live], bounds.most[live])
-    at = np.ldexp(limits.at[used], shifts)
-    if not (_whole(anchors) and _whole(at)):
-        return None
-    sides = np.where(at_least, 1, -1)
-    sides[bounds.least[live] == bounds.most[live]] = 0
-    whole_limits, whole_anchors = at.astype(np.int64), anchors.astype(np.int64)
-    size = float(np.abs(weights) @ np.abs(at) + np.abs(own[live]) @ np.abs(anchors))
-    if size > LARGEST:
-        return None
-    right = -int(whole_weights @ whole_limits) - int(own[live] @ whole_anchors)
-    part = right % unit
-    if min(part, unit - part) < AWAY * unit:
-        return None
-    stepped = rounding.grain[numbers] > 0
-    row_gamma = _rounded(whole_weights * row_sides, stepped, part, unit)
-    own_gamma = _rounded(own[live] * sides, rounding.whole[live], part, unit)
-    combination = _Combination(
-        rounding, bounds, numbers, whole_weights, unit, shifts, row_sides, integers, whole_limits,
-        live, at_least, sides, own[live], whole_anchors, part, right,
-    )  # fmt: skip
-    forms = [part, part - unit] if (row_sides == 0).any() else [0]
     best: tuple[int, np.ndarray, int, int] | None = None
-    for added in forms:
-        made = combination.written_out(row_gamma, own_gamma, added)
+    for added in combination.forms():
+        made = combination.written_out(added)
         if made is not None:
             filled = int(np.count_nonzero(made[0]))
             if best is None or filled < best[0]:
@@ -110,6 +73,7 @@ class _Combination:
     live, at_least, own_sides, own, anchors : (k,) the activities with a coefficient
     part : fractional part of the right-hand side, times `unit`
     right : the right-hand side, times `unit`
+    stepped : (u,) rows whose value is whole
     """
 
     rounding: Rounding
@@ -128,17 +92,77 @@ class _Combination:
     anchors: np.ndarray
     part: int
     right: int
+    stepped: np.ndarray
 
-    def written_out(
-        self, row_gamma: np.ndarray, own_gamma: np.ndarray, added: int
-    ) -> tuple[np.ndarray, int] | None:
+    @classmethod
+    def of(
+        cls,
+        rounding: Rounding,
+        limits: Limits,
+        multipliers: np.ndarray,
+        x: np.ndarray,
+        bounds: Bounds,
+    ) -> _Combination | None:
+        """Read the multipliers as fractions and add the rows up; None if numbers grow too large."""
+        used = (np.abs(multipliers) > TINY).nonzero()[0]
+        numbers = limits.numbers[used]
+        shifts = rounding.rows.shift[numbers]
+        if (shifts < 0).any():
+            return None
+        common = common_denominator(np.ldexp(multipliers[used], -shifts), DENOMINATOR, NEAR)
+        if common is None:
+            return None
+        weights, unit = common
+        rows = np.ldexp(rounding.rows.matrix[numbers], shifts[:, None])
+        if float((np.abs(weights) @ np.abs(rows)).max(initial=0.0)) * unit > LARGEST:
+            return None
+        weights, rows = weights.astype(np.int64), rows.astype(np.int64)
+        own = -(weights @ rows)
+        live = own.nonzero()[0]
+        own = own[live]
+        at_least = nearer_least(x, bounds)[live]
+        anchors = np.where(at_least, bounds.least[live], bounds.most[live])
+        at = np.ldexp(limits.at[used], shifts)
+        size = float(np.abs(weights) @ np.abs(at) + np.abs(own) @ np.abs(anchors))
+        if not (_whole(anchors) and _whole(at)) or size > LARGEST:
+            return None
+        anchors, at = anchors.astype(np.int64), at.astype(np.int64)
+        right = -int(weights @ at) - int(own @ anchors)
+        part = right % unit
+        if min(part, unit - part) < AWAY * unit:
+            return None
+        own_sides = np.where(at_least, 1, -1)
+        own_sides[bounds.least[live] == bounds.most[live]] = 0
+        return cls(
+            rounding, bounds, numbers, weights, unit, shifts,
+            limits.sides[used].astype(np.int64), rows, at, live, at_least, own_sides, own, anchors,
+            part, right, rounding.grain[numbers] > 0,
+        )  # fmt: skip
+
+    def forms(self) -> tuple[int, ...]:
+        """Return multiples of the combination itself that may be added to the rounded one.
+
+        Where an equality takes part they change which coefficients the cut has: two of them
+        cancel the divisible distances of one sign.
+        """
+        return (self.part, self.part - self.unit) if (self.sides == 0).any() else (0,)
+
+    @cached_property
+    def gammas(self) -> tuple[np.ndarray, np.ndarray]:
+        """Rounded coefficients of the row and activity distances, times ``part * (unit - part)``."""
+        whole = self.rounding.whole[self.live]
+        return (
+            _rounded(self.weights * self.sides, self.stepped, self.part, self.unit),
+            _rounded(self.own * self.own_sides, whole, self.part, self.unit),
+        )
+
+    def written_out(self, added: int) -> tuple[np.ndarray, int] | None:
         """Write the rounded combination over the activities, coprime; None if it is too large.
 
-        Parameters
-        ----------
-        row_gamma, own_gamma : coefficients on distances, times ``part * (unit - part)``
-        added : the multiple of the combination itself to add, in the same scale and times `unit`
+        `added` is the multiple of the combination itself to add, times ``part * (unit - part)``
+        and divided by `unit`.
         """
+        row_gamma, own_gamma = self.gammas
         row_weights = row_gamma * self.sides + added * self.weights * np.abs(self.sides)
         own_weights = own_gamma * self.own_sides + added * self.own * np.abs(self.own_sides)
         size = np.abs(row_weights.astype(float)) @ np.abs(self.rows).max(axis=1, initial=1)
@@ -177,7 +201,8 @@ class _Combination:
 
 
 def _whole(values: np.ndarray) -> bool:
-    return bool((np.isfinite(values) & (values == np.rint(values))).all())
+    """Tell whether doubles are whole numbers that doubles count exactly."""
+    return bool(((np.abs(values) < EXACT) & (values == np.rint(values))).all())
 
 
 def _rounded(a: np.ndarray, stepped: np.ndarray, part: int, unit: int) -> np.ndarray:
