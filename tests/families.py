@@ -7,6 +7,7 @@ reference of `tests.reference` needs some milliseconds up to about a second for 
 
 from __future__ import annotations
 
+import math
 import tomllib
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
@@ -15,8 +16,12 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+import intplan
+
 if TYPE_CHECKING:
+    from intplan.search.exact import ExactSystem
     from intplan.sheet import Sheet
+    from intplan.sheet.problem import Problem
 
 INSTANCES = Path(__file__).parent.parent / "instances"
 
@@ -66,6 +71,29 @@ class Instance:
             "whole": self.whole,
             "maximize": self.maximize,
         }
+
+
+def problem_of(instance: Instance) -> Problem:
+    """Return the exact problem of an instance."""
+    return intplan.Sheet.from_arrays(**instance.arrays()).problem()
+
+
+def exact_system_of(instance: Instance, cost: np.ndarray) -> ExactSystem:
+    """Return an instance of integers, with a cost to minimise, for the exact arithmetic."""
+    from intplan.search.exact import ExactSystem
+
+    def limits(values: np.ndarray) -> list[int | None]:
+        return [None if math.isinf(v) else int(v) for v in values]
+
+    entries = np.array([[int(v) for v in row] for row in instance.rows], object)
+    return ExactSystem(
+        entries.reshape(instance.rows.shape),
+        limits(instance.row_least),
+        limits(instance.row_most),
+        np.array([int(v) for v in cost], object),
+        limits(instance.least),
+        limits(instance.most),
+    )
 
 
 def build(

@@ -25,17 +25,12 @@ from intplan.search.cuts.gomory import gomory_cuts
 from intplan.search.cuts.integers import integer_gomory_cut
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import Problem
-from tests.families import Instance, assignment, build, index_of, lot_sizing
+from tests.families import Instance, assignment, build, index_of, lot_sizing, problem_of
 from tests.generators import KINDS, random_problem, tiny_problem
 from tests.reference import OPTIMAL, reference_linprog
 from tests.verify import verify
 
 F = Fraction
-
-
-def problem_of(instance: Instance) -> Problem:
-    """Return the exact problem of plain arrays."""
-    return intplan.Sheet.from_arrays(**instance.arrays()).problem()
 
 
 def plans_of(problem: Problem, reach: int = 6) -> np.ndarray:

@@ -21,6 +21,7 @@ from tests.families import (
     covering,
     index_of,
     lot_sizing,
+    problem_of,
     product_mix,
     selection,
     shift_cover,
@@ -29,11 +30,6 @@ from tests.generators import KINDS, random_problem, tiny_problem
 from tests.verify import Refused, Summary, verify
 
 SEEDS = 30 * len(KINDS)
-
-
-def problem_of(instance: Instance) -> Problem:
-    """Return the exact problem of plain arrays."""
-    return intplan.Sheet.from_arrays(**instance.arrays()).problem()
 
 
 def added(summaries: list[Summary]) -> Counter[str]:

@@ -23,7 +23,7 @@ from intplan.search.arithmetic import (
 from intplan.search.exact import ExactAnswer, ExactSystem, Stopped, solve_exactly
 from intplan.sheet.problem import Problem
 from tests import reference
-from tests.families import Instance, assignment
+from tests.families import Instance, assignment, exact_system_of
 from tests.generators import KINDS, random_problem
 from tests.reference import reference_linprog
 
@@ -33,20 +33,7 @@ SEEDS = 15 * len(KINDS)
 
 def system_of(instance: Instance) -> ExactSystem:
     """Return an instance of integers for the exact arithmetic."""
-
-    def limits(values: np.ndarray) -> list[int | None]:
-        return [None if math.isinf(v) else int(v) for v in values]
-
-    cost = -instance.aim if instance.maximize else instance.aim
-    entries = np.array([[int(v) for v in row] for row in instance.rows], object)
-    return ExactSystem(
-        entries.reshape(instance.rows.shape),
-        limits(instance.row_least),
-        limits(instance.row_most),
-        np.array([int(v) for v in cost], object),
-        limits(instance.least),
-        limits(instance.most),
-    )
+    return exact_system_of(instance, -instance.aim if instance.maximize else instance.aim)
 
 
 def lower_bound(system: ExactSystem, answer: ExactAnswer, weight: int) -> Fraction | None:

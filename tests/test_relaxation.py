@@ -14,7 +14,14 @@ from intplan.relaxation.rows import RowStore
 from intplan.relaxation.start import NoDualBasis, cold_start
 from intplan.search.exact import ExactSystem, solve_exactly
 from tests import reference
-from tests.families import Instance, assignment, covering, product_mix, shift_cover
+from tests.families import (
+    Instance,
+    assignment,
+    covering,
+    exact_system_of,
+    product_mix,
+    shift_cover,
+)
 from tests.generators import KINDS, random_problem
 from tests.reference import reference_linprog
 
@@ -47,21 +54,8 @@ def cold(instance: Instance, rows: RowStore | None = None) -> tuple[str, Diction
 
 
 def exact_system(instance: Instance, aim: bool = True) -> ExactSystem:
-    """Return an instance of integers for the exact arithmetic."""
-
-    def limits(values: np.ndarray) -> list[int | None]:
-        return [None if math.isinf(v) else int(v) for v in values]
-
-    cost = minimised(instance) * (1 if aim else 0)
-    entries = np.array([[int(v) for v in row] for row in instance.rows], object)
-    return ExactSystem(
-        entries.reshape(instance.rows.shape),
-        limits(instance.row_least),
-        limits(instance.row_most),
-        np.array([int(v) for v in cost], object),
-        limits(instance.least),
-        limits(instance.most),
-    )
+    """Return an instance of integers for the exact arithmetic, with or without its aim."""
+    return exact_system_of(instance, minimised(instance) * (1 if aim else 0))
 
 
 def settled(instance: Instance) -> str:

@@ -14,16 +14,11 @@ import intplan
 from intplan.planning.compare import compare
 from intplan.search import branch_and_cut
 from intplan.sheet.problem import Problem
-from tests.families import Instance, lot_sizing
+from tests.families import lot_sizing, problem_of
 from tests.generators import random_problem
 from tests.verify import verify
 
 INF = math.inf
-
-
-def problem_of(instance: Instance) -> Problem:
-    """Return the exact problem of plain arrays."""
-    return intplan.Sheet.from_arrays(**instance.arrays()).problem()
 
 
 def arrays_of(aim, rows, row_least, row_most, least, most, whole) -> Problem:

@@ -20,18 +20,13 @@ import intplan
 from intplan.search import SearchResult, branch_and_cut, exact, root
 from intplan.sheet.problem import Number, Problem, Terms
 from tests import reference
-from tests.families import Instance, assignment, build, covering
+from tests.families import Instance, assignment, build, covering, problem_of
 from tests.generators import KINDS, brute_force, problems, random_problem, tiny_problem
 from tests.reference import reference_milp, settle
 from tests.verify import check_plan, check_ray, verify
 
 SEEDS = 30 * len(KINDS)
 F = Fraction
-
-
-def problem_of(instance: Instance) -> Problem:
-    """Return the exact problem of plain arrays."""
-    return intplan.Sheet.from_arrays(**instance.arrays()).problem()
 
 
 def solved(instance: Instance, **options: Any) -> SearchResult:

@@ -12,24 +12,8 @@ from hypothesis import strategies as st
 
 from intplan.errors import SheetError
 from intplan.sheet import Activity, Aim, Rule, Sheet
+from tests.bakery import BAKERY
 
-BAKERY = """
-title   = "Bakery, week 14"
-measure = "EUR"
-
-[aim]
-maximize = "4.20*loaf + 2.75*roll_tray - 18*overtime"
-
-[activities]
-loaf      = { most = 900 }
-roll_tray = { least = 20, most = 240, unit = "trays" }
-overtime  = { whole = false, most = 12, unit = "h" }
-
-[rules]
-oven   = "0.02*loaf + 0.05*roll_tray <= 16 + overtime"
-mixer  = "6 <= 0.01*loaf + 0.02*roll_tray <= 9"
-shelf  = { rule = "loaf >= 3*roll_tray", note = "contract with the school" }
-"""
 TWO = "[activities]\nloaf = { most = 9 }\nroll = {}\n"
 
 

@@ -149,7 +149,7 @@ class _Combination:
 
     @cached_property
     def gammas(self) -> tuple[np.ndarray, np.ndarray]:
-        """Rounded coefficients of the row and activity distances, times ``part * (unit - part)``."""
+        """Rounded coefficients of both kinds of distance, times ``part * (unit - part)``."""
         whole = self.rounding.whole[self.live]
         return (
             _rounded(self.weights * self.sides, self.stepped, self.part, self.unit),
