@@ -171,6 +171,7 @@ def test_targets_are_tried_before_the_work(option, failure, folder):
     # The sheet would take very long: the answer comes at once because nothing is solved.
     assert "no folder" in failure("solve", "even.toml", option, "absent/s.json")
     assert "it is a folder" in failure("solve", "even.toml", option, str(folder))
+    assert "name of a file to write is empty" in failure("solve", "even.toml", option, "")
     assert "read by this command" in failure("solve", "even.toml", option, "even.toml")
     os.symlink("even.toml", "link.json")
     assert "read by this command" in failure("solve", "even.toml", option, "link.json")
@@ -251,7 +252,7 @@ def test_check_lets_soft_rules_bend(call):
         ("\n\n", "plan.csv", "empty"),
         ("activity;amount\nloaf;3\n", "line 1", "comma between columns"),
         ("activity\tamount\nloaf\t3\n", "line 1", "comma between columns"),
-        ("loaf,3\n", "line 1", "no column activity"),
+        ("loaf,3\n", "line 1", "no column activity; the first line names the columns"),
         ("activity,ammount\nloaf,3\n", "line 1", 'is "ammount" meant'),
         ("activity,amount,Amount\nloaf,3,3\n", "line 1", "two columns are called amount"),
         ("activity,amount\nlaof,3\n", "line 2, column 1", 'did you mean "loaf"?'),
@@ -266,7 +267,7 @@ def test_check_lets_soft_rules_bend(call):
         ("activity,amount\nloaf,1e999999999\n", "line 2, column 2", "no number"),
         ("activity,amount\nloaf,1/0\n", "line 2, column 2", "no number"),
         ("activity,amount\nloaf,1_000\n", "line 2, column 2", "no number"),
-        ('activity,amount\nloaf,"1,000"\n', "line 2, column 2", "no number"),
+        ('activity,amount\nloaf,"1,000"\n', "line 2, column 2", "thousands no mark"),
         ("activity,amount\nloaf,\u0663\n", "line 2, column 2", "no number"),
         ("activity,amount\nloaf,=1+1\n", "line 2, column 2", "no number"),
         ("activity,amount\nloaf," + "9" * 20_000 + "\n", "line 2, column 2", "no number"),
@@ -274,6 +275,10 @@ def test_check_lets_soft_rules_bend(call):
         ("activity,amount\nloaf,7/3\n", "line 2, column 2", "whole units, and its amount is 7/3"),
         ("activity,amount\nloaf,2,5\n", "line 2", "a decimal has a point"),
         ("activity,amount\nloaf\n", "line 2", "1 cell where the header has 2"),
+        ("activity,amount\nloaf;3\n", "line 2", "put a comma between columns"),
+        ("activity,amount\nloaf;2,5\n", "line 2, column 1", 'did you mean "loaf"?'),
+        ("activity,amount\nloaf," + "9" * 5_000 + "\n", "line 2, column 2", "larger than doubles"),
+        ("activity,amount\nloaf,-2e308\n", "line 2, column 2", "larger than doubles"),
         ('activity,amount\n"loaf,3\n', "line 2", "no CSV"),
         (b"activity,amount\nl\xf6af,3\n", "line 2", "UTF-8"),
         (b"activity,amount\nlo\x00af,3\n", "line 2", r"lo\x00af"),
@@ -332,7 +337,9 @@ def test_tree(call):
     assert Path("t.dot").read_text().startswith("digraph")
     status, out, _ = call("tree", "s.json", "--to", "t.json", "--json")
     data = json.loads(out)
-    assert (data["written"], data["nodes"]) == ("t.json", len(load_standing("s.json").tree))
+    standing = load_standing("s.json")
+    assert (data["written"], data["nodes"]) == ("t.json", len(standing.tree))
+    assert data["solved"] == standing.search.nodes
     assert set(Path().iterdir()) - before == {Path("t.dot"), Path("t.json")}
 
 

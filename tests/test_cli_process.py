@@ -105,7 +105,7 @@ class Watched:
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
 def test_the_first_interrupt_gives_what_is_known(number, environment):
     program = Watched("solve", "even.toml", "--json", "--save", "s.json", "--plan-to", "p.csv")
-    program.wait_for(r"Best plan so far [\d,]+ EUR; nothing can pass \d+\.")
+    program.wait_for(r"Best plan so far [\d,]+ EUR; nothing can fall below \d+\.")
     program.process.send_signal(number)
     status, out = program.finish()
     data = json.loads(out)

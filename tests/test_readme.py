@@ -36,8 +36,9 @@ COMMANDS = app.group.commands
 # What differs from run to run; the words around it, and that it is there, are still compared.
 COUNT, SECONDS = r"[\d,]+", r"(?:under )?[\d,.]+ s"
 VARYING = [
-    rf"{COUNT} nodes?, {COUNT} pivots? and {COUNT} cuts? in {SECONDS}",
+    rf"{COUNT} nodes?, with {COUNT} pivots? and {COUNT} cuts?, in {SECONDS}",
     rf"(?<=^The search tree, ){COUNT} nodes?",
+    rf"(?<= The search solved ){COUNT}(?= of them)",
     rf"^{COUNT} nodes?(?= solved twice)",
     r"^ +(?=pivots +time$)",
     rf"(?<=^  from the parent's basis) +{COUNT} +{SECONDS}$",

@@ -8,7 +8,7 @@ import pytest
 
 from intplan import Sheet, solve
 from intplan.planning.compare import Comparison, NodeComparison, compare
-from intplan.report.data import check_data, compare_data, solve_data
+from intplan.report.data import check_data, compare_data, nodes_solved, solve_data
 from intplan.report.text import (
     CAUTION,
     check_text,
@@ -18,6 +18,7 @@ from intplan.report.text import (
     solve_text,
     status_sentence,
     table,
+    tree_text,
 )
 from tests.bakery import (
     ALL,
@@ -128,7 +129,7 @@ def test_report_of_the_bakery():
         "Rules at their limit\n  oven   16  at most 16\n  mixer   9  from 6 to 9",
         "Rules with room\n  shelf  800  at least 0  800 to spare  contract with the school",
     ]
-    assert paragraphs[4].startswith(f"The search took {standing.search.nodes} node")
+    assert paragraphs[4].startswith(f"The search solved {standing.search.nodes} node")
 
 
 def test_report_says_how_far_soft_rules_bend():
@@ -164,7 +165,7 @@ def test_report_of_unfinished_searches():
     result = dataclasses.replace(result, ended_by="interrupt", bound=Fraction(7, 3))
     text = solve_text(dataclasses.replace(standing, result=result))
     assert "The search was interrupted" in text
-    assert "If there is one, it cannot pass 2.333333 EUR." in text
+    assert "If there is one, it cannot fall below 2.333333 EUR." in text
 
 
 def test_report_of_a_plan_that_is_not_proven_best():
@@ -183,6 +184,26 @@ def test_report_of_a_plan_that_is_not_proven_best():
         dataclasses.replace(standing, result=dataclasses.replace(standing.result, **within))
     )
     assert "The best plan found comes to 395 EUR." in text
+
+
+def test_a_bound_is_passed_in_the_direction_of_the_aim():
+    standing = solve(Sheet.parse(SOFT))
+    loose = dataclasses.replace(standing.result, outcome="unfinished", ended_by="time", bound=5)
+    text = solve_text(dataclasses.replace(standing, result=loose))
+    assert "It is proven that no plan can fall below 5 h, which is" in text
+    assert status_sentence(standing.sheet, 24, 0).endswith("nothing can fall below 0.")
+
+
+def test_a_tree_tells_what_the_search_solved():
+    standing = solve(Sheet.parse(split_evenly()), node_limit=3)
+    total, solved = len(standing.tree), standing.search.nodes
+    assert nodes_solved(standing) == solved < total
+    assert tree_text(standing, "t.dot") == (
+        f"The search tree, {total} nodes, is in t.dot. The search solved {solved} of them; "
+        "the others were closed without that or still wait."
+    )
+    alone = solve(Sheet.parse(BAKERY))
+    assert tree_text(alone, "t.dot") == "The search tree, 1 node, is in t.dot."
 
 
 def test_text_from_a_sheet_cannot_reach_the_terminal():
@@ -286,7 +307,7 @@ def test_a_plan_may_bend_soft_rules_at_their_price():
     assert text.startswith("The plan meets every rule and bound. It comes to 15.575 h.")
     assert "bent by 2.25, which costs 1.575 h" in text
     text = check_text(*checked(SOFT, 2, 1))
-    assert "need is 3: 0.25 below its least of 7.25, even bent by 4." in text
+    assert "need is 3: 4.25 below its least of 7.25, and it bends by 4 at most." in text
     assert "bent by 4, which costs 2.8 h, broken by 0.25" in text
 
 

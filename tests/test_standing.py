@@ -145,6 +145,16 @@ def test_limits_that_make_no_sense(limits, where):
     assert caught.value.where == where
 
 
+def test_only_sheets_are_solved():
+    with pytest.raises(TypeError, match=r"expected a Sheet, .* not str"):
+        solve("bakery.toml")
+
+
+def test_a_standing_plan_shows_itself_in_a_line():
+    shown = repr(solve(Sheet.parse(CRATES)))
+    assert shown == "<StandingPlan 'Crates', optimal, value 395, bound 395>"
+
+
 def test_an_infinite_time_limit_is_none():
     assert solve(Sheet.parse(BAKERY), time_limit=float("inf")).outcome == "optimal"
 

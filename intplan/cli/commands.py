@@ -46,7 +46,7 @@ def solve_command(
     """Find the best whole-unit plan for SHEET, a TOML file, and prove that nothing beats it.
 
     Exit status: 0 if the plan is proven best (or within --gap), 1 if there is no plan or the aim
-    has no limit, 3 if a limit or an interrupt ended the search.
+    has no limit, 2 for bad input, 3 if a limit or an interrupt ended the search.
     """
     from intplan.cli.targets import check_targets
     from intplan.report.data import solve_data
@@ -80,7 +80,7 @@ def check_command(
     """Hold PLAN.csv, with the columns activity,amount, against the rules of SHEET.
 
     Amounts are decimals or p/q; an activity that is left out counts as 0. Exit status: 0 if the
-    plan meets every rule, 1 if it breaks one.
+    plan meets every rule and bound, 1 if it breaks one, 2 for bad input.
     """
     from intplan.planning.planfile import read_plan
     from intplan.report.data import check_data
@@ -116,7 +116,7 @@ def compare_command(
     its parent's basis, and cold, from nothing.
 
     The limits are those of the search. Exit status: 0 if both agree at every node, 1 if they
-    differ or the aim has no limit, 3 if a limit or an interrupt ended the search.
+    differ or the aim has no limit, 2 for bad input, 3 if a limit or an interrupt ended the search.
     """
     from intplan.planning.compare import Comparison, compare
     from intplan.report.data import compare_data
@@ -155,6 +155,7 @@ def tree_command(
     """Write the search tree of STANDING, a file that `solve --save` wrote, to a file.
 
     GraphML and DOT hold a sentence and the numbers of every node; JSON holds its evidence too.
+    Exit status: 0 if the file was written, 2 for bad input.
     """
     from intplan.cli.targets import check_targets
     from intplan.planning import load_standing
@@ -215,7 +216,7 @@ def _keep(
     session: Session, standing: StandingPlan, save_to: str | None, plan_to: str | None
 ) -> tuple[str, str | None] | None:
     """Write the files that were asked for; return message and place of what went wrong."""
-    from intplan.errors import IntplanError
+    from intplan.errors import IntplanError, printable
     from intplan.planning.planfile import write_plan
 
     try:
@@ -224,7 +225,8 @@ def _keep(
         if plan_to is not None and standing.exact_plan is not None:
             write_plan(plan_to, standing.sheet, standing.exact_plan)
         elif plan_to is not None:
-            session.console.notes([f"Note: there is no plan, so {plan_to} was not written."])
+            note = f"Note: there is no plan, so {printable(plan_to)} was not written."
+            session.console.notes([note])
     except IntplanError as error:
         return error.message, error.where
     return None

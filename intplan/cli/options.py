@@ -65,8 +65,10 @@ class Count(click.ParamType):
 def output_options(command: Command) -> Command:
     """Add ``--json`` and ``--quiet``."""
     for option in (
-        click.option("--quiet", is_flag=True, help="No status line and no warnings on stderr."),
-        click.option("--json", "as_json", is_flag=True, help="One JSON object on stdout."),
+        click.option("--quiet", is_flag=True, help="No status line and no notes on stderr."),
+        click.option(
+            "--json", "as_json", is_flag=True, help="One JSON object on stdout, for errors too."
+        ),
     ):
         command = option(command)
     return command
@@ -76,14 +78,14 @@ def limit_options(command: Command) -> Command:
     """Add the limits of a search."""
     for option in (
         click.option(
-            "--node-limit", type=Count(), metavar="N", help="End the search after N nodes."
+            "--node-limit", type=Count(), metavar="N", help="End the search after solving N nodes."
         ),
         click.option(
             "--gap",
             type=Percent(),
             default="0",
             metavar="PERCENT",
-            help="Be content with a plan proven to be within PERCENT of the best.",
+            help="Be content with a plan proven to be within PERCENT of the best; 0 if left out.",
         ),
         click.option(
             "--time-limit", type=Seconds(), metavar="SECONDS", help="End the search after that."

@@ -25,6 +25,8 @@ def check_targets(targets: Sequence[str | None], sources: Sequence[str]) -> None
     for target in targets:
         if target is None:
             continue
+        if not target:
+            raise IntplanError("the name of a file to write is empty")
         path = os.path.realpath(target)
         if target.startswith("-"):
             raise IntplanError(f"this looks like an option; write ./{target} for a file", target)

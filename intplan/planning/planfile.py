@@ -6,6 +6,7 @@ import csv
 import io
 import os
 import re
+import sys
 from collections.abc import Iterator, Mapping, Sequence
 from decimal import Decimal
 from fractions import Fraction
@@ -23,7 +24,10 @@ COLUMNS = ("activity", "amount")
 LARGEST_FILE = 64 << 20  # bytes
 LONGEST_AMOUNT = 10_000  # characters
 LARGEST_POWER = 400  # of ten; doubles end at 308
+LARGEST_AMOUNT = int(sys.float_info.max)  # what other programs can take back
 NAMES_SHOWN = 5
+SEPARATORS = ";\t"  # what other programs put between columns
+FIRST_LINE = "; the first line names the columns: activity,amount"
 DECIMAL = re.compile(r"[+-]?(?:[0-9]+(?:\.[0-9]*)?|\.[0-9]+)(?:[eE](?P<power>[+-]?[0-9]+))?")
 RATIO = re.compile(r"(?P<top>[+-]?[0-9]+)/(?P<bottom>[0-9]+)")
 
@@ -71,6 +75,8 @@ def read_plan(path: str | os.PathLike[str], sheet: Sheet) -> PlanFile:
     for line, cells in rows:
         if len(cells) != header.cells:
             hint = "; a decimal has a point, not a comma" if len(cells) > header.cells else ""
+            if any(mark in cells[0] for mark in SEPARATORS):
+                hint = "; put a comma between columns"
             raise PlanFileError(
                 f"{_cells(len(cells))} where the header has {header.cells}{hint}",
                 where=f"{where}, line {line}",
@@ -142,10 +148,10 @@ def _read_header(cells: Sequence[str], where: str) -> _Header:
                 raise PlanFileError(f"two columns are called {column}", where=f"{where}, line 1")
             continue
         close = nearest(column, names)
-        if any(mark in cells[0] for mark in ";\t"):
+        if any(mark in cells[0] for mark in SEPARATORS):
             hint = "; put a comma between columns"
         else:
-            hint = f"; is {excerpt(close)} meant to be it?" if close else ""
+            hint = f"; is {excerpt(close)} meant to be it?" if close else FIRST_LINE
         raise PlanFileError(f"there is no column {column}{hint}", where=f"{where}, line 1")
     return _Header(names.index("activity"), names.index("amount"), len(names))
 
@@ -160,12 +166,17 @@ def _check_name(name: str, sheet: Sheet, lines: Mapping[str, int], place: str) -
 
 def _read_amount(cell: str, name: str, sheet: Sheet, place: str) -> Number:
     amount = _parse_amount(cell.strip())
+    if not cell.strip():
+        raise PlanFileError(f"{name} has no amount", where=place)
     if amount is None:
+        shown = excerpt(cell.strip())
+        hint = "; a decimal has a point, thousands no mark" if "," in cell else ""
         raise PlanFileError(
-            f"the amount of {name} is {excerpt(cell.strip())}, no number such as 12, 2.5 or 7/3"
-            if cell.strip()
-            else f"{name} has no amount",
-            where=place,
+            f"the amount of {name} is {shown}, no number such as 12, 2.5 or 7/3{hint}", where=place
+        )
+    if abs(amount) > LARGEST_AMOUNT:
+        raise PlanFileError(
+            f"the amount of {name} is larger than doubles hold (about 1.8e308)", where=place
         )
     if amount.denominator != 1 and sheet.activities[sheet.activity_index[name]].whole:
         raise PlanFileError(

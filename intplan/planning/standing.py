@@ -48,6 +48,10 @@ class StandingPlan:
     sheet: Sheet
     result: SearchResult
 
+    def __repr__(self) -> str:
+        title = f"{self.sheet.title!r}, " if self.sheet.title else ""
+        return f"<StandingPlan {title}{self.outcome}, value {self.value}, bound {self.bound}>"
+
     @property
     def outcome(self) -> str:
         """``optimal``, ``within_gap``, ``infeasible``, ``unbounded`` or ``unfinished``."""
@@ -181,7 +185,9 @@ def solve(
     Raises
     ------
     IntplanError
-        If an argument makes no sense.
+        If a limit or the gap makes no sense.
+    TypeError
+        If `sheet` is no sheet.
 
     Notes
     -----
@@ -207,6 +213,8 @@ def solve(
     >>> standing.outcome, standing.value, standing.plan
     ('optimal', 45, {'chair': 9, 'table': 0})
     """
+    if not isinstance(sheet, Sheet):
+        raise TypeError(f"expected a Sheet, such as Sheet.read gives, not {type(sheet).__name__}")
     limits = _read_limits(time_limit, gap, node_limit)
     from intplan.search import branch_and_cut
 

@@ -106,8 +106,14 @@ def tree_data(standing: StandingPlan, path: str | os.PathLike[str]) -> Data:
         "title": standing.sheet.title,
         "outcome": standing.outcome,
         "nodes": standing.tree.number_of_nodes(),
+        "solved": nodes_solved(standing),
         "written": os.fspath(path),
     }
+
+
+def nodes_solved(standing: StandingPlan) -> int:
+    """Return how many nodes of the tree were solved; the others never took any time."""
+    return sum(seconds > 0 for _, seconds in standing.tree.nodes(data="seconds"))
 
 
 def _node_side(node: Any, side: str) -> Data:

@@ -9,7 +9,7 @@ from math import ceil
 
 from intplan.errors import printable
 from intplan.planning import Comparison, NodeComparison, StandingPlan
-from intplan.report.data import ratio
+from intplan.report.data import nodes_solved, ratio
 from intplan.report.numbers import bound_text, readable, value_text
 from intplan.sheet import Rule, Sheet
 from intplan.sheet.checking import Broken, CheckResult, RuleCheck
@@ -89,14 +89,14 @@ def _open_sentences(standing: StandingPlan) -> list[str]:
     sheet, value, bound = standing.sheet, standing.exact_value, standing.exact_bound
     limit = None if bound is None else bound_text(sheet, bound)
     if value is None:
-        known = [] if limit is None else [f"If there is one, it cannot pass {limit}."]
+        known = [] if limit is None else [f"If there is one, it cannot {_passes(sheet)} {limit}."]
         return ["No plan has been found, nor is it proven that there is none.", *known]
     found = "found" if standing.outcome == "within_gap" else "so far"
     sentences = [f"The best plan {found} comes to {value_text(sheet, value)}."]
     if bound is None:
         return [*sentences, "How far it is from the best is not known."]
     share = "" if not value else f", which is {percent_text(bound - value, value)} away"
-    return [*sentences, f"It is proven that no plan can pass {limit}{share}."]
+    return [*sentences, f"It is proven that no plan can {_passes(sheet)} {limit}{share}."]
 
 
 def percent_text(distance: Number, value: Number) -> str:
@@ -108,10 +108,9 @@ def percent_text(distance: Number, value: Number) -> str:
 def effort_sentence(standing: StandingPlan) -> str:
     """Say what the search took."""
     search = standing.search
-    parts = [
-        _count(search.nodes, "node"), _count(search.pivots, "pivot"), _count(search.cuts, "cut")
-    ]  # fmt: skip
-    return f"The search took {_listing(parts)} in {seconds_text(search.seconds)}."
+    nodes, pivots = _count(search.nodes, "node"), _count(search.pivots, "pivot")
+    took = seconds_text(search.seconds)
+    return f"The search solved {nodes}, with {pivots} and {_count(search.cuts, 'cut')}, in {took}."
 
 
 def seconds_text(seconds: float) -> str:
@@ -124,10 +123,13 @@ def seconds_text(seconds: float) -> str:
 def status_sentence(sheet: Sheet, value: Number | None, bound: Number | None) -> str:
     """Say how a search stands while it runs."""
     limit = None if bound is None else bound_text(sheet, bound, measured=False)
-    if value is None:
-        return "No plan so far." if limit is None else f"No plan so far; nothing can pass {limit}."
-    best = f"Best plan so far {value_text(sheet, value)}"
-    return f"{best}." if limit is None else f"{best}; nothing can pass {limit}."
+    best = "No plan so far" if value is None else f"Best plan so far {value_text(sheet, value)}"
+    return f"{best}." if limit is None else f"{best}; nothing can {_passes(sheet)} {limit}."
+
+
+def _passes(sheet: Sheet) -> str:
+    """Say what a plan would do that is better than a bound."""
+    return "pass" if sheet.aim.sense == "maximize" else "fall below"
 
 
 # ---------------------------------------------------------------------------------- check
@@ -171,11 +173,12 @@ def broken_sentence(
         rule = sheet.rules[sheet.rule_index[broken.name]]
         state = check.rules[sheet.rule_index[broken.name]]
         value, limit = state.value, getattr(rule, broken.what)
-        bent = f", even bent by {readable(state.bend)}" if state.bend else ""
+        bent = f", and it bends by {readable(state.bend)} at most" if state.bend else ""
     else:
         index = sheet.activity_index[name]
         value, limit, bent = amounts[index], getattr(sheet.activities[index], broken.what), ""
-    over = f"{readable(broken.by)} {relation}"
+    beyond = abs(value - limit)  # broken.by is what remains of it once the rule has bent
+    over = f"{readable(beyond)} {relation}"
     return f"{name} is {readable(value)}: {over} of {readable(limit)}{bent}."
 
 
@@ -246,9 +249,14 @@ def _nodes_table(nodes: Sequence[NodeComparison]) -> str:
 
 
 def tree_text(standing: StandingPlan, path: str | os.PathLike[str]) -> str:
-    """Say what was written."""
-    nodes = _count(standing.tree.number_of_nodes(), "node")
-    return f"The search tree, {nodes}, is in {printable(os.fspath(path))}."
+    """Say what was written, and why a tree has more nodes than the search solved."""
+    total, solved = standing.tree.number_of_nodes(), nodes_solved(standing)
+    sentence = f"The search tree, {_count(total, 'node')}, is in {printable(os.fspath(path))}."
+    if solved == total:
+        return sentence
+    waiting = standing.outcome in ("unfinished", "within_gap")
+    rest = "were closed without that or still wait" if waiting else "were closed without that"
+    return f"{sentence} The search solved {solved:,} of them; the others {rest}."
 
 
 # ---------------------------------------------------------------------------------- tables

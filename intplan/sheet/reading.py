@@ -14,7 +14,7 @@ from intplan.files import read_file
 from intplan.sheet.algebra import parse_aim, parse_rule
 from intplan.sheet.model import Activity, Aim, Rule, Sense, Sheet, check_bounds, check_size
 from intplan.sheet.names import name_problem, normal
-from intplan.sheet.numbers import Number, NumberError, exact_number, fit, show
+from intplan.sheet.numbers import MOST_DIGITS, Number, NumberError, exact_number, fit, show
 
 MOST_BYTES = 32_000_000
 SHEET_KEYS = ("title", "measure", "aim", "activities", "rules")
@@ -89,7 +89,8 @@ def _toml(text: str, where: str) -> dict[str, Any]:
         match = _LONG_INTEGER.search(text)
         line = text.count("\n", 0, match.start()) + 1 if match else None
         place = where if line is None else f"{where}, line {line}"
-        raise SheetError("an integer of thousands of digits", place) from None
+        problem = f"an integer of thousands of digits; the limit is {MOST_DIGITS}"
+        raise SheetError(problem, place) from None
 
 
 def _toml_error(text: str, problem: str, where: str) -> SheetError:
@@ -199,7 +200,9 @@ def _number(value: object, key: str, where: str) -> Number | _Infinity:
         if isinstance(value, str):
             return exact_number(value)
     except NumberError as problem:
-        text = excerpt(value, 24) if isinstance(value, str) else "an integer"
+        if isinstance(value, int):
+            raise SheetError(f"{key}: {problem}", where) from None
+        text = excerpt(value, 24)
         text = text.strip('"') if isinstance(value, DecimalText) else text
         raise SheetError(f"{key} = {text}: {problem}", where) from None
     raise SheetError(f"{key} must be a number, not {_kind(value)}", where)
@@ -208,7 +211,8 @@ def _number(value: object, key: str, where: str) -> Number | _Infinity:
 def _finite(value: object, key: str, where: str) -> Number:
     number = _number(value, key, where)
     if isinstance(number, _Infinity):
-        raise SheetError(f"{key} must be finite; leave it out for no limit", where)
+        without = "a rule that does not bend" if key == "give" else "no limit"
+        raise SheetError(f"{key} must be finite; leave it out for {without}", where)
     return number
 
 
