@@ -17,12 +17,13 @@ import intplan
 from intplan.relaxation.dictionary import Dictionary
 from intplan.relaxation.rows import RowStore
 from intplan.relaxation.start import cold_start
-from intplan.search import Cut, branch_and_cut, root
+from intplan.search import Cut, branch_and_cut
 from intplan.search.cuts.candidate import EFFICACY, PARALLEL, Candidate, choose
 from intplan.search.cuts.cover import cover_cut
 from intplan.search.cuts.distances import Limits, Rounding
 from intplan.search.cuts.gomory import gomory_cuts
 from intplan.search.cuts.integers import integer_gomory_cut
+from intplan.search.cuts.separation import Separator
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import Problem
 from tests.families import Instance, assignment, build, index_of, lot_sizing, problem_of
@@ -118,18 +119,20 @@ def test_cuts_take_the_point_away_that_they_were_made_for(
 ) -> None:
     """Every cut that enters is violated at the relaxation's point, by more than rounding."""
     depths: list[float] = []
-    separate = root.RootWork._separate
+    separate = Separator.separate
 
-    def watched(self: root.RootWork, rows: np.ndarray) -> np.ndarray:
-        x = self.dictionary.activities()
-        numbers = separate(self, rows)
+    def watched(
+        self: Separator, dictionary: Dictionary, bounds: Bounds, rows: np.ndarray
+    ) -> np.ndarray:
+        x = dictionary.activities()
+        numbers = separate(self, dictionary, bounds, rows)
         store = self.context.rows
         for number in numbers:
             line = store.matrix[number]
             depths.append((store.least[number] - line @ x) / np.sqrt(line @ line))
         return numbers
 
-    monkeypatch.setattr(root.RootWork, "_separate", watched)
+    monkeypatch.setattr(Separator, "separate", watched)
     for _, problem in small_problems():
         branch_and_cut(problem)
     for instance in (assignment(5, 15, 1), assignment(8, 24, 1)):
@@ -177,10 +180,11 @@ def gomory_candidates(
         [2.0**-r.shift if problem.whole[list(r.columns)].all() else 0.0 for r in problem.rows]
     )
     reach = float(np.maximum(np.abs(problem.least), np.abs(problem.most)).sum())
-    own = problem.least, problem.most
-    rounding = Rounding(rows, problem.whole, grain, reach, np.arange(0), own)
     x = dictionary.activities()
-    leaning = np.zeros(rows.count, bool)
+    rounding = Rounding(
+        rows, problem.whole, grain, reach, np.arange(0), (problem.least, problem.most), x, bounds,
+        np.zeros(rows.count, bool),
+    )  # fmt: skip
     values = dictionary.values
     rows = [
         row
@@ -195,11 +199,11 @@ def gomory_candidates(
     lines = dictionary.entries[rows][:, columns]
     if exactly:
         for line in lines:
-            cut = integer_gomory_cut(rounding, limits, line, x, bounds, leaning)
+            cut = integer_gomory_cut(rounding, limits, line)
             if cut is not None:
                 yield cut, x
     else:
-        for cut in gomory_cuts(rounding, limits, lines, x, bounds, leaning, len(lines)):
+        for cut in gomory_cuts(rounding, limits, lines, len(lines)):
             yield cut, x
 
 
@@ -283,11 +287,12 @@ def sack(weights: Sequence[int], capacity: int, limit: int = 1) -> Problem:
 def cover_of(problem: Problem, limit: int, x: np.ndarray) -> Candidate | None:
     """Separate a cover cut of the only rule at a point."""
     bounds = Bounds(problem.least.copy(), problem.most.copy(), np.zeros((2, len(x)), bool))
-    own = problem.least, problem.most
     nothing = np.zeros((0, len(x))), np.zeros(0), np.zeros(0), np.zeros(0, int)
-    rows = RowStore(*nothing)
-    rounding = Rounding(rows, problem.whole, np.zeros(1), 0.0, np.arange(0), own)
-    return cover_cut(rounding, 0, problem.rows[0], limit, x, bounds)
+    rounding = Rounding(
+        RowStore(*nothing), problem.whole, np.zeros(1), 0.0, np.arange(0),
+        (problem.least, problem.most), x, bounds, np.zeros(0, bool),
+    )  # fmt: skip
+    return cover_cut(rounding, 0, problem.rows[0], limit)
 
 
 def test_a_minimal_cover_by_hand() -> None:

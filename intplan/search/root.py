@@ -10,26 +10,17 @@ import numpy as np
 from intplan.relaxation.dictionary import Dictionary, Multipliers
 from intplan.relaxation.start import cold_start
 from intplan.search.context import Context
-from intplan.search.cuts.aggregation import Aggregator
-from intplan.search.cuts.candidate import Candidate, choose
-from intplan.search.cuts.cover import cover_cut
-from intplan.search.cuts.distances import Limits, Rounding
-from intplan.search.cuts.gomory import deepest_combinations, gomory_cuts
-from intplan.search.cuts.integers import integer_gomory_cut
+from intplan.search.cuts.separation import Separator
 from intplan.search.develop import NodeWork, Split
 from intplan.search.evidence import Proof
-from intplan.search.result import Added, Cut
+from intplan.search.result import Added
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import ExactRow, Number, Problem
 
 CUT_ROUNDS = 12
-GOMORY_ROWS = 30  # dictionary rows tried in a round
-CUTS_A_ROUND = 30
 STALL = 0.02  # a round that adds less than this share of the gain so far is a stalled one
 PATIENCE = 2  # stalled rounds in a row that end the cutting
 LARGE = 2.0**53  # whole numbers beyond this may be rounded as doubles
-COARSE = 20  # bits of a rule's integers up to which its whole value is of use to a cut
-TIGHT = 0.1  # room, next to a rule's value, up to which a cover cut is sought
 SLACK_CUT = 1e-6  # room at which a cut no longer binds
 
 
@@ -41,8 +32,6 @@ class RootWork(NodeWork):
         columns = len(problem.cost)
         bounds = Bounds(*_outward(problem), np.zeros((2, columns), bool))
         super().__init__(context, 0, -math.inf, None, None, bounds)
-        self._knapsacks: set[int] | None = None
-        self._aggregator = Aggregator(context.rows, context.record.rules, problem.whole)
 
     def prepare(self) -> bool:
         """Tighten what the sheet states; False if that already shows that no plan exists.
@@ -117,13 +106,14 @@ class RootWork(NodeWork):
         return split
 
     def _cut_in_rounds(self) -> Split | None:
+        separator = Separator(self.context, self.bounds)
         started, stalled = self.dictionary.value, 0
         for _ in range(CUT_ROUNDS):
             rows = self.fractional_rows()
             if not len(rows) or self.context.limits.out_of_time():
                 return None
             before = self.dictionary.value
-            numbers = self._separate(rows)
+            numbers = separator.separate(self.dictionary, self.bounds, rows)
             if not len(numbers):
                 return None
             self.dictionary.add_rows(numbers)
@@ -141,126 +131,6 @@ class RootWork(NodeWork):
             if stalled >= PATIENCE:
                 return None
         return None
-
-    def _separate(self, rows: np.ndarray) -> np.ndarray:
-        """Find cuts at the dictionary's point and put the chosen ones into the store."""
-        context = self.context
-        x = self.dictionary.activities()
-        rounding = self._rounding()
-        leaning = np.concatenate(
-            (np.zeros(context.record.rules, bool), context.record.leaning_rows)
-        )
-        candidates = self._round_rows(rounding, rows, x, leaning)
-        candidates += self._round_sums(rounding, x, leaning)
-        candidates += self._covers(rounding, x)
-        chosen = choose(candidates, CUTS_A_ROUND)
-        if not chosen:
-            return np.arange(0)
-        for candidate in chosen:
-            columns = candidate.coefficients.nonzero()[0]
-            evidence, leans = candidate.explain()
-            context.record.note_cut(
-                Cut(
-                    candidate.kind, tuple(columns.tolist()),
-                    tuple(candidate.coefficients[columns].tolist()), candidate.least, math.inf,
-                    leans, evidence,
-                )
-            )  # fmt: skip
-        least = np.array([c.least for c in chosen])
-        return context.rows.append(
-            np.array([c.coefficients for c in chosen]),
-            least,
-            np.full(len(chosen), np.inf),
-            np.array([c.shift for c in chosen]),
-        )
-
-    def _round_rows(
-        self, rounding: Rounding, rows: np.ndarray, x: np.ndarray, leaning: np.ndarray
-    ) -> list[Candidate]:
-        """Round the dictionary rows of the activities furthest from whole values."""
-        dictionary = self.dictionary
-        values = dictionary.values[rows]
-        order = (-np.abs(values - np.floor(values) - 0.5)).argsort(kind="stable")[::-1]
-        limits, columns = Limits.of_dictionary(dictionary)
-        lines = dictionary.entries[rows[order[:GOMORY_ROWS]]][:, columns]
-        return self._rounded(rounding, limits, lines, x, leaning)
-
-    def _round_sums(
-        self, rounding: Rounding, x: np.ndarray, leaning: np.ndarray
-    ) -> list[Candidate]:
-        """Round sums of rules."""
-        if not self._aggregator.useful:
-            return []
-        limits = Limits.nearest(self.context.rows, x)
-        lines = self._aggregator.combinations(x, self.bounds, limits)
-        return self._rounded(rounding, limits, lines, x, leaning)
-
-    def _rounded(
-        self,
-        rounding: Rounding,
-        limits: Limits,
-        lines: np.ndarray,
-        x: np.ndarray,
-        leaning: np.ndarray,
-    ) -> list[Candidate]:
-        """Return the deepest rounding cuts of some combinations of rows.
-
-        Where the aim has no step they are made in integers or not at all: a cut weakened by a
-        rounding error leaves the bound a hair below the best plan, and with no step to bridge
-        the hair it costs more branching than it saves.
-        """
-        if self.context.problem.cost_step is not None:
-            return gomory_cuts(
-                rounding, limits, lines, x, self.bounds, leaning, 2 * CUTS_A_ROUND
-            )
-        best = deepest_combinations(rounding, limits, lines, x, self.bounds, CUTS_A_ROUND)
-        cuts = (
-            integer_gomory_cut(rounding, limits, line, x, self.bounds, leaning) for line in best
-        )
-        return [cut for cut in cuts if cut is not None]
-
-    def _covers(self, rounding: Rounding, x: np.ndarray) -> list[Candidate]:
-        """Return cover cuts of the rules that bind, or nearly."""
-        found = []
-        for number in self._tight_rules():
-            row = self.context.problem.rows[number]
-            for limit in (0, 1):
-                cut = cover_cut(rounding, number, row, limit, x, self.bounds)
-                if cut is not None:
-                    found.append(cut)
-        return found
-
-    def _tight_rules(self) -> list[int]:
-        """Return the rules that bind, or nearly, at the point and may have a cover cut."""
-        if self._knapsacks is None:
-            problem = self.context.problem
-            binary = problem.whole & (self.bounds.least == 0) & (self.bounds.most == 1)
-            self._knapsacks = {
-                i
-                for i, row in enumerate(problem.rows)
-                if len({abs(c) for j, c in zip(row.columns, row.coefficients, strict=True)
-                        if binary[j]}) > 1
-            }  # fmt: skip
-        dictionary = self.dictionary
-        numbers = np.concatenate((dictionary.nonbasic, dictionary.basic[self._nearly_tight()]))
-        return [i for i in (numbers - dictionary.columns).tolist() if i in self._knapsacks]
-
-    def _nearly_tight(self) -> np.ndarray:
-        """Return the dictionary rows whose value is near one of its limits."""
-        rooms = self.dictionary.rooms.min(axis=1, initial=np.inf)
-        return (rooms < TIGHT * (1.0 + np.abs(self.dictionary.values))).nonzero()[0]
-
-    def _rounding(self) -> Rounding:
-        """Gather what mixed-integer rounding needs under the root's present bounds."""
-        context, problem = self.context, self.context.problem
-        grain = np.zeros(context.rows.count)
-        for i, row in enumerate(problem.rows):
-            if row.columns and problem.whole[list(row.columns)].all():
-                grain[i] = 2.0**-row.shift if row.shift < COARSE else 0.0
-        return Rounding(
-            context.rows, problem.whole, grain, context.prover.reach, context.prover.open,
-            (problem.least, problem.most),
-        )  # fmt: skip
 
     def _drop_slack_cuts(self) -> None:
         """Let cuts that do not bind leave the dictionary."""

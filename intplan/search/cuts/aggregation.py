@@ -21,8 +21,7 @@ from typing import NamedTuple
 import numpy as np
 
 from intplan.relaxation.rows import RowStore
-from intplan.search.cuts.distances import Limits
-from intplan.search.tightening import Bounds
+from intplan.search.cuts.distances import Limits, Rounding
 
 LONGEST = 6  # most rules added up
 DIVISORS = 3  # most divisors tried on one sum
@@ -65,15 +64,15 @@ class Aggregator:
         self.starts = (~switching & (parts > 0)).nonzero()[0]
         self.useful = bool(len(self.starts) and switching.any())
 
-    def combinations(self, x: np.ndarray, bounds: Bounds, limits: Limits) -> np.ndarray:
+    def combinations(self, rounding: Rounding, limits: Limits) -> np.ndarray:
         """Return multipliers of the rows, a line a combination, (k, rows).
 
         Parameters
         ----------
-        x : (columns,) the relaxation's point
-        bounds : of the activities
+        rounding : the point to cut off and its bounds
         limits : of all rows, those nearest to the point
         """
+        x, bounds = rounding.x, rounding.bounds
         rooms = np.minimum(x - bounds.least, bounds.most - x)
         between = self.whole & (rooms > BETWEEN)
         switches = self._closest_switches(np.abs(self.rows.matrix @ x - limits.at))

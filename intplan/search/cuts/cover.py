@@ -38,7 +38,7 @@ class Item(NamedTuple):
 
 
 def cover_cut(
-    rounding: Rounding, number: int, row: ExactRow, limit: int, x: np.ndarray, bounds: Bounds
+    rounding: Rounding, number: int, row: ExactRow, limit: int
 ) -> Candidate | None:
     """Return a violated lifted cover cut of one limit of one rule, or None.
 
@@ -47,10 +47,8 @@ def cover_cut(
     rounding : what is known of the problem
     number, row : the rule
     limit : 0 for its least, 1 for its most
-    x : (columns,) the relaxation's point
-    bounds : bounds under which the cut will be used, or wider ones
     """
-    knapsack = _knapsack(row, limit, bounds, rounding.whole)
+    x, knapsack = rounding.x, _knapsack(row, limit, rounding.bounds, rounding.whole)
     if knapsack is None:
         return None
     items, capacity, others = knapsack
@@ -76,7 +74,7 @@ def cover_cut(
             if inequality is None:
                 continue
             candidate = _candidate(
-                rounding, number, limit, inequality, cover, others, bounds
+                rounding, number, limit, inequality, cover, others
             )
             if candidate.measure(x) and (best is None or candidate.efficacy > best.efficacy):
                 best = candidate
@@ -90,7 +88,6 @@ def _candidate(
     inequality: tuple[list[tuple[Item, int]], int],
     cover: list[Item],
     others: np.ndarray,
-    bounds: Bounds,
 ) -> Candidate:
     """Write an inequality over items as a row over the activities."""
     lifted, right = inequality
@@ -108,12 +105,12 @@ def _candidate(
     def explain() -> tuple[dict[str, Any], bool]:
         touched = coefficients != 0
         touched[others >> 1] = True
-        box, leans = rounding.box(touched, bounds)
+        box, leans = rounding.box(touched)
         evidence = {
             "row": number, "limit": limit, "cover": [i.column for i in cover],
             "lifted": [(i.column, c) for i, c in lifted],
             "flipped": [i.column for i, _ in lifted if i.flipped],
-            "bounds": others, "values": bounds.values(others), **box,
+            "bounds": others, "values": rounding.bounds.values(others), **box,
         }  # fmt: skip
         return evidence, leans
 

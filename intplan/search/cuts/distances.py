@@ -13,7 +13,7 @@ from intplan.search.tightening import Bounds
 
 @dataclass
 class Rounding:
-    """What mixed-integer rounding needs to know of a problem.
+    """What mixed-integer rounding needs to know of a problem and of the point to cut off.
 
     Attributes
     ----------
@@ -23,6 +23,9 @@ class Rounding:
     reach : sum over the bounded activities of their greatest size
     open : activities without both bounds
     own : the sheet's own bounds, a pair of (columns,)
+    x : (columns,) the relaxation's point
+    bounds : bounds under which the cuts will be used, or wider ones
+    leaning_rows : (rows,) bool, rows that lean on the cut-off
     """
 
     rows: RowStore
@@ -31,21 +34,27 @@ class Rounding:
     reach: float
     open: np.ndarray
     own: tuple[np.ndarray, np.ndarray]
+    x: np.ndarray
+    bounds: Bounds
+    leaning_rows: np.ndarray
 
-    def box(
-        self, touched: np.ndarray, bounds: Bounds
-    ) -> tuple[dict[str, np.ndarray], bool]:
+    def box(self, touched: np.ndarray) -> tuple[dict[str, np.ndarray], bool]:
         """Return, as evidence, the bounds of some activities that are not the sheet's own.
 
         Errors are bounded over the box of the activities touched, (columns,) bool, so a cut
         leans on these bounds even where it measures no distance from them.  Returned as well:
         whether any of them leans on the cut-off.
         """
+        bounds = self.bounds
         least = touched & (bounds.least != self.own[0])
         most = touched & (bounds.most != self.own[1])
         leans = bool((least & bounds.leans[0]).any() or (most & bounds.leans[1]).any())
         numbers = np.concatenate((2 * least.nonzero()[0], 2 * most.nonzero()[0] + 1))
         return {"box": numbers, "box_values": bounds.values(numbers)}, leans
+
+    def nearer_least(self) -> np.ndarray:
+        """Tell for each activity whether it is measured from its least bound, the nearer one."""
+        return self.x - self.bounds.least <= self.bounds.most - self.x
 
 
 @dataclass
@@ -80,11 +89,6 @@ class Limits:
         at = np.where(below, rows.least, rows.most)
         limited = np.isfinite(at)  # a row without any limit is measured from nothing
         return cls(np.arange(rows.count), np.where(limited, at, 0.0), np.where(limited, sides, 0.0))
-
-
-def nearer_least(x: np.ndarray, bounds: Bounds) -> np.ndarray:
-    """Choose for each activity the bound to measure from, the nearer one: true for its least."""
-    return x - bounds.least <= bounds.most - x
 
 
 def bounds_used(

@@ -22,7 +22,7 @@ from typing import Any
 import numpy as np
 
 from intplan.search.cuts.candidate import EFFICACY, Candidate, unlike
-from intplan.search.cuts.distances import Limits, Rounding, bounds_used, nearer_least
+from intplan.search.cuts.distances import Limits, Rounding, bounds_used
 from intplan.search.evidence import ROUNDING
 from intplan.search.tightening import Bounds
 
@@ -36,9 +36,6 @@ def gomory_cuts(
     rounding: Rounding,
     limits: Limits,
     multipliers: np.ndarray,
-    x: np.ndarray,
-    bounds: Bounds,
-    leaning_rows: np.ndarray,
     most: int,
 ) -> list[Candidate]:
     """Return the deepest cuts of combinations of rows.
@@ -49,24 +46,23 @@ def gomory_cuts(
     Parameters
     ----------
     multipliers : (k, u) of the rows of `limits`
-    x : (columns,) the relaxation's point
-    bounds : bounds under which the cuts will be used, or wider ones
-    leaning_rows : (rows,) bool, rows that lean on the cut-off
     most : how many cuts to return at most
     """
-    base = _Base.of(rounding, limits, x, bounds)
+    base = _Base.of(rounding, limits)
     work = _combine(base, multipliers)
     coefficients, least, slip = _round(base, work)
     cuts: list[Candidate] = []
-    for i in _by_depth(coefficients, least, x):
-        loss = 0.0
+    for i in _by_depth(coefficients, least, rounding.x):
+        loss: float | None = 0.0
         if len(rounding.open):
             loss = _settle_open(base, work, i, coefficients[i], slip.item(i))
-        bare = None if loss is None else _trim(coefficients[i], least.item(i) - loss, bounds)
+        if loss is None:
+            continue
+        bare = _trim(coefficients[i], least.item(i) - loss, rounding.bounds)
         if bare is None:
             continue
-        candidate = Candidate("gomory", *bare, partial(_explain, base, work, i, leaning_rows))
-        if candidate.measure(x):
+        candidate = Candidate("gomory", *bare, partial(_explain, base, work, i))
+        if candidate.measure(rounding.x):
             cuts.append(candidate)
             if len(cuts) == most:
                 break
@@ -74,21 +70,16 @@ def gomory_cuts(
 
 
 def deepest_combinations(
-    rounding: Rounding,
-    limits: Limits,
-    multipliers: np.ndarray,
-    x: np.ndarray,
-    bounds: Bounds,
-    most: int,
+    rounding: Rounding, limits: Limits, multipliers: np.ndarray, most: int
 ) -> np.ndarray:
     """Return the combinations whose cuts are deepest and unlike each other, (most, u).
 
     Parameters as of `gomory_cuts`; nothing here is safe against rounding.
     """
-    base = _Base.of(rounding, limits, x, bounds)
+    base = _Base.of(rounding, limits)
     work = _combine(base, multipliers)
     coefficients, least, _ = _round(base, work)
-    order = np.array(_by_depth(coefficients, least, x)[: 4 * most], int)
+    order = np.array(_by_depth(coefficients, least, rounding.x)[: 4 * most], int)
     return work.multipliers[order[unlike(coefficients[order], most)]]
 
 
@@ -113,7 +104,6 @@ class _Base:
     """
 
     rounding: Rounding
-    bounds: Bounds
     limits: Limits
     matrix: np.ndarray
     at_least: np.ndarray
@@ -122,15 +112,15 @@ class _Base:
     grounded: np.ndarray
 
     @classmethod
-    def of(cls, rounding: Rounding, limits: Limits, x: np.ndarray, bounds: Bounds) -> _Base:
+    def of(cls, rounding: Rounding, limits: Limits) -> _Base:
         """Measure the activities from their nearer bounds."""
-        at_least = nearer_least(x, bounds)
+        bounds, at_least = rounding.bounds, rounding.nearer_least()
         anchors = np.where(at_least, bounds.least, bounds.most)
         grounded = np.isfinite(anchors)
         sides = np.where(at_least, 1.0, -1.0)
         sides[bounds.least == bounds.most] = 0.0
         return cls(
-            rounding, bounds, limits, rounding.rows.matrix[limits.numbers], at_least,
+            rounding, limits, rounding.rows.matrix[limits.numbers], at_least,
             np.where(grounded, anchors, 0.0), sides, grounded,
         )  # fmt: skip
 
@@ -206,20 +196,18 @@ def _round(base: _Base, work: _Combinations) -> tuple[np.ndarray, np.ndarray, np
     return coefficients, least - 1.001 * (spent + slip * rounding.reach), slip
 
 
-def _explain(
-    base: _Base, work: _Combinations, i: int, leaning_rows: np.ndarray
-) -> tuple[dict[str, Any], bool]:
+def _explain(base: _Base, work: _Combinations, i: int) -> tuple[dict[str, Any], bool]:
     """Return the evidence of one cut, and whether it leans on the cut-off."""
     used = work.multipliers[i].nonzero()[0]
     numbers = base.limits.numbers[used]
-    box, leans = base.rounding.box(base.matrix[used].any(axis=0), base.bounds)
+    box, leans = base.rounding.box(base.matrix[used].any(axis=0))
     live = work.live[i].nonzero()[0]
     evidence = {
         "rows": numbers, "multipliers": work.multipliers[i, used],
         "row_sides": base.limits.sides[used], "plus": "0", **box,
-        **bounds_used(live, base.at_least[live], base.sides[live], base.bounds),
+        **bounds_used(live, base.at_least[live], base.sides[live], base.rounding.bounds),
     }  # fmt: skip
-    return evidence, leans or bool(leaning_rows[numbers].any())
+    return evidence, leans or bool(base.rounding.leaning_rows[numbers].any())
 
 
 def _rounded(a: np.ndarray, grain: np.ndarray, work: _Combinations) -> np.ndarray:
@@ -248,7 +236,7 @@ def _settle_open(
     base: _Base, work: _Combinations, i: int, coefficients: np.ndarray, slip: float
 ) -> float | None:
     """Raise coefficients of activities with one bound by their error; None if that cannot be."""
-    bounds, loss = base.bounds, 0.0
+    bounds, loss = base.rounding.bounds, 0.0
     touched = base.matrix[work.multipliers[i].nonzero()[0]].any(axis=0)
     for j in base.rounding.open.tolist():
         if not touched[j]:

@@ -19,9 +19,8 @@ import numpy as np
 
 from intplan.search.arithmetic import common_denominator
 from intplan.search.cuts.candidate import Candidate
-from intplan.search.cuts.distances import Limits, Rounding, bounds_used, nearer_least
+from intplan.search.cuts.distances import Limits, Rounding, bounds_used
 from intplan.search.cuts.gomory import AWAY, SPREAD, TINY
-from intplan.search.tightening import Bounds
 
 DENOMINATOR = 50_000  # greatest common denominator of the multipliers
 NEAR = 1e-11  # how near a multiplier must be to its fraction
@@ -30,18 +29,13 @@ EXACT = 1 << 53
 
 
 def integer_gomory_cut(
-    rounding: Rounding,
-    limits: Limits,
-    multipliers: np.ndarray,
-    x: np.ndarray,
-    bounds: Bounds,
-    leaning_rows: np.ndarray,
+    rounding: Rounding, limits: Limits, multipliers: np.ndarray
 ) -> Candidate | None:
     """Return the exact cut of one combination of rows, or None where its numbers grow too large.
 
     Parameters and meaning as `intplan.search.cuts.gomory.gomory_cuts`, `multipliers` being (u,).
     """
-    combination = _Combination.of(rounding, limits, multipliers, x, bounds)
+    combination = _Combination.of(rounding, limits, multipliers)
     if combination is None:
         return None
     best: tuple[int, np.ndarray, int, int] | None = None
@@ -58,9 +52,9 @@ def integer_gomory_cut(
     scale = 2.0**-shift
     candidate = Candidate(
         "gomory", coefficients * scale, least * scale,
-        partial(combination.explain, added, leaning_rows), shift,
+        partial(combination.explain, added), shift,
     )  # fmt: skip
-    return candidate if candidate.measure(x) else None
+    return candidate if candidate.measure(rounding.x) else None
 
 
 @dataclass
@@ -77,7 +71,6 @@ class _Combination:
     """
 
     rounding: Rounding
-    bounds: Bounds
     numbers: np.ndarray
     weights: np.ndarray
     unit: int
@@ -96,12 +89,7 @@ class _Combination:
 
     @classmethod
     def of(
-        cls,
-        rounding: Rounding,
-        limits: Limits,
-        multipliers: np.ndarray,
-        x: np.ndarray,
-        bounds: Bounds,
+        cls, rounding: Rounding, limits: Limits, multipliers: np.ndarray
     ) -> _Combination | None:
         """Read the multipliers as fractions and add the rows up; None if numbers grow too large."""
         used = (np.abs(multipliers) > TINY).nonzero()[0]
@@ -120,7 +108,7 @@ class _Combination:
         own = -(weights @ rows)
         live = own.nonzero()[0]
         own = own[live]
-        at_least = nearer_least(x, bounds)[live]
+        bounds, at_least = rounding.bounds, rounding.nearer_least()[live]
         anchors = np.where(at_least, bounds.least[live], bounds.most[live])
         at = np.ldexp(limits.at[used], shifts)
         size = float(np.abs(weights) @ np.abs(at) + np.abs(own) @ np.abs(anchors))
@@ -134,7 +122,7 @@ class _Combination:
         own_sides = np.where(at_least, 1, -1)
         own_sides[bounds.least[live] == bounds.most[live]] = 0
         return cls(
-            rounding, bounds, numbers, weights, unit, shifts,
+            rounding, numbers, weights, unit, shifts,
             limits.sides[used].astype(np.int64), rows, at, live, at_least, own_sides, own, anchors,
             part, right, rounding.grain[numbers] > 0,
         )  # fmt: skip
@@ -184,20 +172,20 @@ class _Combination:
             return None
         return coefficients, least
 
-    def explain(self, added: int, leaning_rows: np.ndarray) -> tuple[dict[str, Any], bool]:
+    def explain(self, added: int) -> tuple[dict[str, Any], bool]:
         """Return the evidence of the cut, and whether it leans on the cut-off."""
         touched = np.zeros(self.rows.shape[1], bool)
         touched[self.live] = True
-        box, leans = self.rounding.box(touched, self.bounds)
+        box, leans = self.rounding.box(touched)
         pairs = zip(self.weights.tolist(), self.shifts.tolist(), strict=True)
         plus = Fraction(added * self.unit, self.part * (self.unit - self.part))
         evidence = {
             "rows": self.numbers,
             "multipliers": [f"{w << shift}/{self.unit}" for w, shift in pairs],
             "row_sides": self.sides, "plus": str(plus), **box,
-            **bounds_used(self.live, self.at_least, self.own_sides, self.bounds),
+            **bounds_used(self.live, self.at_least, self.own_sides, self.rounding.bounds),
         }  # fmt: skip
-        return evidence, leans or bool(leaning_rows[self.numbers].any())
+        return evidence, leans or bool(self.rounding.leaning_rows[self.numbers].any())
 
 
 def _whole(values: np.ndarray) -> bool:
