@@ -202,6 +202,8 @@ def test_a_tree_tells_what_the_search_solved():
         f"The search tree, {total} nodes, is in t.dot. The search solved {solved} of them; "
         "the others were closed without that or still wait."
     )
+    shut = solve(Sheet.parse("[activities]\na = {most=5}\n[rules]\nr = 'a >= 7'"))
+    assert tree_text(shut, "t.dot").endswith("1 node, is in t.dot. Nothing of it was solved.")
     alone = solve(Sheet.parse(BAKERY))
     assert tree_text(alone, "t.dot") == "The search tree, 1 node, is in t.dot."
 

@@ -82,6 +82,8 @@ def test_a_plan_that_breaks_everything():
 
 def test_plans_of_the_wrong_length_or_kind():
     sheet = Sheet.parse(BAKERY)
+    with pytest.raises(SheetError, match="plan: expected one amount an activity, in order"):
+        sheet.check({"loaf": 860, "roll_tray": 20, "overtime": 2})
     with pytest.raises(SheetError, match="plan: 2 amounts for 3 activities"):
         sheet.check([1, 2])
     with pytest.raises(SheetError, match="roll_tray: nan is not a finite number"):

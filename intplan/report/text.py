@@ -254,6 +254,8 @@ def tree_text(standing: StandingPlan, path: str | os.PathLike[str]) -> str:
     sentence = f"The search tree, {_count(total, 'node')}, is in {printable(os.fspath(path))}."
     if solved == total:
         return sentence
+    if not solved:
+        return f"{sentence} Nothing of it was solved."
     waiting = standing.outcome in ("unfinished", "within_gap")
     rest = "were closed without that or still wait" if waiting else "were closed without that"
     return f"{sentence} The search solved {solved:,} of them; the others {rest}."

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from typing import Literal
@@ -77,6 +77,12 @@ class CheckResult:
 
 def check_plan(sheet: Sheet, amounts: Sequence[object]) -> CheckResult:
     """Do the work of `Sheet.check`."""
+    if isinstance(amounts, Mapping):
+        raise SheetError(
+            "expected one amount an activity, in order; of a standing plan, "
+            "list(standing.exact_plan.values())",
+            "plan",
+        )
     if len(amounts) != len(sheet.activities):
         raise SheetError(
             f"{len(amounts):,} amounts for {len(sheet.activities):,} activities", "plan"
