@@ -74,8 +74,7 @@ def branch_and_cut(
     SearchResult
     """
     limits = Limits(time_limit, node_limit, stop, progress)
-    has_ends = np.isfinite(problem.least) & np.isfinite(problem.most)
-    if not problem.exact_cost and not has_ends.all():
+    if not problem.exact_cost:
         return find_plan(problem, limits)
     return Search(problem, gap, limits).run()
 
