@@ -476,8 +476,10 @@ class Dictionary:
         candidates = ((helpful < -PIVOT) if above else (helpful > PIVOT)).nonzero()[0]
         if not candidates.size:
             return -1
-        slopes = np.abs(helpful[candidates])
-        ratios = np.abs(self.reduced[candidates])
+        slopes = helpful.take(candidates)
+        if above:
+            slopes = -slopes
+        ratios = np.abs(self.reduced.take(candidates))
         if self.free:
             ratios[loose[candidates]] = 0.0
         ratios += SLACK
