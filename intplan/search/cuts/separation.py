@@ -20,6 +20,7 @@ from intplan.sheet.problem import Problem
 
 GOMORY_ROWS = 30  # dictionary rows tried in a round
 CUTS_A_ROUND = 30
+ENOUGH = 5  # cuts from sums of rules beyond which dictionary rows are left alone
 COARSE = 20  # bits of a rule's integers up to which its whole value is of use to a cut
 TIGHT = 0.1  # room, next to a rule's value, up to which a cover cut is sought
 
@@ -59,8 +60,9 @@ class Separator:
         The numbers of the new rows.
         """
         context, rounding = self.context, self._rounding(dictionary, bounds)
-        candidates = self._round_rows(rounding, dictionary, rows)
-        candidates += self._round_sums(rounding)
+        candidates = self._round_sums(rounding)
+        if len(candidates) < ENOUGH:
+            candidates += self._round_rows(rounding, dictionary, rows)
         candidates += self._covers(rounding, dictionary)
         chosen = choose(candidates, CUTS_A_ROUND)
         if not chosen:
