@@ -183,7 +183,7 @@ def gomory_candidates(
     x = dictionary.activities()
     rounding = Rounding(
         rows, problem.whole, grain, reach, np.arange(0), (problem.least, problem.most), x, bounds,
-        np.zeros(rows.count, bool),
+        np.zeros(rows.count, bool), (np.zeros(rows.count, bool), np.zeros(len(x), bool)),
     )  # fmt: skip
     values = dictionary.values
     rows = [
@@ -291,6 +291,7 @@ def cover_of(problem: Problem, limit: int, x: np.ndarray) -> Candidate | None:
     rounding = Rounding(
         RowStore(*nothing), problem.whole, np.zeros(1), 0.0, np.arange(0),
         (problem.least, problem.most), x, bounds, np.zeros(0, bool),
+        (np.zeros(1, bool), np.zeros(len(x), bool)),
     )  # fmt: skip
     return cover_cut(rounding, 0, problem.rows[0], limit)
 

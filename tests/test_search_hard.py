@@ -168,3 +168,26 @@ def test_a_rule_without_limits_changes_nothing() -> None:
     verify(problem_of(loose), two)
     assert one.value == two.value
     assert len(one.cuts) == len(two.cuts) > 0
+
+
+def test_no_exact_cut_is_measured_from_a_limit_that_doubles_round() -> None:
+    """The limit's double is 5; a cut measured from it would take the best plan away by a hair."""
+    sheet = intplan.Sheet.parse(
+        """
+        [aim]
+        minimize = "10*y + 3*z + 3*s"
+        [activities]
+        y = { most = 1 }
+        z = { most = 1 }
+        x = { whole = false }
+        w = { whole = false }
+        s = { whole = false }
+        [rules]
+        need = "x + w + s >= 4.99999999999999999999"
+        a = "x <= 7*y"
+        b = "w <= 3*z"
+        """
+    )
+    result = branch_and_cut(sheet.problem())
+    verify(sheet.problem(), result)
+    assert (result.outcome, result.value) == ("optimal", 9 - Fraction(3, 10**20))

@@ -26,6 +26,8 @@ class Rounding:
     x : (columns,) the relaxation's point
     bounds : bounds under which the cuts will be used, or wider ones
     leaning_rows : (rows,) bool, rows that lean on the cut-off
+    rounded : (rows,) and (columns,) bool, rows and activities with a limit or bound that its
+        double only comes near: an exact cut cannot be measured from it
     """
 
     rows: RowStore
@@ -37,6 +39,7 @@ class Rounding:
     x: np.ndarray
     bounds: Bounds
     leaning_rows: np.ndarray
+    rounded: tuple[np.ndarray, np.ndarray]
 
     def box(self, touched: np.ndarray) -> tuple[dict[str, np.ndarray], bool]:
         """Return, as evidence, the bounds of some activities that are not the sheet's own.

@@ -95,7 +95,8 @@ class _Combination:
         used = (np.abs(multipliers) > TINY).nonzero()[0]
         numbers = limits.numbers[used]
         shifts = rounding.rows.shift[numbers]
-        if (shifts < 0).any():
+        rounded_rows, rounded_columns = rounding.rounded
+        if (shifts < 0).any() or rounded_rows[numbers].any():
             return None
         common = common_denominator(np.ldexp(multipliers[used], -shifts), DENOMINATOR, NEAR)
         if common is None:
@@ -108,6 +109,8 @@ class _Combination:
         own = -(weights @ rows)
         live = own.nonzero()[0]
         own = own[live]
+        if rounded_columns[live].any():
+            return None
         bounds, at_least = rounding.bounds, rounding.nearer_least()[live]
         anchors = np.where(at_least, bounds.least[live], bounds.most[live])
         at = np.ldexp(limits.at[used], shifts)

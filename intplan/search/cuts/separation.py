@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from fractions import Fraction
 
 import numpy as np
 
@@ -16,7 +17,7 @@ from intplan.search.cuts.gomory import deepest_combinations, gomory_cuts
 from intplan.search.cuts.integers import integer_gomory_cut
 from intplan.search.result import Cut
 from intplan.search.tightening import Bounds
-from intplan.sheet.problem import Problem
+from intplan.sheet.problem import Number, Problem
 
 GOMORY_ROWS = 30  # dictionary rows tried in a round
 CUTS_A_ROUND = 30
@@ -39,6 +40,16 @@ class Separator:
         self.context = context
         self._aggregator = Aggregator(context.rows, context.record.rules, problem.whole)
         self._grain = _grain(problem)
+        rows, limits = context.rows, map(context.arithmetic.row_limits, range(len(problem.rows)))
+        self._rounded_rows = np.array(
+            [_off(low, rows.least.item(i)) or _off(high, rows.most.item(i))
+             for i, (low, high) in enumerate(limits)], bool,
+        )  # fmt: skip
+        ends = zip(problem.exact_least, problem.exact_most, strict=True)
+        self._rounded_columns = np.array(
+            [_off(low, problem.least.item(j)) or _off(high, problem.most.item(j))
+             for j, (low, high) in enumerate(ends)], bool,
+        )  # fmt: skip
         binary = problem.whole & (bounds.least == 0) & (bounds.most == 1)
         self._knapsacks = {
             i
@@ -145,7 +156,13 @@ class Separator:
             context.prover.reach, context.prover.open, (problem.least, problem.most),
             dictionary.activities(), bounds,
             np.concatenate((np.zeros(context.record.rules, bool), context.record.leaning_rows)),
+            (np.concatenate((self._rounded_rows, np.zeros(cuts, bool))), self._rounded_columns),
         )  # fmt: skip
+
+
+def _off(exact: Number | None, double: float) -> bool:
+    """Tell whether a limit is not quite the double that stands for it."""
+    return exact is not None and exact != Fraction(double)
 
 
 def _grain(problem: Problem) -> np.ndarray:
