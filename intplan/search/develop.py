@@ -12,7 +12,7 @@ from intplan.relaxation.dictionary import Dictionary, Multipliers, Status
 from intplan.relaxation.start import NoDualBasis, cold_start
 from intplan.search import branching
 from intplan.search.context import Context
-from intplan.search.diving import dive
+from intplan.search.diving import dive, fractional_rows
 from intplan.search.evidence import LEAST, MOST, Proof
 from intplan.search.exact import ExactAnswer
 from intplan.search.node import Branch
@@ -20,7 +20,6 @@ from intplan.search.tightening import Bounds, tighten_by_cost
 from intplan.sheet.problem import Number, lowest
 
 PIVOTS_A_PLACE = 50  # pivots a variable after which a run is not believed to end
-FRACTION = 1e-6  # distance from a whole value that counts as fractional
 ATTEMPTS = 12  # times a node is solved again after its own tightenings
 ROUND_ALWAYS = 64  # nodes at which rounding is tried; later at every eighth
 
@@ -246,11 +245,7 @@ class NodeWork:
 
     def fractional_rows(self) -> np.ndarray:
         """Return the dictionary rows of whole activities away from a whole value, (k,)."""
-        dictionary = self.dictionary
-        values = dictionary.values
-        rows = (np.abs(values - np.rint(values)) > FRACTION).nonzero()[0]
-        rows = rows[dictionary.basic[rows] < dictionary.columns]
-        return rows[self.context.problem.whole[dictionary.basic[rows]]]
+        return fractional_rows(self.dictionary, self.context.problem.whole)
 
     # ------------------------------------------------------------------ tightening
 

@@ -18,7 +18,7 @@ from intplan.relaxation.dictionary import Dictionary, Status
 from intplan.search.context import Context
 from intplan.search.tightening import Bounds
 
-FRACTION = 1e-6
+FRACTION = 1e-6  # distance from a whole value that counts as fractional
 PIVOTS_A_STEP = 40
 DOWN = 3.0  # how much less a step down is liked than one up by the same distance: it settles less
 
@@ -37,7 +37,7 @@ def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> b
     for _ in range(dictionary.columns):  # activities without a bound could climb for ever
         if context.limits.out_of_time():
             break
-        rows = _fractional_rows(dictionary, context.problem.whole)
+        rows = fractional_rows(dictionary, context.problem.whole)
         x = dictionary.activities()
         if not len(rows):
             plan = context.arithmetic.guess_plan(x)
@@ -57,7 +57,8 @@ def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> b
     return found
 
 
-def _fractional_rows(dictionary: Dictionary, whole: np.ndarray) -> np.ndarray:
+def fractional_rows(dictionary: Dictionary, whole: np.ndarray) -> np.ndarray:
+    """Return the dictionary rows of whole activities away from a whole value, (k,)."""
     values = dictionary.values
     rows = (np.abs(values - np.rint(values)) > FRACTION).nonzero()[0]
     rows = rows[dictionary.basic[rows] < dictionary.columns]
