@@ -9,17 +9,9 @@ import pytest
 from intplan import Sheet, solve
 from intplan.planning.compare import Comparison, NodeComparison, compare
 from intplan.report.data import check_data, compare_data, nodes_solved, solve_data
-from intplan.report.text import (
-    CAUTION,
-    check_text,
-    compare_text,
-    percent_text,
-    seconds_text,
-    solve_text,
-    status_sentence,
-    table,
-    tree_text,
-)
+from intplan.report.phrases import CAUTION, percent_text, seconds_text
+from intplan.report.tables import table
+from intplan.report.text import check_text, compare_text, solve_text, status_sentence, tree_text
 from tests.bakery import (
     ALL,
     BAKERY,
@@ -139,9 +131,11 @@ def test_report_says_how_far_soft_rules_bend():
 
 
 def test_report_without_a_plan():
-    assert report(INFEASIBLE).startswith(
-        "No plan in whole units can meet every rule and bound; that is proven."
-    )
+    opening, hint, effort = report(INFEASIBLE).split("\n\n")
+    assert opening == "No plan in whole units can meet every rule and bound; that is proven."
+    assert "`intplan clash SHEET` tells which rules clash" in hint
+    assert effort.endswith(CAUTION)
+    assert "intplan clash" not in report(BAKERY)
 
 
 def test_report_of_an_aim_without_a_limit():

@@ -25,13 +25,13 @@ def solve_data(standing: StandingPlan) -> Data:
     data: Data = {"title": sheet.title, "outcome": standing.outcome}
     if standing.ended_by is not None:
         data["ended_by"] = standing.ended_by
-    data |= _exact_numbers(value=standing.exact_value, bound=standing.exact_bound)
-    data |= _plan(standing.exact_plan)
+    data |= exact_numbers(value=standing.exact_value, bound=standing.exact_bound)
+    data |= plan_data(standing.exact_plan)
     if standing.ray:
         data["ray"] = {name: nearest(step) for name, step in standing.ray.items()}
-    data |= _rules(sheet, check)
+    data |= rules_data(sheet, check)
     data["search"] = search_data(standing)
-    return data | _warnings(sheet.warnings)
+    return data | warnings_data(sheet.warnings)
 
 
 def search_data(standing: StandingPlan) -> Data:
@@ -54,14 +54,14 @@ def check_data(
     """
     plan = {a.name: amount for a, amount in zip(sheet.activities, amounts, strict=True)}
     data: Data = {"title": sheet.title, "good": check.good}
-    data |= _exact_numbers(value=check.value)
-    data |= _plan(plan)
-    data |= _rules(sheet, check)
+    data |= exact_numbers(value=check.value)
+    data |= plan_data(plan)
+    data |= rules_data(sheet, check)
     data["broken"] = [
-        {"name": broken.name, "what": broken.what, **_exact_numbers(by=broken.by)}
+        {"name": broken.name, "what": broken.what, **exact_numbers(by=broken.by)}
         for broken in check.broken
     ]
-    return data | _warnings([*sheet.warnings, *warnings])
+    return data | warnings_data([*sheet.warnings, *warnings])
 
 
 def compare_data(comparison: Comparison, standing: StandingPlan) -> Data:
@@ -92,7 +92,7 @@ def compare_data(comparison: Comparison, standing: StandingPlan) -> Data:
         }
         for node in comparison.nodes
     ]
-    return data | _warnings(standing.sheet.warnings)
+    return data | warnings_data(standing.sheet.warnings)
 
 
 def ratio(warm: float, cold: float) -> float | None:
@@ -124,7 +124,7 @@ def _node_side(node: Any, side: str) -> Data:
     }
 
 
-def _exact_numbers(**values: Number | None) -> Data:
+def exact_numbers(**values: Number | None) -> Data:
     """Return numbers by name, with ``exact`` for those that JSON would round."""
     data: Data = {name: None if value is None else nearest(value) for name, value in values.items()}
     exact = _exact({name: value for name, value in values.items() if value is not None})
@@ -137,7 +137,8 @@ def _exact(values: Mapping[str, Number]) -> dict[str, str]:
     }
 
 
-def _plan(plan: Mapping[str, Number] | None) -> Data:
+def plan_data(plan: Mapping[str, Number] | None) -> Data:
+    """Return a plan by name, with ``exact`` for the amounts that JSON would round."""
     if plan is None:
         return {"plan": None}
     data: Data = {"plan": {name: nearest(amount) for name, amount in plan.items()}}
@@ -145,13 +146,13 @@ def _plan(plan: Mapping[str, Number] | None) -> Data:
     return data | ({"exact": exact} if exact else {})
 
 
-def _rules(sheet: Sheet, check: CheckResult | None) -> Data:
+def rules_data(sheet: Sheet, check: CheckResult | None) -> Data:
     """Return every rule as it is shown, and how far each soft one bends."""
     rules: Data = {}
     bends: Data = {}
     for index, rule in enumerate(sheet.rules):
         state = None if check is None else check.rules[index]
-        rules[rule.name] = _exact_numbers(
+        rules[rule.name] = exact_numbers(
             value=None if state is None else state.value,
             least=rule.least,
             most=rule.most,
@@ -160,10 +161,11 @@ def _rules(sheet: Sheet, check: CheckResult | None) -> Data:
         if rule.give is not None and state is not None:
             bends[rule.name] = {
                 "side": state.side,
-                **_exact_numbers(amount=state.bend, price=state.bend * rule.give),
+                **exact_numbers(amount=state.bend, price=state.bend * rule.give),
             }
     return {"rules": rules, "bends": bends} if bends else {"rules": rules}
 
 
-def _warnings(warnings: Sequence[str]) -> Data:
+def warnings_data(warnings: Sequence[str]) -> Data:
+    """Return what is odd, one sentence each; nothing where nothing is."""
     return {"warnings": list(warnings)} if warnings else {}
