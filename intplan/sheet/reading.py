@@ -51,7 +51,7 @@ def read_sheet(path: str | os.PathLike[str]) -> Sheet:
 
 def parse_sheet(text: str, where: str) -> Sheet:
     """Do the work of `Sheet.parse`."""
-    table = _toml(text, where)
+    table = parse_toml(text, where)
     for key in table:
         if key not in SHEET_KEYS:
             raise SheetError(unknown("key", key, SHEET_KEYS), where)
@@ -70,13 +70,13 @@ def parse_sheet(text: str, where: str) -> Sheet:
     warnings: list[str] = []
     aim = _aim(table, index, where, warnings)
     read = tuple(
-        _rule(name, value, index, place, warnings)
+        read_rule(name, value, index, place, warnings)
         for name, value, place in _named(rules, f"{where}, [rules]")
     )
     return Sheet(title, measure, aim, activities, read, tuple(warnings))
 
 
-def _toml(text: str, where: str) -> dict[str, Any]:
+def parse_toml(text: str, where: str) -> dict[str, Any]:
     """Parse TOML with its floats kept as text."""
     try:
         return tomllib.loads(text, parse_float=DecimalText)
@@ -281,7 +281,7 @@ def _algebra(table: Mapping[str, Any], key: str, where: str) -> str:
     return value
 
 
-def _rule(
+def read_rule(
     name: str, value: object, index: Mapping[str, int], where: str, warnings: list[str]
 ) -> Rule:
     """Read one entry of [rules]."""
