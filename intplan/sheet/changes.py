@@ -5,10 +5,11 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, replace
 from fractions import Fraction
+from itertools import count
 from typing import Any, NamedTuple
 
 from intplan.errors import SheetError, excerpt, unknown
-from intplan.sheet.algebra import parse_rule, tokens
+from intplan.sheet.algebra import parse_rule, tokens, write_rule
 from intplan.sheet.model import Activity, Rule, Sheet, check_bounds
 from intplan.sheet.names import name_problem, normal
 from intplan.sheet.numbers import Number, NumberError, check_spread, exact, fraction_text, show
@@ -224,7 +225,7 @@ class _Work:
 
     def waive(self, name: str) -> None:
         """Take out a rule or a bound."""
-        where = f"waive {name}"
+        where = _place("waive", name)
         i = self.sheet.rule_index.get(name)
         if i is not None:
             self.touch(("rule", name), SIDES, "waived", where)
@@ -232,9 +233,9 @@ class _Work:
         else:
             j, side = self.bound(name, where)
             old = self.activity(j)
+            self.touch(("activity", old.name), (side,), "waived", where)
             if getattr(old, side) is None:
                 raise SheetError(f"{old.name} has no {side}", where)
-            self.touch(("activity", old.name), (side,), "waived", where)
             if side == "least" and old.least >= 0:
                 self.notes.append(
                     f"without its least, {old.name} may go below 0; to keep it from that,"
@@ -244,21 +245,25 @@ class _Work:
         self.waived.append(name)
         self.loosened.append(name)
 
-    def bound(self, name: str, where: str) -> tuple[int, str]:
-        """Return the activity and the side that a name such as ``loaf most`` speaks of."""
+    def bound(self, name: str, where: str, others: Iterable[str] = ()) -> tuple[int, str]:
+        """Return the activity and the side that a name such as ``loaf most`` speaks of.
+
+        `others` are the names, beside those of rules and bounds, that the user might have meant.
+        """
         owner, _, side = name.rpartition(" ")
         j = self.sheet.activity_index.get(owner)
         if side in SIDES and j is not None:
             return j, side
         if side in SIDES and owner in self.sheet.rule_index:
-            raise SheetError(f"{owner} is a rule, not an activity; call it {owner}", where)
+            raise SheetError(f"{owner} is a rule, not an activity; write {owner} alone", where)
         if name in self.sheet.activity_index:
             raise SheetError(
                 f"{name} is an activity; its bounds are {name} least and {name} most", where
             )
         names = self.sheet.activity_index
         known = [*self.sheet.rule_index, *(f"{a} {side}" for side in SIDES for a in names)]
-        raise SheetError(unknown("rule or bound", name, known), where)
+        kind = "rule, activity or bound" if others else "rule or bound"
+        raise SheetError(unknown(kind, name, [*known, *others]), where)
 
     def activity(self, j: int) -> Activity:
         return self.activities.get(j, self.sheet.activities[j])
@@ -275,24 +280,19 @@ class _Work:
 
     def set(self, name: str, value: Any) -> None:
         """Give a rule, an activity or a bound new limits."""
-        where = f"set {name}"
-        least, most = _read_limits(name, value, where)
+        where = _place("set", name)
         i = self.sheet.rule_index.get(name)
         if i is not None:
-            self.set_rule(i, least, most, where)
+            self.set_rule(i, *_read_limits(name, name, value, where), where)
             return
-        j = self.sheet.activity_index.get(name)
+        j, sides = self.sheet.activity_index.get(name), SIDES
         if j is None:
-            if " " not in name:
-                known = [*self.sheet.rule_index, *self.sheet.activity_index]
-                raise SheetError(unknown("rule, activity or bound", name, known), where)
-            j, side = self.bound(name, where)
-            other = least if side == "most" else most
-            here = most if side == "most" else least
-            if other is not None and other != here:
-                relation = "<=" if side == "most" else ">="
-                raise SheetError(f"write {name} = 14, or {name[: -len(side)]}{relation} 14", where)
-            least, most = (None, here) if side == "most" else (here, None)
+            j, side = self.bound(name, where, self.sheet.activity_index)
+            sides = (side,)
+        owner = self.sheet.activities[j].name
+        least, most = _read_limits(name, owner, value, where)
+        if len(sides) == 1:
+            least, most = _one_side(name, sides[0], least, most, where)
         self.set_activity(j, least, most, "set", where)
 
     def set_rule(self, i: int, least: Number | None, most: Number | None, where: str) -> None:
@@ -301,8 +301,8 @@ class _Work:
         self.touch(("rule", old.name), sides, "set", where)
         for side in sides:
             if getattr(old, side) is None:
-                text = self.sheet.show_rule(old)
-                raise SheetError(f"{old.name} has no {side}; it says {excerpt(text, 80)}", where)
+                says = write_rule(((0, 1),), old.least, old.most, ("...",))
+                raise SheetError(f"{old.name} has no {side}; it says {says}", where)
         if sides:
             self.rules[i] = replace(self.rules.get(i) or old, **sides, text="")
 
@@ -316,7 +316,7 @@ class _Work:
 
     def freeze(self, name: str, plan: Mapping[str, Number] | None) -> None:
         """Keep an activity at the amount that it has in a plan."""
-        where = f"freeze {name}"
+        where = _place("freeze", name)
         j = self.sheet.activity_index.get(name)
         if j is None:
             if name in self.sheet.rule_index:
@@ -331,7 +331,7 @@ class _Work:
 
     def add(self, name: str, value: Any) -> None:
         """Read one more rule."""
-        where = f"add {name}"
+        where = _place("add", name)
         i = self.sheet.rule_index.get(name)
         if name in self.new:
             raise SheetError(f"the rule {name} is added twice", where)
@@ -357,7 +357,7 @@ class _Work:
             self.notes.append("nothing is changed")
         return Changes(
             sheet,
-            _changed_sheet(sheet, activities, rules, self.waived),
+            sheet.with_rules(activities, rules, _warnings(sheet, self.waived)),
             places,
             added,
             tuple(self.waived),
@@ -369,23 +369,18 @@ class _Work:
 
     def changed_rules(self) -> tuple[tuple[Rule, ...], tuple[int | None, ...]]:
         """Return the rules as they are now, and where each old one is among them."""
-        old = self.sheet.rules
-        new = tuple(self.new.values())
-        if not self.rules:
-            return old + new, tuple(range(len(old)))
-        kept: list[Rule] = []
-        places: list[int | None] = []
-        for i, rule in enumerate(old):
-            now = self.rules.get(i, rule)
-            places.append(None if now is None else len(kept))
-            if now is not None:
-                kept.append(now)
-        for i, now in self.rules.items():
-            if now is not None:
-                _check_limits(now, f"set {now.name}")
-                before = (old[i].least, old[i].most)
-                self.compare(now.name, before, (now.least, now.most))
-        return (*kept, *new), tuple(places)
+        now: list[Rule | None] = list(self.sheet.rules)
+        for i, rule in self.rules.items():
+            old, now[i] = now[i], rule
+            if rule is not None:
+                _check_limits(rule, f"set {rule.name}")
+                self.compare(rule.name, (old.least, old.most), (rule.least, rule.most))
+        places: tuple[int | None, ...] = tuple(range(len(now)))
+        if None in self.rules.values():
+            at = count()
+            places = tuple(None if rule is None else next(at) for rule in now)
+        kept = [rule for rule in now if rule is not None]
+        return (*kept, *self.new.values()), places
 
     def changed_activities(self) -> tuple[Activity, ...]:
         """Return the activities as they are now."""
@@ -428,35 +423,17 @@ def _compared(old: Number | None, new: Number | None, outward: int) -> int:
     return outward if new > old else -outward
 
 
-def _changed_sheet(
-    sheet: Sheet, activities: tuple[Activity, ...], rules: tuple[Rule, ...], waived: list[str]
-) -> Sheet:
-    """Return the sheet with other rules and bounds of the same activities."""
-    warnings = sheet.warnings
-    if warnings and waived:
-        gone = tuple(f"[rules] {name}: " for name in waived)
-        warnings = tuple(w for w in warnings if not w.startswith(gone))
-    # Made past Sheet's own checks: every name was held against the old ones already.
-    new = object.__new__(Sheet)
-    new.__dict__.update(
-        title=sheet.title,
-        measure=sheet.measure,
-        aim=sheet.aim,
-        activities=activities,
-        rules=rules,
-        warnings=warnings,
-        activity_index=sheet.activity_index,
-        _names=sheet._names,
-    )
-    return new
+def _warnings(sheet: Sheet, waived: list[str]) -> tuple[str, ...]:
+    """Return the warnings of a sheet without those about rules that are gone."""
+    gone = tuple(f"[rules] {name}: " for name in waived)
+    return tuple(warning for warning in sheet.warnings if not warning.startswith(gone))
 
 
-def _read_limits(name: str, value: Any, where: str) -> Limits:
-    """Return new limits as a pair, from text, a pair, or a number for a bound."""
+def _read_limits(name: str, owner: str, value: Any, where: str) -> Limits:
+    """Return new limits as a pair, from text, a pair, or a number for a bound of `owner`."""
     if isinstance(value, str):
         text = value.strip()
         if text.startswith(("<", ">", "=")):
-            owner = name.rpartition(" ")[0] or name
             return _limits(_Spoken(name, owner, f"{owner} {text}"), where)
         spoken = _spoken(text)
         if spoken is None or spoken.name != name:
@@ -466,11 +443,27 @@ def _read_limits(name: str, value: Any, where: str) -> Limits:
         if isinstance(value, (tuple, list)) and len(value) == 2:
             least, most = (None if v is None else exact(v) for v in value)
             return least, most
-        if name.endswith((" least", " most")):
+        if name != owner:
             return exact(value), exact(value)
     except NumberError as problem:
         raise SheetError(str(problem), where) from None
     raise SheetError('new limits are text such as "<= 14", or a pair (least, most)', where)
+
+
+def _one_side(
+    name: str, side: str, least: Number | None, most: Number | None, where: str
+) -> Limits:
+    """Return the limits set by a text about one bound, which says ``= 14`` or points outward."""
+    here, other = (least, most) if side == "least" else (most, least)
+    if other is not None and other != here:
+        owner, relation = name[: -len(side) - 1], ">=" if side == "least" else "<="
+        raise SheetError(f"write {name} = 14, or {owner} {relation} 14", where)
+    return (here, None) if side == "least" else (None, here)
+
+
+def _place(what: str, name: str) -> str:
+    """Return the place of a change for errors, a long name cut."""
+    return f"{what} {name if len(name) <= 60 else name[:57] + '...'}"
 
 
 def _check_limits(rule: Rule, where: str) -> None:

@@ -268,6 +268,31 @@ class Sheet:
 
         return rule_of_text(name, text, self.activity_index, note, give, give_most, where)
 
+    def with_rules(
+        self, activities: tuple[Activity, ...], rules: tuple[Rule, ...], warnings: tuple[str, ...]
+    ) -> Sheet:
+        """Return this sheet with other bounds and rules, quickly.
+
+        Parameters
+        ----------
+        activities : of the same names in the same order
+        rules : of names that differ; the caller makes sure of that, so that it need not be checked
+            again for every rule of a large sheet
+        warnings : of the new sheet
+        """
+        new = object.__new__(Sheet)
+        new.__dict__.update(
+            title=self.title,
+            measure=self.measure,
+            aim=self.aim,
+            activities=activities,
+            rules=rules,
+            warnings=warnings,
+            activity_index=self.activity_index,
+            _names=self._names,
+        )
+        return new
+
     def show_rule(self, rule: Rule) -> str:
         """Return a rule as algebra, every activity on the left and every number on the right."""
         return write_rule(rule.terms, rule.least, rule.most, self._names)
