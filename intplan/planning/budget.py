@@ -1,0 +1,64 @@
+"""One limit of time and nodes shared by the several searches that a question takes."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from time import perf_counter
+from typing import Any
+
+from intplan.planning.standing import StandingPlan, _read_limits
+
+LEAST_TIME = 1e-3  # seconds given to a search that is started all the same
+
+
+class Budget:
+    """What is left of the limits of one question.
+
+    Parameters
+    ----------
+    time_limit : seconds from now for all searches together, or None
+    node_limit : nodes for all searches together, or None
+    stop : polled; true asks for an early end
+
+    Raises
+    ------
+    IntplanError
+        If a limit makes no sense.
+    """
+
+    def __init__(
+        self,
+        time_limit: float | None = None,
+        node_limit: int | None = None,
+        stop: Callable[[], bool] | None = None,
+    ) -> None:
+        limits = _read_limits(time_limit, 0, node_limit)
+        self.deadline = None if limits.seconds is None else perf_counter() + limits.seconds
+        self.nodes = limits.nodes
+        self.stop = stop
+
+    def ended_by(self) -> str | None:
+        """Return ``interrupt``, ``time`` or ``nodes`` once that limit is reached."""
+        if self.stop is not None and self.stop():
+            return "interrupt"
+        if self.deadline is not None and perf_counter() >= self.deadline:
+            return "time"
+        if self.nodes is not None and self.nodes < 1:
+            return "nodes"
+        return None
+
+    def run(self, search: Callable[..., StandingPlan], *what: Any, **more: Any) -> StandingPlan:
+        """Run one search within what is left, and book what it took.
+
+        Parameters
+        ----------
+        search : takes `what`, `more` and the keywords ``time_limit``, ``node_limit``, ``stop``
+        """
+        seconds = None
+        if self.deadline is not None:
+            seconds = max(self.deadline - perf_counter(), LEAST_TIME)
+        nodes = None if self.nodes is None else max(self.nodes, 1)
+        found = search(*what, time_limit=seconds, node_limit=nodes, stop=self.stop, **more)
+        if self.nodes is not None:
+            self.nodes -= found.search.nodes
+        return found

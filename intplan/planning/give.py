@@ -1,0 +1,195 @@
+"""How far rules must bend before a plan exists: each alone, and the least of all together."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, replace
+from typing import NamedTuple
+
+from intplan.errors import IntplanError, excerpt, unknown
+from intplan.planning.budget import Budget
+from intplan.planning.standing import Progress, StandingPlan, solve
+from intplan.sheet import Aim, Rule, Sheet
+from intplan.sheet.numbers import Number, lowest
+
+
+class Bending(NamedTuple):
+    """How far one rule passes one of its limits.
+
+    Attributes
+    ----------
+    name : the rule
+    side : ``"least"`` or ``"most"``, the limit that is passed
+    amount : by how much, in the units in which the rule is written; of a soft rule the whole way
+        from its limit, what it may bend anyway included
+    """
+
+    name: str
+    side: str
+    amount: Number
+
+
+@dataclass(frozen=True)
+class Give:
+    """What would free a clash.
+
+    Attributes
+    ----------
+    alone : each rule of the clash that may bend, by itself: how far it must; None where it frees
+        nothing by itself. A rule for which a limit came first is not there
+    least : the bendings of the least weighted sum that leave a plan, in sheet order; None where
+        bending these rules frees nothing, or none is known
+    total : the sum of amount times weight over `least`; None without it
+    weighted : the weight of each rule that may bend: the price of its give, else 1
+    plan : the best plan under the limits so bent; None without `least`
+    may_bend : the rules that were allowed to bend, in sheet order
+    proven : no limit came first: `alone` is complete, `least` is the least
+    """
+
+    alone: dict[str, Bending | None]
+    least: tuple[Bending, ...] | None
+    total: Number | None
+    weighted: dict[str, Number]
+    plan: StandingPlan | None
+    may_bend: tuple[str, ...]
+    proven: bool
+
+
+def bendable_rules(sheet: Sheet, may_bend: Iterable[str] | None) -> tuple[str, ...]:
+    """Return the rules that may bend, in sheet order; every rule where `may_bend` is None.
+
+    Raises
+    ------
+    IntplanError
+        A name is none of a rule.
+    """
+    if may_bend is None:
+        return tuple(rule.name for rule in sheet.rules)
+    wanted = {may_bend} if isinstance(may_bend, str) else set(may_bend)
+    for name in sorted(wanted - sheet.rule_index.keys()):
+        activity, _, side = name.rpartition(" ")
+        if side in ("least", "most") and activity in sheet.activity_index:
+            raise IntplanError(f"{excerpt(name)} is a bound, and only rules may bend", "may_bend")
+        raise IntplanError(unknown("rule", name, sheet.rule_index), "may_bend")
+    return tuple(rule.name for rule in sheet.rules if rule.name in wanted)
+
+
+def find_give(
+    sheet: Sheet,
+    clashing: Sequence[str],
+    may_bend: tuple[str, ...],
+    budget: Budget,
+    progress: Progress | None = None,
+) -> Give:
+    """Find the least give that leaves a plan, and what each clashing rule would have to give.
+
+    Parameters
+    ----------
+    sheet : has no plan
+    clashing : a clash of it; no rule outside of it can free the plan alone
+    may_bend : the rules that may bend, from `bendable_rules`
+    budget : the limits, shared with what came before
+    progress : told of the search for the best plan under the bent limits
+
+    Notes
+    -----
+    The rules that may bend become soft without limit at their weights, and the prices are the
+    only aim: the elastic form of a problem (J. W. Chinneck, Feasibility and Infeasibility in
+    Optimization: Algorithms and Computational Methods, Springer, 2008).
+    A soft rule that is not among them still bends as far as it may, without cost here.
+    """
+    weighted = {r.name: _weight(r) for r in sheet.rules if r.name in may_bend}
+    proven = True
+    least = plan = None
+    if may_bend and budget.ended_by() is None:
+        least, proven = _least_bendings(sheet, may_bend, budget)
+    elif may_bend:
+        proven = False
+    alone: dict[str, Bending | None] = {}
+    for name in (n for n in clashing if n in weighted):
+        if budget.ended_by() is not None:
+            proven = False
+            break
+        bendings, settled = _least_bendings(sheet, (name,), budget)
+        if settled:
+            alone[name] = bendings[0] if bendings else None
+        proven = proven and settled
+    if least is not None:
+        plan = budget.run(solve, bent(sheet, least), progress=progress)
+    return Give(
+        alone=alone,
+        least=least,
+        total=None if least is None else lowest(sum(b.amount * weighted[b.name] for b in least)),
+        weighted=weighted,
+        plan=plan,
+        may_bend=may_bend,
+        proven=proven,
+    )
+
+
+def bent(sheet: Sheet, bendings: Iterable[Bending]) -> Sheet:
+    """Return the sheet with its limits moved by the bendings.
+
+    A soft rule keeps its limits and its price, and may bend as far as its bending goes.
+    """
+    rules = list(sheet.rules)
+    for name, side, amount in bendings:
+        i = sheet.rule_index[name]
+        rule = rules[i]
+        if rule.give is not None:
+            if rule.give_most is not None and rule.give_most < amount:
+                rules[i] = replace(rule, give_most=amount)
+        elif side == "most" and rule.most is not None:
+            rules[i] = replace(rule, most=lowest(rule.most + amount), text="")
+        elif rule.least is not None:
+            rules[i] = replace(rule, least=lowest(rule.least - amount), text="")
+    return replace(sheet, rules=tuple(rules))
+
+
+def widest(rule: Rule) -> Rule:
+    """Return a soft rule as a firm one at the limits to which it may bend; others as they are."""
+    if rule.give is None:
+        return rule
+    least = most = None
+    if rule.give_most is not None:
+        least = None if rule.least is None else lowest(rule.least - rule.give_most)
+        most = None if rule.most is None else lowest(rule.most + rule.give_most)
+    return replace(rule, least=least, most=most, give=None, give_most=None, text="")
+
+
+def _weight(rule: Rule) -> Number:
+    return 1 if rule.give is None else rule.give
+
+
+def _least_bendings(
+    sheet: Sheet, bending: Sequence[str], budget: Budget
+) -> tuple[tuple[Bending, ...] | None, bool]:
+    """Return the least bendings of these rules that leave a plan (None: there are none).
+
+    The second entry tells whether that is proven.
+    """
+    freed = budget.run(_solve_elastic, _elastic(sheet, bending))
+    settled = freed.outcome in ("optimal", "infeasible")
+    if freed.check is None:
+        return None, settled
+    found = tuple(
+        Bending(rule.name, rule.side, rule.bend)
+        for rule in freed.check.rules
+        if rule.bend and rule.side is not None
+    )
+    return found, settled
+
+
+def _solve_elastic(sheet: Sheet, **limits: object) -> StandingPlan:
+    """Solve an elastic sheet."""
+    return solve(sheet, **limits)  # type: ignore[arg-type]
+
+
+def _elastic(sheet: Sheet, bending: Sequence[str]) -> Sheet:
+    """Return the sheet with these rules soft without limit, and no aim but the prices."""
+    wanted = frozenset(bending)
+    rules = tuple(
+        replace(rule, give=_weight(rule), give_most=None) if rule.name in wanted else widest(rule)
+        for rule in sheet.rules
+    )
+    return replace(sheet, aim=Aim(), rules=rules)
