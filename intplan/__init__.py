@@ -11,16 +11,30 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from intplan.errors import IntplanError
-    from intplan.planning import StandingPlan, load_standing, solve
+    from intplan.planning import Clash, Replan, StandingPlan, load_standing, solve
+    from intplan.planning.clash import clash
     from intplan.sheet import Sheet
 
 __version__ = "0.1.0"
-__all__ = ["IntplanError", "Sheet", "StandingPlan", "__version__", "load_standing", "solve"]
+__all__ = [
+    "Clash",
+    "IntplanError",
+    "Replan",
+    "Sheet",
+    "StandingPlan",
+    "__version__",
+    "clash",
+    "load_standing",
+    "solve",
+]
 
 _HOMES = {
+    "Clash": "intplan.planning",
     "IntplanError": "intplan.errors",
+    "Replan": "intplan.planning",
     "Sheet": "intplan.sheet",
     "StandingPlan": "intplan.planning",
+    "clash": "intplan.planning.clash",
     "load_standing": "intplan.planning",
     "solve": "intplan.planning",
 }

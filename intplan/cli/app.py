@@ -74,7 +74,7 @@ def run(arguments: Sequence[str]) -> int:
     int
         The exit status.
     """
-    from intplan.cli import commands  # noqa: F401  (each command joins the group)
+    from intplan.cli import commands, replan_commands  # noqa: F401  (each command joins the group)
 
     console = Console(as_json="--json" in arguments)
     interrupts = Interrupts()

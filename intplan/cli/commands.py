@@ -8,21 +8,20 @@ from typing import TYPE_CHECKING
 
 import click
 
+from intplan.cli.answers import (
+    NO,
+    STATUS_OF,
+    YES,
+    give_and_keep,
+    read_sheet,
+    shown_progress,
+)
 from intplan.cli.app import BAD_INPUT, UNFINISHED, Session, group
 from intplan.cli.options import limit_options, output_options
 
 if TYPE_CHECKING:
     from intplan.planning import StandingPlan
     from intplan.sheet import Sheet
-
-YES, NO = 0, 1
-STATUS_OF = {
-    "optimal": YES,
-    "within_gap": YES,
-    "infeasible": NO,
-    "unbounded": NO,
-    "unfinished": UNFINISHED,
-}
 
 
 @group.command("solve", short_help="Find the best whole-unit plan and prove it.")
@@ -52,21 +51,14 @@ def solve_command(
     from intplan.report.data import solve_data
     from intplan.report.text import solve_text
 
-    console = session.console
-    console.quiet = quiet
+    session.console.quiet = quiet
     check_targets([save_to, plan_to], [sheet_file])
-    sheet = _read_sheet(session, sheet_file)
+    sheet = read_sheet(session, sheet_file)
     with session.interrupts.softened() as stop:
         standing = _search(session, sheet, time_limit, gap, node_limit, stop)
-        data = solve_data(standing)
-        failure = _keep(session, standing, save_to, plan_to)
-        if failure is None:
-            console.answer(solve_text(standing), data)
-            return STATUS_OF[standing.outcome]
-        if not console.as_json:
-            console.answer(solve_text(standing), data)
-        console.error(*failure, more=data)
-        return BAD_INPUT
+        text, data = solve_text(standing), solve_data(standing)
+        kept = give_and_keep(session, standing, text, data, save_to, plan_to)
+    return STATUS_OF[standing.outcome] if kept else BAD_INPUT
 
 
 @group.command("check", short_help="Hold a hand-made plan against the rules.")
@@ -87,7 +79,7 @@ def check_command(
     from intplan.report.text import check_text
 
     session.console.quiet = quiet
-    sheet = _read_sheet(session, sheet_file)
+    sheet = read_sheet(session, sheet_file)
     plan = read_plan(plan_file, sheet)
     session.console.notes(f"Note: {warning}." for warning in plan.warnings)
     check = sheet.check(plan.amounts)
@@ -123,7 +115,7 @@ def compare_command(
     from intplan.report.text import compare_text
 
     session.console.quiet = quiet
-    sheet = _read_sheet(session, sheet_file)
+    sheet = read_sheet(session, sheet_file)
     with session.interrupts.softened() as stop:
         standing = _search(session, sheet, time_limit, gap, node_limit, stop)
         bounded = standing.outcome != "unbounded"
@@ -172,15 +164,6 @@ def tree_command(
     return YES
 
 
-def _read_sheet(session: Session, path: str) -> Sheet:
-    """Read a sheet and pass its warnings on."""
-    from intplan.sheet import Sheet
-
-    sheet = Sheet.read(path)
-    session.console.notes(f"Note: {warning}." for warning in sheet.warnings)
-    return sheet
-
-
 def _search(
     session: Session,
     sheet: Sheet,
@@ -191,42 +174,14 @@ def _search(
 ) -> StandingPlan:
     """Solve a sheet, with a status sentence where someone can see it."""
     from intplan.planning import solve
-    from intplan.report.text import status_sentence
-
-    console = session.console
-    progress: Callable[..., None] | None = None
-    if console.shows_status():
-
-        def progress(value, bound):
-            console.status(status_sentence(sheet, value, bound))
 
     standing = solve(
         sheet,
         time_limit=time_limit,
         gap=gap,
         node_limit=node_limit,
-        progress=progress,
+        progress=shown_progress(session, sheet),
         stop=stop,
     )
-    console.clear_status()
+    session.console.clear_status()
     return standing
-
-
-def _keep(
-    session: Session, standing: StandingPlan, save_to: str | None, plan_to: str | None
-) -> tuple[str, str | None] | None:
-    """Write the files that were asked for; return message and place of what went wrong."""
-    from intplan.errors import IntplanError, printable
-    from intplan.planning.planfile import write_plan
-
-    try:
-        if save_to is not None:
-            standing.save(save_to)
-        if plan_to is not None and standing.exact_plan is not None:
-            write_plan(plan_to, standing.sheet, standing.exact_plan)
-        elif plan_to is not None:
-            note = f"Note: there is no plan, so {printable(plan_to)} was not written."
-            session.console.notes([note])
-    except IntplanError as error:
-        return error.message, error.where
-    return None

@@ -74,22 +74,82 @@ def output_options(command: Command) -> Command:
     return command
 
 
+def time_option(command: Command) -> Command:
+    """Add ``--time-limit``."""
+    return click.option(
+        "--time-limit", type=Seconds(), metavar="SECONDS", help="End the search after that."
+    )(command)
+
+
+def node_option(command: Command) -> Command:
+    """Add ``--node-limit``."""
+    return click.option(
+        "--node-limit", type=Count(), metavar="N", help="End the search after solving N nodes."
+    )(command)
+
+
 def limit_options(command: Command) -> Command:
-    """Add the limits of a search."""
+    """Add the limits of a search, and the gap that is good enough."""
+    gap = click.option(
+        "--gap",
+        type=Percent(),
+        default="0",
+        metavar="PERCENT",
+        help="Be content with a plan proven to be within PERCENT of the best; 0 if left out.",
+    )
+    return time_option(gap(node_option(command)))
+
+
+def change_options(command: Command) -> Command:
+    """Add the changes of rules, and how close the new plan is to stay."""
     for option in (
         click.option(
-            "--node-limit", type=Count(), metavar="N", help="End the search after solving N nodes."
-        ),
-        click.option(
-            "--gap",
+            "--stay-close",
             type=Percent(),
-            default="0",
-            metavar="PERCENT",
-            help="Be content with a plan proven to be within PERCENT of the best; 0 if left out.",
+            metavar="[PERCENT]",
+            is_flag=False,
+            flag_value="0",
+            help="Of the plans within PERCENT of the best, take the closest to the old one; "
+            "without a number, of the best plans only.",
         ),
         click.option(
-            "--time-limit", type=Seconds(), metavar="SECONDS", help="End the search after that."
+            "--freeze",
+            multiple=True,
+            metavar="NAME",
+            help="Keep an activity at its amount in the old plan. May be repeated.",
+        ),
+        click.option(
+            "--set",
+            "settings",
+            multiple=True,
+            metavar="LIMITS",
+            help='New limits of a rule, as it is shown, or of an activity: "oven <= 14", '
+            '"loaf most = 800". May be repeated.',
+        ),
+        click.option(
+            "--waive",
+            multiple=True,
+            metavar="NAME",
+            help='Take out a rule or a bound ("loaf most"). May be repeated.',
+        ),
+        click.option(
+            "--add",
+            "additions",
+            multiple=True,
+            metavar="RULE",
+            help='A new rule, "name: algebra" or "name: {rule = ..., give = ...}". '
+            "May be repeated.",
         ),
     ):
         command = option(command)
     return command
+
+
+def bend_option(command: Command) -> Command:
+    """Add the rules that may bend to free a clash."""
+    return click.option(
+        "--may-bend",
+        multiple=True,
+        metavar="RULE",
+        help="Where rules clash, let only the rules so named give way. May be repeated.",
+    )(command)

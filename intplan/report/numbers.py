@@ -41,6 +41,12 @@ def readable(number: Number, places: int = 0) -> str:
     return f"about {rounding}"
 
 
+def brief(number: Number) -> str:
+    """Write a number for a crowded place: where there is no short decimal, its rounding alone."""
+    text = readable(number)
+    return f"about {_rounded(number)}" if "/" in text else text
+
+
 def amount(number: Number, measure: str = "") -> str:
     """Write a number with its unit; money gets two digits after the point where it has any."""
     places = 2 if CURRENCY.fullmatch(measure) else 0

@@ -54,7 +54,8 @@ def count(number: int, noun: str) -> str:
     if number == 1:
         return f"1 {noun}"
     several = {"other activity": "other activities", "activity": "activities",
-               "rule or bound": "rules or bounds"}.get(noun, f"{noun}s")  # fmt: skip
+               "rule or bound": "rules or bounds",
+               "other rule or bound": "other rules and bounds"}.get(noun, f"{noun}s")  # fmt: skip
     return f"{number:,} {several}"
 
 

@@ -49,10 +49,9 @@ def verdict(standing: StandingPlan) -> list[str]:
     """Say in sentences what was found and what is proven of it."""
     sheet = standing.sheet
     if standing.outcome == "infeasible":
-        whole = " in whole units" if any(a.whole for a in sheet.activities) else ""
-        return [f"No plan{whole} can meet every rule and bound; that is proven."]
+        return [no_plan_sentence(sheet)]
     if standing.outcome == "unbounded":
-        return _runaway_sentences(standing)
+        return ["The aim has no limit.", runaway_sentence(standing)]
     value = standing.exact_value
     if standing.outcome == "optimal" and value is not None:
         if sheet.aim.sense is None and not value:
@@ -60,23 +59,27 @@ def verdict(standing: StandingPlan) -> list[str]:
         worth = value_text(sheet, value)
         return [f"The best plan comes to {worth}.", "It is proven that no plan is better."]
     opening = [ENDED[standing.ended_by]] if standing.ended_by else []
-    return opening + _open_sentences(standing)
+    return opening + open_sentences(standing)
 
 
-def _runaway_sentences(standing: StandingPlan) -> list[str]:
+def no_plan_sentence(sheet: Sheet) -> str:
+    """Say that it is proven that there is no plan."""
+    whole = " in whole units" if any(a.whole for a in sheet.activities) else ""
+    return f"No plan{whole} can meet every rule and bound; that is proven."
+
+
+def runaway_sentence(standing: StandingPlan) -> str:
+    """Name the activities that run away where the aim has no limit."""
     steps = standing.ray or {}
     start = ", starting from the plan below," if standing.exact_plan else ""
     moves = [
         f"{name} {'grows' if step > 0 else 'falls'} by {readable(abs(step))}"
         for name, step in steps.items()
     ]
-    return [
-        "The aim has no limit.",
-        f"It gets better for ever{start} as {listing(moves)}, again and again.",
-    ]
+    return f"It gets better for ever{start} as {listing(moves)}, again and again."
 
 
-def _open_sentences(standing: StandingPlan) -> list[str]:
+def open_sentences(standing: StandingPlan) -> list[str]:
     """Say how good a plan is that is not proven best, or what is known without a plan."""
     sheet, value, bound = standing.sheet, standing.exact_value, standing.exact_bound
     limit = None if bound is None else bound_text(sheet, bound)
