@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from time import perf_counter
 from typing import Any
 
@@ -47,17 +48,37 @@ class Budget:
             return "nodes"
         return None
 
-    def run(self, search: Callable[..., StandingPlan], *what: Any, **more: Any) -> StandingPlan:
+    @contextmanager
+    def halved(self) -> Iterator[None]:
+        """Hold back half of the time that is left, for what comes afterwards."""
+        deadline = self.deadline
+        if deadline is not None:
+            self.deadline = (perf_counter() + deadline) / 2
+        try:
+            yield
+        finally:
+            self.deadline = deadline
+
+    def run(
+        self,
+        search: Callable[..., StandingPlan],
+        *what: Any,
+        most_nodes: int | None = None,
+        **more: Any,
+    ) -> StandingPlan:
         """Run one search within what is left, and book what it took.
 
         Parameters
         ----------
         search : takes `what`, `more` and the keywords ``time_limit``, ``node_limit``, ``stop``
+        most_nodes : a node limit of this search alone
         """
         seconds = None
         if self.deadline is not None:
             seconds = max(self.deadline - perf_counter(), LEAST_TIME)
-        nodes = None if self.nodes is None else max(self.nodes, 1)
+        nodes = most_nodes
+        if self.nodes is not None:
+            nodes = max(self.nodes, 1) if nodes is None else max(min(self.nodes, nodes), 1)
         found = search(*what, time_limit=seconds, node_limit=nodes, stop=self.stop, **more)
         if self.nodes is not None:
             self.nodes -= found.search.nodes

@@ -4,10 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Callable, Collection, Iterable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import NamedTuple
 
 from intplan.errors import IntplanError
 from intplan.planning.budget import Budget
+from intplan.planning.directions import bounded, runs_away
 from intplan.planning.give import Give, bendable_rules, find_give
 from intplan.planning.standing import Progress, StandingPlan, solve
 from intplan.sheet import Activity, Aim, Sheet
@@ -15,6 +17,8 @@ from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number
 
 SIDES = ("least", "most")
+FIRST_NODES = 500  # nodes of a first test; one that takes more waits until the others are done
+AWAY_NODES = 10  # nodes of a test in which whole activities may run away, before it is bounded
 ENDED = {
     "time": "the time limit came first",
     "nodes": "the node limit came first",
@@ -109,7 +113,7 @@ def clash(
     ... ''')
     >>> found = clash(sheet)
     >>> found.names, found.needs_whole, found.give.total
-    (('oven', 'school', 'inn'), False, Fraction(3, 2))
+    (('oven', 'school', 'inn'), False, 2)
     """
     verdict = settle(
         subject,
@@ -193,7 +197,9 @@ def find_clash(
     no plan cuts the set down to the evidence of that test.
     """
     work = _Filter(standing, budget, last, known)
-    work.run()
+    with budget.halved():
+        work.run()
+    needs_whole = _needs_whole(sheet, work.members, budget)
     names = tuple(name for name in member_names(sheet) if name in work.members)
     give = find_give(sheet, names, may_bend, budget, progress)
     activities = [activity.name for activity in sheet.activities]
@@ -205,8 +211,8 @@ def find_clash(
     return Clash(
         sheet=sheet,
         names=names,
-        needs_whole=_needs_whole(sheet, work.members, budget),
-        smallest=len(witnesses) == len(names),
+        needs_whole=needs_whole,
+        smallest=work.smallest,
         witnesses=witnesses,
         give=give,
     )
@@ -252,6 +258,16 @@ def broken_members(sheet: Sheet, members: Collection[str], amounts: Sequence[Num
     return broken & set(members)
 
 
+class _Test(NamedTuple):
+    """Whether some members can be met together.
+
+    `amounts` do so; without them, `support` names those that cannot, None if it is not settled.
+    """
+
+    amounts: Sequence[Number] | None = None
+    support: set[str] | None = None
+
+
 class _Filter:
     """Deletion filtering.
 
@@ -273,6 +289,8 @@ class _Filter:
         last: Sequence[str],
         known: Sequence[Sequence[Number]],
     ) -> None:
+        from intplan.planning.restart import support
+
         self.sheet = standing.sheet
         self.budget = budget
         self.known = known
@@ -282,40 +300,73 @@ class _Filter:
         names = [name for name in member_names(self.sheet) if name not in endless]
         late = set(last)
         self.order = [n for n in names if n not in late] + [n for n in names if n in late]
-        self.members = set(names)
+        self.members = set(names) & support(standing)
+
+    @property
+    def smallest(self) -> bool:
+        """Whether every member has a witness."""
+        return len(self.witnesses) == len(self.members)
 
     def run(self) -> None:
-        """Leave out one member after the other, until none can be or a limit is reached."""
-        from intplan.planning.restart import support
+        """Leave out one member after the other, until none can be or a limit is reached.
 
-        self.members &= support(self.proof)
-        # A test that no search could settle may be settled once the set is smaller.
-        while True:
+        A test that takes long is left for later: it is easier once the set is smaller.
+        """
+        most_nodes: int | None = FIRST_NODES
+        while not self.smallest:
             before = len(self.members)
             for name in self.order:
                 if name not in self.members or name in self.witnesses:
                     continue
                 if self.budget.ended_by() is not None:
                     return
-                self._try_without(name)
-            if len(self.members) == before or len(self.witnesses) == len(self.members):
-                return
+                self._try_without(name, most_nodes)
+            if len(self.members) == before:
+                if most_nodes is None:
+                    return
+                most_nodes = None
 
-    def _try_without(self, name: str) -> None:
+    def _try_without(self, name: str, most_nodes: int | None) -> None:
         """Drop a member if no plan meets the others, else keep the plan that does."""
-        from intplan.planning.restart import feasible, support
-
+        others = self.members - {name}
         for amounts in self.known:
-            if broken_members(self.sheet, self.members, amounts) == {name}:
+            if not broken_members(self.sheet, others, amounts):
                 self.witnesses[name] = amounts
                 return
-        others = self.members - {name}
-        test = self.budget.run(feasible, self.proof, restricted(self.sheet, others))
+        test = self._test(others, most_nodes)
+        if test.amounts is not None:
+            self.witnesses[name] = test.amounts
+        elif test.support is not None:
+            self.members = others & test.support
+
+    def _test(self, members: Collection[str], most_nodes: int | None) -> _Test:
+        """Look for a plan that meets the members."""
+        from intplan.planning.restart import feasible, support
+
+        sheet = restricted(self.sheet, members)
+        away = runs_away(sheet)
+        nodes = AWAY_NODES if away else most_nodes
+        test = self.budget.run(feasible, self.proof, sheet, most_nodes=nodes)
         if test.result.plan is not None:
-            self.witnesses[name] = test.result.plan[: len(self.sheet.activities)]
-        elif test.outcome == "infeasible":
+            return _Test(amounts=test.result.plan[: len(sheet.activities)])
+        if test.outcome == "infeasible":
             self.proof = test
-            self.members = others & support(test)
+            return _Test(support=support(test))
+        if away and self.budget.ended_by() is None:
+            return self._test_bounded(sheet, most_nodes)
+        return _Test()
+
+    def _test_bounded(self, sheet: Sheet, most_nodes: int | None) -> _Test:
+        """Look for a plan of a sheet in which whole activities lack bounds."""
+        from intplan.planning.restart import feasible, support
+
+        form = bounded(sheet, partial(self.budget.run, solve))
+        if form is None or self.budget.ended_by() is not None:
+            return _Test()
+        test = self.budget.run(feasible, None, form.sheet, most_nodes=most_nodes)
+        if test.result.plan is not None:
+            return _Test(amounts=form.lift(test.result.plan))
+        return _Test(support=support(test) if test.outcome == "infeasible" else None)
 
 
 def _needs_whole(sheet: Sheet, members: Collection[str], budget: Budget) -> bool | None:

@@ -41,9 +41,9 @@ class Give:
         bending these rules frees nothing, or none is known
     total : the sum of amount times weight over `least`; None without it
     weighted : the weight of each rule that may bend: the price of its give, else 1
-    plan : the best plan under the limits so bent; None without `least`
+    plan : the answer for the limits so bent, with the aim; None without `least`
     may_bend : the rules that were allowed to bend, in sheet order
-    proven : no limit came first: `alone` is complete, `least` is the least
+    proven : `alone` is complete and `least` is the least; of `plan` its own outcome tells
     """
 
     alone: dict[str, Bending | None]
@@ -89,7 +89,7 @@ def find_give(
     clashing : a clash of it; no rule outside of it can free the plan alone
     may_bend : the rules that may bend, from `bendable_rules`
     budget : the limits, shared with what came before
-    progress : told of the search for the best plan under the bent limits
+    progress : told of the search under the bent limits
 
     Notes
     -----
@@ -99,14 +99,15 @@ def find_give(
     A soft rule that is not among them still bends as far as it may, without cost here.
     """
     weighted = {r.name: _weight(r) for r in sheet.rules if r.name in may_bend}
-    proven = True
     least = plan = None
+    proven = not may_bend
     if may_bend and budget.ended_by() is None:
         least, proven = _least_bendings(sheet, may_bend, budget)
-    elif may_bend:
-        proven = False
+    if least is not None:
+        with budget.halved():
+            plan = budget.run(solve, bent(sheet, least), progress=progress)
     alone: dict[str, Bending | None] = {}
-    for name in (n for n in clashing if n in weighted):
+    for name in (name for name in clashing if name in weighted):
         if budget.ended_by() is not None:
             proven = False
             break
@@ -114,8 +115,6 @@ def find_give(
         if settled:
             alone[name] = bendings[0] if bendings else None
         proven = proven and settled
-    if least is not None:
-        plan = budget.run(solve, bent(sheet, least), progress=progress)
     return Give(
         alone=alone,
         least=least,
