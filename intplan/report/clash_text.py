@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from intplan.planning import Bending, Clash, Give, Verdict
 from intplan.report.change_words import LONGEST_RULE, algebra, limit_of, note_of
-from intplan.report.numbers import readable, value_text
+from intplan.report.numbers import brief, readable, value_text
 from intplan.report.phrases import CAUTION, ENDED, listing, title_line
 from intplan.report.tables import plan_table, table
 from intplan.report.text import no_plan_sentence, verdict
@@ -89,11 +89,11 @@ def _members(clash: Clash) -> str:
 
 def give_blocks(sheet: Sheet, give: Give) -> list[str]:
     """Return the paragraphs on what frees a clash: each rule alone, the least, its plan."""
-    lines = [bending_sentence(sheet, name, bend) for name, bend in give.alone.items()]
+    lines = [_bending_sentence(sheet, name, bend) for name, bend in give.alone.items()]
     free = [bend for bend in give.alone.values() if bend is not None]
     if give.least is not None and list(give.least) != free:
         lines.append(_least_sentence(sheet, give, give.least))
-    elif give.least is None and give.proven and tuple(give.alone) != give.may_bend:
+    elif give.least is None and give.proven and not (lines and len(give.may_bend) == 1):
         lines.append(_helpless_sentence(give))
     if not give.proven:
         lines.append("A limit came before the least give was proven.")
@@ -106,7 +106,7 @@ def give_blocks(sheet: Sheet, give: Give) -> list[str]:
     return blocks
 
 
-def bending_sentence(sheet: Sheet, name: str, bend: Bending | None) -> str:
+def _bending_sentence(sheet: Sheet, name: str, bend: Bending | None) -> str:
     """Say how far one rule would have to go by itself."""
     if bend is None:
         return f"{name} alone cannot free the plan, however far it bends."
@@ -118,7 +118,7 @@ def _way(sheet: Sheet, bend: Bending) -> str:
     limit = limit_of(sheet, bend.name, bend.side) or 0
     beyond = limit + bend.amount if bend.side == "most" else limit - bend.amount
     more = "more" if bend.side == "most" else "less"
-    step = f"{readable(bend.amount)} {more}"
+    step = f"{brief(bend.amount)} {more}"
     other = limit_of(sheet, bend.name, "least" if bend.side == "most" else "most")
     kind = "exactly" if other == limit else f"at {bend.side}"
     return f"from {kind} {readable(limit)} to {readable(beyond)} ({step})"

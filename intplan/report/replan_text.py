@@ -48,31 +48,41 @@ def opening(change: Replan) -> list[str]:
     if change.effect == "impossible":
         return _impossible(change, changes)
     if change.effect == "unbounded":
-        still = "still" if change.before.outcome == "unbounded" else "now"
-        return [f"The aim {still} has no limit, with {subject.text}.",
-                runaway_sentence(change.after)]  # fmt: skip
+        loose = subject_of([c for c in changes if c.loosened])
+        opens = f"has no limit now: {loose.does('leaves', 'leave')} it none"
+        still = "still has no limit" if change.before.outcome == "unbounded" else opens
+        return [f"The aim {still}.", runaway_sentence(change.after)]
     if change.effect == "undecided":
         does = subject.does("does", "do")
         return [f"It is not settled what {does} to the plan.", *verdict(change.after)]
     if not had_plan(change):
-        return [f"There is a plan now, with {subject.text}.", *verdict(change.after)]
+        return [_found(change, changes), *verdict(change.after)]
     return _moved(change, changes)
+
+
+def _found(change: Replan, changes: Sequence[Change]) -> str:
+    """Say why there is a best plan now where there was none."""
+    if change.before.outcome == "unbounded":
+        tight = subject_of([c for c in changes if c.tightened])
+        return f"The aim has a limit now: {tight.does('sets', 'set')} it."
+    loose = subject_of([c for c in changes if c.loosened])
+    room = f": {loose.does('makes', 'make')} room" if loose.text else ""
+    return f"There is a plan now{room}."
 
 
 def _stands(change: Replan, changes: Sequence[Change]) -> list[str]:
     """Say why the plan stands and what is proven of it."""
     met = subject_of([c for c in changes if c.tightened])
     more = subject_of([c for c in changes if c.loosened and not c.tightened])
-    reasons = []
     if change.exact_cost:
-        reasons.append(_costs(change, subject_of(changes), change.exact_cost))
-    else:
-        reasons += [f"it meets {met.text}"] if met.text else []
-        brought = "brought nothing so far" if change.after.outcome == "unfinished" else "nothing"
-        if more.text and brought == "nothing":
-            reasons.append(f"{more.does('brings', 'bring')} nothing")
-        elif more.text:
-            reasons.append(f"{more.does('has', 'have')} {brought}")
+        joined = ", but" if change.exact_cost > 0 else ", and"
+        costs = _costs(change, subject_of(changes), change.exact_cost)
+        return [f"The plan stands{joined} {costs}.", *_value_sentences(change)]
+    reasons = [f"it meets {met.text}"] if met.text else []
+    if more.text and change.after.outcome == "unfinished":
+        reasons.append(f"{more.does('has', 'have')} brought nothing so far")
+    elif more.text:
+        reasons.append(f"{more.does('brings', 'bring')} nothing")
     because = f": {', and '.join(reasons)}" if reasons else ""
     return [f"The plan stands{because}.", *_value_sentences(change)]
 
@@ -92,7 +102,7 @@ def _moved(change: Replan, changes: Sequence[Change]) -> list[str]:
     if change.before.outcome == change.after.outcome == "optimal":
         return [f"The best plan moves: {_costs(change, subject, cost)}.",
                 *_value_sentences(change)]  # fmt: skip
-    sentences = [f"The plan moves, with {subject.text}.", *_value_sentences(change)]
+    sentences = [f"The plan moves because of {subject.text}.", *_value_sentences(change)]
     if change.before.outcome != "optimal":
         sentences.append(
             f"The plan before was not proven best, so the difference is not what {subject.text}"
@@ -116,7 +126,8 @@ def _value_sentences(change: Replan) -> list[str]:
         return [f"{comes}; the best plan comes to {best}, and it is proven that none is better."]
     comes = f"It comes to {value_text(sheet, value)}{instead}"
     if after.outcome == "optimal":
-        still = "it is still proven" if change.effect == "stands" else "it is proven"
+        same = change.effect == "stands" and not change.exact_cost
+        still = "it is still proven" if same else "it is proven"
         return [f"{comes}, and {still} that no plan is better."]
     ended = [ENDED[after.ended_by]] if after.ended_by else []
     return [f"{comes}.", *ended, *open_sentences(after)[1:]]
@@ -220,7 +231,7 @@ def _bend_sentences(change: Replan) -> list[str]:
 
 
 def _limits_table(change: Replan) -> str:
-    """Return the rules that are at their limit now and were not before."""
+    """Return the rules that are at their limit now and were not before; bends are told above."""
     sheet, check = change.after.sheet, change.after.check
     if check is None or not change.at_limit:
         return ""
@@ -228,6 +239,7 @@ def _limits_table(change: Replan) -> str:
     for name in change.at_limit:
         i = sheet.rule_index[name]
         rule, state = sheet.rules[i], check.rules[i]
-        row = [name, readable(state.value), limits_phrase(rule), printable(rule.note)]
-        rows.append(row)
-    return "At their limit now, and not before\n" + table(rows, right={1})
+        if state.side is None:
+            row = [name, readable(state.value), limits_phrase(rule), printable(rule.note)]
+            rows.append(row)
+    return "At their limit now, and not before\n" + table(rows, right={1}) if rows else ""
