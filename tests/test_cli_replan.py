@@ -278,7 +278,7 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--waive", "oven", "--may-bend", "mixr"], 'did you mean "mixer"?'),
         (["--waive", "oven", "--may-bend", "loaf most"], "only rules may bend"),
         (["--waive", "oven", "--may-bend", "oven"], 'unknown rule "oven"'),
-        (["--waive", "oven", "--stay-close=-1"], "no percentage"),
+        (["--waive", "oven", "--stay-close", "101"], "no percentage"),
         (["--waive", "oven", "--stay-close", "much"], "no percentage"),
         (["--waive", "oven", "--node-limit", "0"], "no whole number from 1"),
         (["--waive", "oven", "--gap", "x"], "no percentage"),
