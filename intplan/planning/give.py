@@ -20,8 +20,8 @@ class Bending(NamedTuple):
     ----------
     name : the rule
     side : ``"least"`` or ``"most"``, the limit that is passed
-    amount : by how much, in the units in which the rule is written; of a soft rule the whole way
-        from its limit, what it may bend anyway included
+    amount : by how much, in the units in which the rule is written; of a soft rule beyond what it
+        may bend anyway
     """
 
     name: str
@@ -95,8 +95,8 @@ def find_give(
     -----
     The rules that may bend become soft without limit at their weights, and the prices are the
     only aim: the elastic form of a problem (J. W. Chinneck, Feasibility and Infeasibility in
-    Optimization: Algorithms and Computational Methods, Springer, 2008).
-    A soft rule that is not among them still bends as far as it may, without cost here.
+    Optimization: Algorithms and Computational Methods, Springer, 2008). What a soft rule may bend
+    anyway costs nothing here.
     """
     weighted = {r.name: _weight(r) for r in sheet.rules if r.name in may_bend}
     least = plan = None
@@ -129,15 +129,15 @@ def find_give(
 def bent(sheet: Sheet, bendings: Iterable[Bending]) -> Sheet:
     """Return the sheet with its limits moved by the bendings.
 
-    A soft rule keeps its limits and its price, and may bend as far as its bending goes.
+    A soft rule keeps its limits and its price, and may bend further.
     """
     rules = list(sheet.rules)
     for name, side, amount in bendings:
         i = sheet.rule_index[name]
         rule = rules[i]
         if rule.give is not None:
-            if rule.give_most is not None and rule.give_most < amount:
-                rules[i] = replace(rule, give_most=amount)
+            if rule.give_most is not None:
+                rules[i] = replace(rule, give_most=lowest(rule.give_most + amount))
         elif side == "most" and rule.most is not None:
             rules[i] = replace(rule, most=lowest(rule.most + amount), text="")
         elif rule.least is not None:
@@ -186,9 +186,8 @@ def _solve_elastic(sheet: Sheet, **limits: object) -> StandingPlan:
 
 def _elastic(sheet: Sheet, bending: Sequence[str]) -> Sheet:
     """Return the sheet with these rules soft without limit, and no aim but the prices."""
-    wanted = frozenset(bending)
-    rules = tuple(
-        replace(rule, give=_weight(rule), give_most=None) if rule.name in wanted else widest(rule)
-        for rule in sheet.rules
-    )
-    return replace(sheet, aim=Aim(), rules=rules)
+    rules = list(map(widest, sheet.rules))
+    for name in bending:
+        i = sheet.rule_index[name]
+        rules[i] = replace(rules[i], give=_weight(sheet.rules[i]))
+    return replace(sheet, aim=Aim(), rules=tuple(rules))

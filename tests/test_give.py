@@ -1,0 +1,212 @@
+"""The least give: hand-made ones, and random ones against the reference."""
+
+from dataclasses import replace
+from fractions import Fraction
+
+import numpy as np
+import pytest
+
+from intplan import Sheet, solve
+from intplan.planning.budget import Budget
+from intplan.planning.clash import clash
+from intplan.planning.give import Bending, Give, bendable_rules, bent, find_give, widest
+from intplan.sheet.model import Aim, Rule
+from tests.families import Instance, build, instance_of
+from tests.reference import INFEASIBLE as REFUSED
+from tests.reference import OPTIMAL, reference_milp
+from tests.test_clash import FAR, JOINERY, is_refused, random_clashing
+
+CARTS = """
+measure = "EUR"
+[aim]
+maximize = "3*cart + 5*sledge"
+[activities]
+cart = {}
+sledge = {}
+[rules]
+oak   = "2*cart + 3*sledge <= 20"
+fair  = "cart >= 7"
+inn   = "sledge >= 4"
+[rules.hands]
+rule = "cart + sledge <= 9"
+give = 4
+give_most = 1
+"""
+
+
+def give_of(text: str, **options) -> Give:
+    return clash(Sheet.parse(text), **options).give
+
+
+# ------------------------------------------------------------------------------ by hand
+
+
+def test_the_joinery_lacks_four_of_oak():
+    # By hand: 184 of 180 oak; a chair fewer saves 4, a table fewer 11: one of either is enough.
+    give = give_of(JOINERY)
+    assert give.alone == {
+        "oak": Bending("oak", "most", 4),
+        "inn": Bending("inn", "least", 1),
+        "school": Bending("school", "least", 1),
+    }
+    assert give.total == 1 and give.proven
+    assert len(give.least) == 1 and give.least[0] in give.alone.values()
+    assert give.plan.outcome == "optimal"
+    assert give.may_bend == ("saw", "bench", "oak", "inn", "school", "shop")
+    assert give.weighted == dict.fromkeys(give.may_bend, 1)
+
+
+def test_the_plan_under_the_bent_limits_follows_the_aim():
+    # Oak at 184 leaves 24 chairs and 8 tables as they are promised; they take 28 of 30 at the saw,
+    # and 8 shelves the rest.
+    give = give_of(JOINERY, may_bend=["oak"])
+    assert give.least == (Bending("oak", "most", 4),)
+    assert give.plan.plan == {"chair": 24, "table": 8, "shelf": 8}
+    assert give.plan.value == 40 * 24 + 90 * 8 + 25 * 8
+
+
+def test_only_what_may_bend_does():
+    give = give_of(JOINERY, may_bend=["shop", "saw"])
+    assert (give.alone, give.least, give.total, give.plan) == ({}, None, None, None)
+    assert give.proven and give.may_bend == ("saw", "shop")
+    nothing = give_of(JOINERY, may_bend=[])
+    assert nothing.least is None and nothing.proven
+    assert bendable_rules(Sheet.parse(JOINERY), "oak") == ("oak",)
+
+
+def test_a_soft_rule_bends_further_at_its_price():
+    # By hand: 7 carts and 4 sledges take 26 of 20 oak and 11 of 9 hands, one of which may bend
+    # anyway. Two sledges fewer take 20 oak and 9 hands; a cart saves less oak.
+    give = give_of(CARTS)
+    assert give.total == 2 and give.proven
+    assert give.least == (Bending("inn", "least", 2),)
+    assert give.weighted == {"oak": 1, "fair": 1, "inn": 1, "hands": 4}
+    assert give.plan.plan == {"cart": 7, "sledge": 2}
+    assert give.plan.bends == {}
+    oak = give_of(CARTS, may_bend=["oak", "hands"])
+    assert oak.least == (Bending("oak", "most", 6), Bending("hands", "most", 1))
+    assert oak.total == 6 + 4
+    # The plan bends hands by two in all, which costs twice its price.
+    assert oak.plan.plan == {"cart": 7, "sledge": 4} and oak.plan.bends == {"hands": 2}
+    assert oak.plan.value == 3 * 7 + 5 * 4 - 2 * 4
+
+
+def test_two_clashes_need_a_give_each():
+    text = """
+    [activities]
+    a = { most = 3 }
+    b = { most = 3 }
+    [rules]
+    more_a = "a >= 5"
+    more_b = "2*b >= 9"
+    """
+    give = give_of(text)
+    # One clash is named; bending its rule alone frees nothing, both rules must give.
+    assert list(give.alone.values()) == [None]
+    assert give.least == (Bending("more_a", "least", 2), Bending("more_b", "least", 3))
+    assert give.total == 5
+
+
+def test_an_equality_bends_to_the_nearer_side():
+    give = give_of('[activities]\na = {}\n[rules]\nodd = "3*a = 7"')
+    assert give.least == (Bending("odd", "least", 1),)
+    give = give_of('[activities]\na = {}\n[rules]\nodd = "3*a = 8"')
+    assert give.alone == {"odd": Bending("odd", "most", 1)}
+
+
+def test_gives_are_exact():
+    give = give_of('[activities]\na = { most = 1 }\n[rules]\nmore = "a/7 >= 1/3"')
+    assert give.total == Fraction(4, 21) and give.least[0].amount == Fraction(4, 21)
+
+
+def test_limits_are_moved_outward():
+    sheet = Sheet.parse(CARTS)
+    moved = bent(sheet, [Bending("oak", "most", Fraction(1, 2)), Bending("fair", "least", 3)])
+    assert moved.rules[0].most == Fraction(41, 2) and moved.rules[1].least == 4
+    assert bent(sheet, [Bending("hands", "most", 2)]).rules[3].give_most == 3
+    assert moved.rules[2:] == sheet.rules[2:] and sheet.rules[0].most == 20
+
+
+@pytest.mark.parametrize(("give_most", "limits"), [(2, (3, 11)), (None, (None, None)), (0, (5, 9))])
+def test_the_widest_limits_of_a_soft_rule(give_most, limits):
+    rule = Rule("soft", ((0, 1),), 5, 9, give=1, give_most=give_most)
+    wide = widest(rule)
+    assert (wide.least, wide.most) == limits and wide.give is None
+    firm = Rule("firm", ((0, 1),), 5, 9)
+    assert widest(firm) is firm
+
+
+def test_a_limit_leaves_an_honest_give():
+    sheet = Sheet.parse(JOINERY)
+    give = find_give(sheet, ("oak", "inn", "school"), ("oak", "inn"), Budget(stop=lambda: True))
+    assert (give.alone, give.least, give.total, give.plan, give.proven) == (
+        {},
+        None,
+        None,
+        None,
+        False,
+    )
+
+
+# ------------------------------------------------------------------------------ at random
+
+
+def elastic(sheet: Sheet, weights: dict[str, int], far: int = FAR) -> Instance:
+    """Return arrays in which these rules bend both ways at their weights, for the reference."""
+    firm = instance_of(replace(sheet, aim=Aim(), rules=tuple(map(widest, sheet.rules))), "", "")
+    rules = [i for i, rule in enumerate(sheet.rules) if rule.name in weights]
+    ways = np.zeros((len(sheet.rules), 2 * len(rules)))
+    for k, i in enumerate(rules):
+        ways[i, 2 * k : 2 * k + 2] = 1, -1
+    prices = np.repeat([weights[sheet.rules[i].name] for i in rules], 2)
+    activities = len(sheet.activities)
+    return build(
+        "", "", np.r_[np.zeros(activities), prices], np.hstack([firm.rows, ways]),
+        firm.row_least, firm.row_most,
+        np.r_[np.maximum(firm.least, -far), np.zeros(len(prices))],
+        np.r_[np.minimum(firm.most, far), np.full(len(prices), np.inf)],
+        np.r_[firm.whole, np.zeros(len(prices), bool)],
+    )  # fmt: skip
+
+
+def least_by_reference(sheet: Sheet, weights: dict[str, int]) -> float | None:
+    """Ask the reference, again with other ends of the activities where it does not know."""
+    for far in (FAR, FAR // 2, 2 * FAR):
+        answer = reference_milp(elastic(sheet, weights, far))
+        if answer.status in (OPTIMAL, REFUSED):
+            return answer.value
+    raise AssertionError("the reference does not know")
+
+
+def agrees(found: float | Fraction | None, expected: float | None) -> bool:
+    if found is None or expected is None:
+        return found is None and expected is None
+    return float(found) == pytest.approx(expected, abs=1e-6)
+
+
+def test_every_give_is_the_least():
+    gives = 0
+    for seed in range(100):
+        sheet = random_clashing(seed)
+        may_bend = [r.name for r in sheet.rules if (seed + len(r.terms)) % 5]
+        found = clash(sheet, may_bend=may_bend)
+        if found is None:
+            continue
+        give = found.give
+        weights = {r.name: r.give or 1 for r in sheet.rules if r.name in may_bend}
+        assert give.proven and give.weighted == weights and give.may_bend == tuple(weights)
+        assert agrees(give.total, least_by_reference(sheet, weights)), seed
+        assert set(give.alone) == set(found.names) & set(weights)
+        for name, bending in give.alone.items():
+            amount = None if bending is None else bending.amount * weights[name]
+            assert agrees(amount, least_by_reference(sheet, {name: weights[name]})), (seed, name)
+        for name in set(weights) - set(found.names):
+            assert is_refused(elastic(sheet, {name: 1}))
+        if give.least is not None:
+            gives += 1
+            assert give.total == sum(b.amount * weights[b.name] for b in give.least)
+            moved = bent(sheet, give.least)
+            assert give.plan.value == solve(moved).value
+            amounts = list(give.plan.exact_plan.values())
+            assert moved.check(amounts).good and not sheet.check(amounts).good
+    assert gives > 40
