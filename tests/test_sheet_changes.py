@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 import random
+from dataclasses import fields
 from fractions import Fraction
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
 from intplan.errors import SheetError
-from intplan.sheet import Rule, Sheet
+from intplan.sheet import Problem, Rule, Sheet
 from intplan.sheet.changes import Changes, change_sheet, read_addition, read_setting
 from tests.generators import random_problem
 
@@ -472,3 +474,53 @@ def test_limits_that_tighten_only_shut_plans_out_and_looser_ones_only_let_in(see
             assert changes.tightened == (rule.name,)
         if new and not old:
             assert changes.loosened == (rule.name,)
+
+
+def drawn_changes(rng: random.Random, sheet: Sheet) -> Changes:
+    """Return several changes of a sheet at once, drawn at random."""
+    rules = rng.sample(range(len(sheet.rules)), min(2, len(sheet.rules)))
+    waive = [sheet.rules[i].name for i in rules[:1] if rng.random() < 0.5]
+    changed: dict[str, object] = {}
+    for rule in (sheet.rules[i] for i in rules[1:]):
+        if rule.most is not None:
+            changed[rule.name] = (None, rule.most + rng.choice([Fraction(1, 3), 2, 5]))
+    for activity in rng.sample(sheet.activities, min(2, len(sheet.activities))):
+        if activity.most is not None:
+            if rng.random() < 0.3:
+                waive.append(f"{activity.name} most")
+            else:
+                changed[f"{activity.name} most"] = activity.most + rng.randint(0, 3)
+    add: dict[str, object] = {}
+    names = [activity.name for activity in sheet.activities]
+    if rng.random() < 0.7:
+        add["fresh"] = f"0.5*{rng.choice(names)} - {rng.choice(names)}/3 <= {rng.randint(1, 9)}"
+    if rng.random() < 0.3:
+        add["bending"] = {"rule": f"{rng.choice(names)} <= 2", "give": 3, "give_most": 1}
+    if waive and waive[0] in sheet.rule_index and rng.random() < 0.5:
+        add[waive[0]] = f"{rng.choice(names)} >= -4"
+    return change_sheet(sheet, add=add, waive=waive, set=changed)
+
+
+@pytest.mark.parametrize("seed", range(120))
+def test_the_engine_takes_a_changed_sheet_as_if_it_were_read_anew(seed):
+    rng = random.Random(seed)
+    sheet = Sheet.from_arrays(**random_problem(seed).arrays())
+    if seed % 3 == 0:
+        first = sheet.activities[0].name
+        sheet = change_sheet(sheet, add={"soft": {"rule": f"{first} <= 1", "give": 2}}).sheet
+    for _ in range(3):
+        sheet.problem()
+        sheet = drawn_changes(rng, sheet).sheet
+        if "fresh" in sheet.rule_index:
+            sheet = change_sheet(sheet, waive=["fresh"]).sheet
+        if "bending" in sheet.rule_index:
+            sheet = change_sheet(sheet, waive=["bending"]).sheet
+        anew = Sheet.from_record(sheet.to_record())
+        assert anew == sheet
+        for field in fields(Problem):
+            ours, read = (getattr(s.problem(), field.name) for s in (sheet, anew))
+            if isinstance(read, np.ndarray):
+                assert ours.dtype == read.dtype
+                np.testing.assert_array_equal(ours, read, field.name)
+            else:
+                assert ours == read, field.name
