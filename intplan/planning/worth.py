@@ -170,8 +170,14 @@ class _Gain(NamedTuple):
         """Whether the gain is known, or known to be without limit."""
         return self.runs_away or self.at_least == self.at_most
 
+    def narrowed(self, later: _Gain) -> _Gain:
+        """Return what is known after another search for the same gain."""
+        ends = [gain.at_most for gain in (self, later) if gain.at_most is not None]
+        return later._replace(
+            at_least=max(self.at_least, later.at_least), at_most=min(ends, default=None)
+        )
 
-NOTHING = _Gain(0, 0)
+
 UNKNOWN = _Gain(0, None)
 
 
@@ -264,13 +270,13 @@ class _Weighing:
         """Fill in the gains: the easy ones first, then those that took more than a few nodes."""
         tasks = [(item, "waived") for item in items]
         tasks += [(item, side) for item in items for side in item.limits]
-        self.round(tasks, FIRST_NODES, fair=False)
-        hard = [(item, task) for item, task in tasks if item.gain(task).ended_by == "nodes"]
+        self.round(tasks, FIRST_NODES)
+        hard = [task for task in tasks if task[0].gain(task[1]).ended_by in ("nodes", "time")]
         unlimited = self.budget.deadline is None and self.budget.nodes is None
-        self.round(hard, LAST_NODES if unlimited else None, fair=True)
+        self.round(hard, LAST_NODES if unlimited else None)
 
-    def round(self, tasks: list[tuple[_Item, str]], most_nodes: int | None, fair: bool) -> None:
-        """Look once at each figure, within as many nodes, and a fair share of the time or all."""
+    def round(self, tasks: list[tuple[_Item, str]], most_nodes: int | None) -> None:
+        """Look once at each figure, within so many nodes and a fair share of the time."""
         for done, (item, task) in enumerate(tasks):
             if self.progress is not None:
                 self.progress(done, len(tasks))
@@ -280,9 +286,9 @@ class _Weighing:
             if ended_by is not None:
                 self.ended_by = ended_by
                 return
-            gain = self.gain(item.change(task), most_nodes, len(tasks) - done if fair else 1)
+            gain = self.gain(item.change(task), most_nodes, len(tasks) - done)
             self.ended_by = gain.ended_by or self.ended_by
-            item.gains[task] = gain
+            item.gains[task] = item.gain(task).narrowed(gain)
 
     def gain(self, change: dict[str, Any], most_nodes: int | None, left: int) -> _Gain:
         """Return what is known of the gain by a change, given one of `left` shares of the time."""
