@@ -35,6 +35,7 @@ def environment(tmp_path, monkeypatch):
 def test_help_waits_for_no_numerical_library(environment):
     code = (
         "import sys; from intplan.cli import run; run(['--help']); run(['solve', '--help']); "
+        "run(['replan', '--help']); "
         "print([m for m in ('numpy', 'scipy', 'networkx') if m in sys.modules])"
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)

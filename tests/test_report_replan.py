@@ -2,6 +2,7 @@
 
 import dataclasses
 import json
+import re
 from fractions import Fraction
 
 import pytest
@@ -308,7 +309,7 @@ def test_staying_close_is_told():
     best = solve(change.changes.sheet).value
     assert change.after.value < best
     assert first_line(text) == (
-        f"The plan moves: c costs {395 - best} EUR, and staying close takes another "
+        f"The plan moves: c costs {395 - best} EUR, and staying close gives up "
         f"{best - change.after.value} EUR. It comes to {change.after.value} EUR instead of "
         f"395 EUR; the best plan comes to {best} EUR, and it is proven that none is better."
     )
@@ -371,7 +372,7 @@ def test_bounds_at_0_share_a_line():
     assert "\n  and that b cannot be below 0\n" in text
     assert "sum alone would have to go from exactly 17 to 18 (1 more)." in text
     assert "c alone would have to go from at least 8 to 7 (1 less)." in text
-    assert "The least give: " in text
+    assert re.search(r"^The least give is that of (sum|c)\.$", text, re.MULTILINE)
 
 
 def test_a_rule_that_clashes_by_itself():

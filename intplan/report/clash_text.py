@@ -126,13 +126,15 @@ def _way(sheet: Sheet, bend: Bending) -> str:
 
 def _least_sentence(sheet: Sheet, give: Give, least: tuple[Bending, ...]) -> str:
     """Name the bendings of the least sum, and how they were weighed against each other."""
+    known = "The least give" if give.proven else "The least give found"
+    if len(least) == 1 and give.alone.get(least[0].name) == least[0]:
+        return f"{known} is that of {least[0].name}."
     ways = [f"{bend.name} {_way(sheet, bend)}" for bend in least]
     priced = {name for name, weight in give.weighted.items() if weight != 1}
     if priced & {bend.name for bend in least}:
         total = f", {value_text(sheet, give.total or 0)} at the prices of the sheet"
     else:
         total = "" if len(least) == 1 else f", {readable(give.total or 0)} in all"
-    known = "The least give" if give.proven else "The least give found"
     return f"{known}: {listing(ways)}{total}."
 
 

@@ -97,7 +97,7 @@ def _moved(change: Replan, changes: Sequence[Change]) -> list[str]:
     if change.before.outcome == "optimal" and close:
         price = value_text(change.after.sheet, close)
         costs = _costs(change, subject, cost - close)
-        return [f"The plan moves: {costs}, and staying close takes another {price}.",
+        return [f"The plan moves: {costs}, and staying close gives up {price}.",
                 *_value_sentences(change)]  # fmt: skip
     if change.before.outcome == change.after.outcome == "optimal":
         return [f"The best plan moves: {_costs(change, subject, cost)}.",
