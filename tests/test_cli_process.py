@@ -118,6 +118,29 @@ def test_the_first_interrupt_gives_what_is_known(number, environment):
     assert "\n" not in program.shown and program.shown.endswith("\r\x1b[K")
 
 
+def test_an_interrupted_re_plan_gives_what_is_known(environment):
+    solving = [*PROGRAM, "solve", "even.toml", "--node-limit", "5", "--save", "s"]
+    assert subprocess.run(solving, capture_output=True, timeout=PATIENCE).returncode == 3
+    program = Watched("replan", "s", "--waive", "kind0", "--json", "--save", "t.json")
+    program.wait_for(r"; nothing can fall below \d+\.")
+    program.process.send_signal(signal.SIGINT)
+    status, out = program.finish()
+    data = json.loads(out)
+    assert (status, data["outcome"], data["ended_by"]) == (3, "unfinished", "interrupt")
+    assert load_standing("t.json").bound == data["bound"]
+    assert "\n" not in program.shown and program.shown.endswith("\r\x1b[K")
+
+
+def test_an_interrupted_search_for_a_clash_is_not_settled(environment):
+    program = Watched("clash", "even.toml", "--json")
+    program.wait_for("Looking for what clashes\\.")
+    program.process.send_signal(signal.SIGINT)
+    status, out = program.finish()
+    data = json.loads(out)
+    assert (status, data["outcome"], data["clash"]) == (3, "undecided", None)
+    assert "\n" not in program.shown and program.shown.endswith("\r\x1b[K")
+
+
 def test_quiet_shows_no_status(environment):
     program = Watched("solve", "even.toml", "--quiet", "--time-limit", "1")
     status, out = program.finish()

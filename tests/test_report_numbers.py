@@ -5,7 +5,7 @@ from fractions import Fraction
 import pytest
 
 from intplan.planning.numbers import has_short_decimal, nearest
-from intplan.report.numbers import amount, bound_text, readable, rounded_outward
+from intplan.report.numbers import amount, bound_text, brief, readable, rounded_outward
 from intplan.sheet import Sheet
 from tests.bakery import BAKERY, SOFT
 
@@ -30,6 +30,20 @@ from tests.bakery import BAKERY, SOFT
 )
 def test_readable(number, text):
     assert readable(number) == text
+
+
+@pytest.mark.parametrize(
+    ("number", "text"),
+    [
+        (Fraction(-5, 2), "-2.5"),
+        (12345, "12,345"),
+        (Fraction(-1, 3), "about -0.333333"),
+        (Fraction(10**30 + 1, 10**30), "about 1"),
+        (10**30, "1e30"),
+    ],
+)
+def test_brief(number, text):
+    assert brief(number) == text
 
 
 def test_readable_beyond_what_str_takes():
