@@ -347,11 +347,12 @@ def test_exit_status_of_clash(arguments, status, outcome, call):
 
 
 def test_clash(call):
-    status, out, err = call("clash", "infeasible.toml")
+    Path("odd.toml").write_text(INFEASIBLE.replace("2*a", "3*a"))
+    status, out, err = call("clash", "odd.toml")
     assert (status, err) == (1, "")
     assert out.startswith("No plan in whole units can meet every rule and bound; that is proven.")
     assert "odd alone would have to go from exactly 5 to 6 (1 more)." in out
-    data = json.loads(call("clash", "infeasible.toml", "--json")[1])
+    data = json.loads(call("clash", "odd.toml", "--json")[1])
     assert (data["clash"], data["needs_whole"], data["smallest"]) == (["odd"], True, True)
     assert data["give"] == {"odd": {"side": "most", "amount": 1}}
 
@@ -408,6 +409,15 @@ def test_worth_is_the_cost_that_waiving_gives_back(call):
     for name, entry in json.loads(out)["worth"].items():
         _, out, _ = call("replan", "crates.json", "--waive", name, "--json", "--quiet")
         assert Fraction(str(entry["waived"])) == -Fraction(str(json.loads(out)["cost"])), name
+
+
+def test_worth_weighs_what_keeps_activities_from_falling_below_0_where_asked(call):
+    plain = json.loads(call("worth", "crates.json", "--json")[1])
+    whole = json.loads(call("worth", "crates.json", "--below-zero", "--json")[1])
+    assert plain["floors"] and not whole["floors"]
+    assert set(whole["worth"]) - set(plain["worth"]) == set(plain["floors"])
+    out = call("worth", "crates.json")[1]
+    assert f"Not weighed: {len(plain['floors'])} bound" in out and "`--below-zero`" in out
 
 
 def test_worth_under_a_limit_leaves_figures_open(call):

@@ -149,6 +149,11 @@ def clash_command(
 
 @group.command("worth", short_help="What each rule of a standing plan costs.")
 @click.argument("standing_file", metavar="STANDING")
+@click.option(
+    "--below-zero",
+    is_flag=True,
+    help="Weigh what keeps activities from falling below 0 as well; it takes longer.",
+)
 @time_option
 @node_option
 @output_options
@@ -156,6 +161,7 @@ def clash_command(
 def worth_command(
     session: Session,
     standing_file: str,
+    below_zero: bool,
     time_limit: float | None,
     node_limit: int | None,
     as_json: bool,
@@ -182,6 +188,7 @@ def worth_command(
     with session.interrupts.softened() as stop:
         found = worth(
             standing,
+            below_zero=below_zero,
             time_limit=time_limit,
             node_limit=node_limit,
             progress=progress,

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 from intplan.planning import Bending, Clash, Give, Verdict
 from intplan.report.change_words import LONGEST_RULE, algebra, limit_of, note_of
 from intplan.report.numbers import brief, readable, value_text
@@ -39,7 +41,9 @@ def clash_text(sheet: Sheet, found: Verdict) -> str:
 def clash_blocks(clash: Clash) -> list[str]:
     """Return the paragraphs on a clash: its rules and bounds, and the give that frees them."""
     blocks = [f"{_clash_sentences(clash)}\n{_members(clash)}"]
-    return blocks if clash.give is None else [*blocks, *give_blocks(clash.sheet, clash.give)]
+    if clash.give is not None:
+        blocks += give_blocks(clash.sheet, clash.give, clash.names)
+    return blocks
 
 
 def _clash_sentences(clash: Clash) -> str:
@@ -87,12 +91,23 @@ def _members(clash: Clash) -> str:
 # ---------------------------------------------------------------------------------- give
 
 
-def give_blocks(sheet: Sheet, give: Give) -> list[str]:
-    """Return the paragraphs on what frees a clash: each rule alone, the least, its plan."""
+def give_blocks(sheet: Sheet, give: Give, clashing: Sequence[str]) -> list[str]:
+    """Return the paragraphs on what frees a clash: each rule alone, the least, its plan.
+
+    Parameters
+    ----------
+    sheet : in which it was found
+    give : what frees it
+    clashing : the rules and bounds of the clash
+    """
     lines = [_bending_sentence(sheet, name, bend) for name, bend in give.alone.items()]
     free = [bend for bend in give.alone.values() if bend is not None]
     if give.least is not None and list(give.least) != free:
         lines.append(_least_sentence(sheet, give, give.least))
+        beyond = [bend.name for bend in give.least if bend.name not in clashing]
+        if beyond:
+            stand = "stands" if len(beyond) == 1 else "stand"
+            lines.append(f"Beyond this clash {listing(beyond)} {stand} in the way too.")
     elif give.least is None and give.proven and not (lines and len(give.may_bend) == 1):
         lines.append(_helpless_sentence(give))
     if not give.proven:

@@ -165,6 +165,7 @@ def worth_data(table: WorthTable) -> Data:
     data |= exact_numbers(value=standing.exact_value)
     data["worth"] = {entry.name: _worth(entry) for entry in table.entries}
     data["others"] = list(table.others)
+    data["floors"] = list(table.floors)
     return data | warnings_data(standing.sheet.warnings)
 
 

@@ -35,6 +35,13 @@ def worth_text(found: WorthTable) -> str:
     idle = [entry.name for entry in found.entries if _worthless(entry)] + list(found.others)
     if idle:
         blocks.append(_idle_sentence(idle, bool(telling)))
+    if found.floors:
+        bounds = count(len(found.floors), "bound")
+        keep = "that keeps" if len(found.floors) == 1 else "that keep"
+        blocks.append(
+            f"Not weighed: {bounds} {keep} activities from falling below 0; `--below-zero` "
+            "weighs them too."
+        )
     if found.ended_by:
         blocks.append(ENDED[found.ended_by])
     return "\n\n".join([*blocks, CAUTION])
