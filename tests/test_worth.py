@@ -88,10 +88,13 @@ def test_every_figure_is_that_of_a_fresh_solve(seed):
             worth(standing)
         return
     record, value = sheet.to_record(), standing.exact_value
-    table = worth(standing, node_limit=1500)
+    below_zero = seed % 3 == 0
+    table = worth(standing, below_zero=below_zero, node_limit=1500)
     settled = check_against_fresh(standing, table)
     assert table.ended_by or settled >= 1 or not table.entries
-    named = [entry.name for entry in table] + list(table.others)
+    named = [entry.name for entry in table] + list(table.others) + list(table.floors)
+    assert all(limits_of(sheet, name) == (0, None) for name in table.floors)
+    assert not (below_zero and table.floors)
     bounds = [f"{a.name} {side}" for a in sheet.activities for side in ("least", "most")]
     written = [name for name in bounds if limits_of(sheet, name) != (None, None)]
     assert sorted(named) == sorted([*sheet.rule_index, *written])
@@ -254,10 +257,23 @@ def test_a_soft_rule_that_bends_without_limit_costs_its_price():
 
 def test_rules_that_cost_nothing_gain_nothing():
     text = TABLES + 'idle = "chair + table <= 1000"\nnever = "chair - table >= -1000"\n'
-    table = worth(intplan.solve(Sheet.parse(text)))
+    table = worth(intplan.solve(Sheet.parse(text)), below_zero=True)
     gains = {entry.name: (entry.waived, entry.unit) for entry in table}
     for name in ("idle", "never", "chair least"):
         assert name in table.others or gains[name] == (0, 0)
+
+
+def test_what_keeps_an_activity_from_falling_below_zero_is_weighed_if_wanted():
+    standing = intplan.solve(Sheet.parse(BAKERY))
+    table = worth(standing)
+    assert table.floors == ("loaf least", "overtime least")
+    assert "roll_tray least" in [entry.name for entry in table]  # at 20, which somebody wanted
+    more = worth(standing, below_zero=True)
+    assert more.floors == ()
+    assert {entry.name for entry in more} == {entry.name for entry in table} | set(table.floors)
+    assert check_against_fresh(standing, more) > check_against_fresh(standing, table)
+    same = {entry.name: entry for entry in more}
+    assert all(same[entry.name] == entry for entry in table)
 
 
 def test_without_an_aim_nothing_costs_anything():

@@ -24,6 +24,7 @@ from intplan.sheet.numbers import Number, lowest
 Progress = Callable[[int, int], None]
 
 SIDES: tuple[Side, Side] = ("least", "most")
+FLOOR: dict[Side, Number] = {"least": 0}
 FIRST_NODES = 500  # nodes for a figure; one that takes more waits until the others are settled
 LAST_NODES = 20_000  # nodes for such a figure where no limit is given: some would never end
 NO_OPTIMUM = {
@@ -75,6 +76,7 @@ class WorthTable:
     standing : the plan
     entries : what the proof makes use of, the costliest first
     others : the names of rules and bounds that the proof does not use: they cost nothing
+    floors : the names of bounds that keep an activity from falling below 0, and were left out
     ended_by : what left figures open: ``time``, ``nodes``, ``interrupt`` or ``range``; None where
         all are settled
     """
@@ -82,6 +84,7 @@ class WorthTable:
     standing: StandingPlan
     entries: tuple[Worth, ...]
     others: tuple[str, ...]
+    floors: tuple[str, ...]
     ended_by: str | None
 
     def __iter__(self) -> Iterator[Worth]:
@@ -91,6 +94,7 @@ class WorthTable:
 def worth(
     standing: StandingPlan,
     *,
+    below_zero: bool = False,
     time_limit: float | None = None,
     node_limit: int | None = None,
     progress: Progress | None = None,
@@ -101,6 +105,8 @@ def worth(
     Parameters
     ----------
     standing : a plan that is proven optimal; it stays as it is
+    below_zero : whether to weigh what keeps an activity from falling below 0 as well: a bound that
+        few planners could do without, and few searches get through without
     time_limit, node_limit : seconds and nodes for all searches together; with neither, a figure
         is left open after `LAST_NODES` nodes, since a sheet without one of its bounds may be one
         that no search gets through
@@ -128,16 +134,20 @@ def worth(
         raise IntplanError(f"only a plan that is proven optimal tells what its rules cost; {why}")
     budget = Budget(time_limit, node_limit, stop)
     told = support(standing) if standing.sheet.problem().exact_cost else set()
-    limits = list(_limits_of(standing.sheet))
-    items = [_Item(name, sides) for name, sides in limits if sides and name in told]
+    items, others, floors = [], [], []
+    for name, limits in _limits_of(standing.sheet):
+        if not limits or name not in told:
+            others.append(name)
+        elif limits == FLOOR and name.endswith(" least") and not below_zero:
+            floors.append(name)
+        else:
+            items.append(_Item(name, limits))
     weighing = _Weighing(standing, budget, progress)
     weighing.weigh(items)
     prices = relaxation_prices(standing.sheet, stop)
     entries = sorted((item.worth(prices) for item in items), key=_rank)
-    weighed = {item.name for item in items}
-    others = tuple(name for name, _ in limits if name not in weighed)
-    open_ones = any(entry.unsettled for entry in entries)
-    return WorthTable(standing, tuple(entries), others, weighing.ended_by if open_ones else None)
+    ended_by = weighing.ended_by if any(entry.unsettled for entry in entries) else None
+    return WorthTable(standing, tuple(entries), tuple(others), ended_by, tuple(floors))
 
 
 def _limits_of(sheet: Sheet) -> Iterator[tuple[str, dict[Side, Number]]]:
