@@ -9,7 +9,15 @@ import pytest
 from intplan import Sheet, solve
 from intplan.planning.budget import Budget
 from intplan.planning.clash import clash
-from intplan.planning.give import Bending, Give, bendable_rules, bent, find_give, widest
+from intplan.planning.give import (
+    Bending,
+    Give,
+    _step,
+    bendable_rules,
+    bent,
+    find_give,
+    widest,
+)
 from intplan.sheet.model import Aim, Rule
 from tests.families import Instance, build, instance_of
 from tests.reference import INFEASIBLE as REFUSED
@@ -210,3 +218,25 @@ def test_every_give_is_the_least():
             amounts = list(give.plan.exact_plan.values())
             assert moved.check(amounts).good and not sheet.check(amounts).good
     assert gives > 40
+
+
+@pytest.mark.parametrize(
+    ("rule", "step"),
+    [
+        ("0.5*a + 0.25*b <= 16", Fraction(1, 4)),
+        ("6*a - 10*b >= 4", 2),
+        ("6*a - 10*b >= 5", None),
+        ("2 <= 2*a + 4*b <= 7", None),
+        ("2*a + oil <= 4", None),
+    ],
+)
+def test_rules_in_whole_activities_bend_in_steps(rule, step):
+    sheet = Sheet.parse(
+        "[activities]\na = {}\nb = {}\noil = { whole = false }\n[rules]\n" + f'r = "{rule}"'
+    )
+    assert _step(sheet, sheet.rules[0]) == step
+
+
+def test_names_of_bends_are_new():
+    text = '[activities]\n"bend[0]" = { most = 3 }\n[rules]\n"bend[1]" = "bend[0] >= 5"'
+    assert give_of(text).total == 2

@@ -198,23 +198,18 @@ def find_clash(
     """
     work = _Filter(standing, budget, last, known)
     with budget.halved():
+        complete = work.run()
+    give = find_give(sheet, work.names, may_bend, budget, progress)
+    if not complete:
         work.run()
-    needs_whole = _needs_whole(sheet, work.members, budget)
-    names = tuple(name for name in member_names(sheet) if name in work.members)
-    give = find_give(sheet, names, may_bend, budget, progress)
-    activities = [activity.name for activity in sheet.activities]
-    witnesses = {
-        name: dict(zip(activities, work.witnesses[name], strict=True))
-        for name in names
-        if name in work.witnesses
-    }
+    alone = {name: bending for name, bending in give.alone.items() if name in work.members}
     return Clash(
         sheet=sheet,
-        names=names,
-        needs_whole=needs_whole,
+        names=work.names,
+        needs_whole=_needs_whole(sheet, work.members, budget),
         smallest=work.smallest,
-        witnesses=witnesses,
-        give=give,
+        witnesses={name: work.witness(name) for name in work.names if name in work.witnesses},
+        give=replace(give, alone=alone),
     )
 
 
@@ -303,12 +298,22 @@ class _Filter:
         self.members = set(names) & support(standing)
 
     @property
+    def names(self) -> tuple[str, ...]:
+        """The members in the order of the sheet."""
+        return tuple(name for name in member_names(self.sheet) if name in self.members)
+
+    @property
     def smallest(self) -> bool:
         """Whether every member has a witness."""
         return len(self.witnesses) == len(self.members)
 
-    def run(self) -> None:
-        """Leave out one member after the other, until none can be or a limit is reached.
+    def witness(self, name: str) -> dict[str, Number]:
+        """Return the amounts that meet all members but this one, by activity."""
+        pairs = zip(self.sheet.activities, self.witnesses[name], strict=True)
+        return {activity.name: amount for activity, amount in pairs}
+
+    def run(self) -> bool:
+        """Leave out one member after the other; false where a limit came first.
 
         A test that takes long is left for later: it is easier once the set is smaller.
         """
@@ -319,12 +324,13 @@ class _Filter:
                 if name not in self.members or name in self.witnesses:
                     continue
                 if self.budget.ended_by() is not None:
-                    return
+                    return False
                 self._try_without(name, most_nodes)
             if len(self.members) == before:
                 if most_nodes is None:
-                    return
+                    return True
                 most_nodes = None
+        return True
 
     def _try_without(self, name: str, most_nodes: int | None) -> None:
         """Drop a member if no plan meets the others, else keep the plan that does."""

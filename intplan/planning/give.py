@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+import math
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
+from fractions import Fraction
+from itertools import count
 from typing import NamedTuple
 
 from intplan.errors import IntplanError, excerpt, unknown
 from intplan.planning.budget import Budget
 from intplan.planning.standing import Progress, StandingPlan, solve
-from intplan.sheet import Aim, Rule, Sheet
+from intplan.sheet import Activity, Aim, Rule, Sheet
+from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number, lowest
 
 
@@ -99,19 +103,21 @@ def find_give(
     anyway costs nothing here.
     """
     weighted = {r.name: _weight(r) for r in sheet.rules if r.name in may_bend}
+    blamed = tuple(name for name in clashing if name in weighted)
     least = plan = None
-    proven = not may_bend
-    if may_bend and budget.ended_by() is None:
-        least, proven = _least_bendings(sheet, may_bend, budget)
+    proven = not blamed
+    if blamed and budget.ended_by() is None:
+        with budget.halved():
+            least, proven = _least_bendings(sheet, may_bend, blamed, budget)
     if least is not None:
         with budget.halved():
             plan = budget.run(solve, bent(sheet, least), progress=progress)
     alone: dict[str, Bending | None] = {}
-    for name in (name for name in clashing if name in weighted):
+    for name in blamed:
         if budget.ended_by() is not None:
             proven = False
             break
-        bendings, settled = _least_bendings(sheet, (name,), budget)
+        bendings, settled = _least_bendings(sheet, (name,), (name,), budget)
         if settled:
             alone[name] = bendings[0] if bendings else None
         proven = proven and settled
@@ -161,22 +167,22 @@ def _weight(rule: Rule) -> Number:
 
 
 def _least_bendings(
-    sheet: Sheet, bending: Sequence[str], budget: Budget
+    sheet: Sheet, bending: Sequence[str], blamed: Sequence[str], budget: Budget
 ) -> tuple[tuple[Bending, ...] | None, bool]:
     """Return the least bendings of these rules that leave a plan (None: there are none).
 
     The second entry tells whether that is proven.
     """
-    freed = budget.run(_solve_elastic, _elastic(sheet, bending))
+    freed = budget.run(_solve_elastic, _elastic(sheet, bending, blamed))
     settled = freed.outcome in ("optimal", "infeasible")
-    if freed.check is None:
+    if freed.result.plan is None:
         return None, settled
-    found = tuple(
-        Bending(rule.name, rule.side, rule.bend)
-        for rule in freed.check.rules
-        if rule.bend and rule.side is not None
-    )
-    return found, settled
+    found = []
+    for rule in map(widest, sheet.rules):
+        check = check_rule(rule, sheet.rule_value(rule, freed.result.plan))
+        if check.side is not None:
+            found.append(Bending(rule.name, check.side, -check.spare))
+    return tuple(found), settled
 
 
 def _solve_elastic(sheet: Sheet, **limits: object) -> StandingPlan:
@@ -184,10 +190,54 @@ def _solve_elastic(sheet: Sheet, **limits: object) -> StandingPlan:
     return solve(sheet, **limits)  # type: ignore[arg-type]
 
 
-def _elastic(sheet: Sheet, bending: Sequence[str]) -> Sheet:
-    """Return the sheet with these rules soft without limit, and no aim but the prices."""
-    rules = list(map(widest, sheet.rules))
+def _elastic(sheet: Sheet, bending: Sequence[str], blamed: Sequence[str]) -> Sheet:
+    """Return a sheet in which these rules bend without limit, with no aim but the prices.
+
+    Its activities are those of the sheet, then the bends. A rule that only takes whole steps has
+    bends in whole steps, so that bounds of the aim can be rounded. One of the blamed rules must
+    bend; where all of these take steps, that is a rule, from which the search learns much.
+    """
+    unused = _unused_names(sheet)
+    activities, rules = list(sheet.activities), list(map(widest, sheet.rules))
+    prices: list[tuple[int, Number]] = []
+    steps: list[tuple[int, Number]] = []
     for name in bending:
         i = sheet.rule_index[name]
-        rules[i] = replace(rules[i], give=_weight(sheet.rules[i]))
-    return replace(sheet, aim=Aim(), rules=tuple(rules))
+        step = _step(sheet, rules[i])
+        for limit, sign in ((rules[i].least, 1), (rules[i].most, -1)):
+            if limit is None:
+                continue
+            column, size = len(activities), step or 1
+            activities.append(Activity(next(unused), whole=step is not None))
+            rules[i] = replace(rules[i], terms=(*rules[i].terms, (column, sign * size)), text="")
+            prices.append((column, lowest(size * _weight(sheet.rules[i]))))
+            if name in blamed:
+                steps.append((column, 1))
+    if steps and all(activities[column].whole for column, _ in steps):
+        rules.append(Rule(next(unused), tuple(steps), 1, None))
+    return replace(
+        sheet,
+        aim=Aim("minimize", tuple(prices)),
+        activities=tuple(activities),
+        rules=tuple(rules),
+    )
+
+
+def _step(sheet: Sheet, rule: Rule) -> Number | None:
+    """Return the step of a rule in whole activities whose limits are whole steps, else None."""
+    if not rule.terms or not all(sheet.activities[j].whole for j, _ in rule.terms):
+        return None
+    below = math.lcm(*(c.denominator for _, c in rule.terms))
+    step = Fraction(math.gcd(*(int(c * below) for _, c in rule.terms)), below)
+    limits = (limit for limit in (rule.least, rule.most) if limit is not None)
+    if any((limit / step).denominator != 1 for limit in limits):
+        return None
+    return lowest(step)
+
+
+def _unused_names(sheet: Sheet) -> Iterator[str]:
+    """Yield names that neither the activities nor the rules of a sheet have."""
+    for number in count():
+        name = f"bend[{number}]"
+        if name not in sheet.activity_index and name not in sheet.rule_index:
+            yield name
