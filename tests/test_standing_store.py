@@ -87,7 +87,7 @@ def test_nothing_is_lost_of_a_sheet_from_arrays(tmp_path):
 
 def test_the_file_is_versioned_json(tmp_path):
     document = json.loads(keep(solve(Sheet.parse(BAKERY)), tmp_path).read_text())
-    assert (document["kind"], document["format"]) == ("intplan standing plan", 1)
+    assert (document["kind"], document["format"]) == ("intplan standing plan", store.FORMAT)
     assert document["content"]["result"]["value"] == "18137/5"
 
 
@@ -202,7 +202,7 @@ def refusal(path: Path) -> IntplanError:
         (b'{"kind": "other", "format": 1}', "not a standing plan"),
         (b'{"kind": "intplan standing plan"}', "format"),
         (b'{"kind": "intplan standing plan", "format": "1"}', "format"),
-        (b'{"kind": "intplan standing plan", "format": 2, "news": {}}', "newer"),
+        (b'{"kind": "intplan standing plan", "format": 3, "news": {}}', "newer"),
         (b'{"kind": "intplan standing plan", "format": 1}', "changed"),
         (b'{"kind": NaN}', "damaged"),
         (b'{"kind": ' + b"9" * 5000 + b"}", "damaged"),

@@ -728,18 +728,22 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
     evidence = checker.cuts[number].evidence
     distances: list[Distance] = []
     own: Coefficients = {}
-    parts = zip(evidence["rows"], evidence["multipliers"], evidence["row_sides"], strict=True)
-    for index, multiplier, side in parts:
+    limits = evidence.get("row_limits", [None] * len(evidence["rows"]))
+    parts = zip(
+        evidence["rows"], evidence["multipliers"], evidence["row_sides"], limits, strict=True
+    )
+    for index, multiplier, side, limit in parts:
         index, side = int(index), int(side)
         row, y = checker.row(index), Fraction(rational(multiplier, "multiplier"))
         for j, a in coefficients_of(row).items():
             own[j] = own.get(j, 0) - y * a
-        distances.append(row_distance(checker, index, row, y, side))
-    premises = reversed(measured_from(checker.cuts[number]))
-    anchors = {column: (side, value) for column, side, value in premises}
+        distances.append(row_distance(checker, index, row, y, side, exact(limit)))
+    anchors: dict[int, list[tuple[int, Number]]] = {}
+    for column, side, value in measured_from(checker.cuts[number]):
+        anchors.setdefault(column, []).append((side, value))
     for j, a in own.items():
         if a:
-            distances.append(column_distance(checker, j, Fraction(a), anchors, where))
+            distances.append(column_distance(checker, j, Fraction(a), anchors.get(j, []), where))
     right = -sum((a * limit for a, _, limit, *_ in distances), Fraction(0))
     part = right - math.floor(right)
     require(part != 0, f"the right-hand side of cut {number} is whole")
@@ -764,11 +768,16 @@ def check_gomory(checker: Checker, number: int, where: Box) -> None:
     )
 
 
-def row_distance(checker: Checker, index: int, row: Row, y: Fraction, side: int) -> Distance:
-    """Return a row as a distance from its limit."""
+def row_distance(
+    checker: Checker, index: int, row: Row, y: Fraction, side: int, kept: Number | None
+) -> Distance:
+    """Return a row as a distance from its limit, or from a wider one that was kept."""
     limit = row.most if side < 0 else row.least
     require(limit is not None, "a cut measures from a limit that is not there")
     require(side != 0 or row.least == row.most, "a row without a side is an equality")
+    if kept is not None and kept != limit:
+        require(side != 0 and (kept - limit) * side <= 0, "a limit of a cut does not hold")
+        limit = kept
     grain: Number = 0
     if index < len(checker.rules) and all(checker.whole[j] for j in row.columns):
         unit = Fraction(1, 1 << row.shift)
@@ -778,14 +787,18 @@ def row_distance(checker: Checker, index: int, row: Row, y: Fraction, side: int)
 
 
 def column_distance(
-    checker: Checker, j: int, a: Fraction, anchors: dict[int, tuple[int, Number]], where: Box
+    checker: Checker, j: int, a: Fraction, anchors: list[tuple[int, Number]], where: Box
 ) -> Distance:
-    """Return a column as a distance from the bound that was kept, or from any for a residue."""
-    side, limit = anchors.get(j, (LEAST, where.sides[LEAST][j]))
+    """Return a column as a distance from the bound that was kept, or from any for a residue.
+
+    One that was measured from both its bounds was fixed.
+    """
+    side, limit = anchors[0] if anchors else (LEAST, where.sides[LEAST][j])
     if limit is None:
         side, limit = MOST, where.sides[MOST][j]
     require(limit is not None, f"{j} takes part in a cut without a bound to measure from")
-    fixed = where.sides[LEAST][j] == where.sides[MOST][j]
+    fixed = len(anchors) > 1
+    require(len({value for _, value in anchors}) < 2, f"{j} is fixed at two values")
     whole = checker.whole[j] and Fraction(limit).denominator == 1
     return Distance(a, int(whole), limit, {j: 1}, 0 if fixed else (-1 if side else 1), False)
 

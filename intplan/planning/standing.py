@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     import networkx as nx
 
     from intplan.search import SearchResult
+    from intplan.search.carry import Kept
     from intplan.sheet.checking import CheckResult
 
 Progress = Callable[[Number | None, Number | None], None]
@@ -139,6 +140,13 @@ class StandingPlan:
         `evidence` (what closed it, in the search's own numbering).
         """
         return named_tree(self.sheet, self.result)
+
+    @cached_property
+    def kept(self) -> Kept:
+        """The search as one that a changed sheet can take up."""
+        from intplan.search.carry import Kept
+
+        return Kept(self.sheet.problem(), self.result)
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the standing plan to a JSON file, whole or not at all.

@@ -20,6 +20,7 @@ from dataclasses import fields
 from typing import TYPE_CHECKING, Any
 
 import networkx as nx
+import numpy as np
 
 from intplan.errors import IntplanError, PlanFileError
 from intplan.files import read_file, write_atomically
@@ -33,7 +34,7 @@ if TYPE_CHECKING:
     from intplan.sheet.problem import Problem
 
 KIND = "intplan standing plan"
-FORMAT = 1
+FORMAT = 2
 LARGEST_FILE = 1 << 30  # bytes
 OUTCOMES = ("optimal", "within_gap", "infeasible", "unbounded", "unfinished")
 ENDINGS = (None, "time", "nodes", "interrupt", "range")
@@ -139,7 +140,8 @@ def load_standing(path: str | os.PathLike[str]) -> StandingPlan:
     raw = read_file(path, LARGEST_FILE, PlanFileError)
     try:
         with _no_collection():
-            return _read_content(_open_file(raw, where), where)
+            document = _open_file(raw, where)
+            return _read_content(_lifted(document["content"], document["format"]), where)
     except (EncodingError, _Damage) as error:
         raise PlanFileError(f"the standing plan is damaged: {error}", where=where) from error
     except RecursionError as error:
@@ -163,7 +165,7 @@ class _Damage(ValueError):
 
 
 def _open_file(raw: bytes, where: str) -> dict[str, Any]:
-    """Return the content of the file, once its kind, format and digest are right."""
+    """Return what is in the file, once its kind, format and digest are right."""
     try:
         document = json.loads(raw, parse_constant=_refuse_constant)
     except ValueError as error:
@@ -193,6 +195,20 @@ def _open_file(raw: bytes, where: str) -> dict[str, Any]:
     content = document.get("content")
     if not isinstance(content, dict):
         raise _Damage("it has no content")
+    return document
+
+
+def _lifted(content: dict[str, Any], version: int) -> dict[str, Any]:
+    """Turn the content of an older format into that of the present one."""
+    if version == 1:  # nodes had no basis, and no tree was taken up again
+        result = content.get("result")
+        tree = result.get("tree") if isinstance(result, dict) else None
+        nodes = tree.get("nodes") if isinstance(tree, dict) else None
+        if not isinstance(nodes, list) or not all(isinstance(node, dict) for node in nodes):
+            raise _Damage("its tree is no list of nodes")
+        result["reopened"] = None
+        for node in nodes:
+            node["basis"] = None
     return content
 
 
@@ -231,7 +247,8 @@ def _read_result(record: dict[str, Any], problem: Problem) -> SearchResult:
         else:
             parts[name] = decoder.decode(value)
     parts["cuts"] = _read_cuts(record["cuts"], columns, decoder)
-    parts["tree"] = _read_tree(record["tree"], columns, len(parts["cuts"]), decoder)
+    places = columns, len(problem.rows), len(parts["cuts"])
+    parts["tree"] = _read_tree(record["tree"], *places, decoder)
     result = SearchResult(**parts)
     _check_result(result, problem)
     return result
@@ -259,7 +276,8 @@ def _check_result(result: SearchResult, problem: Problem) -> None:
         raise _Damage("its value is not its bound")
     if result.outcome == "within_gap" and result.bound is None:
         raise _Damage("it has no bound")
-    if not all(type(n) is int and n >= 0 for n in (result.nodes, result.pivots)):
+    reopened = 0 if result.reopened is None else result.reopened
+    if not all(type(n) is int and n >= 0 for n in (result.nodes, result.pivots, reopened)):
         raise _Damage("its search numbers are no counts")
     if not _is_duration(result.seconds):
         raise _Damage("its search time is no duration")
@@ -291,7 +309,9 @@ def _read_cuts(value: Any, columns: int, decoder: Decoder) -> list[Any]:
     return cuts
 
 
-def _read_tree(value: Any, columns: int, cuts: int, decoder: Decoder) -> nx.DiGraph:
+def _read_tree(
+    value: Any, columns: int, rules: int, cuts: int, decoder: Decoder
+) -> nx.DiGraph:
     """Read the nodes and make sure that they are one tree with node 0 as its root."""
     if not isinstance(value, dict) or set(value) != {"nodes", "notes"}:
         raise _Damage("its tree has not exactly nodes and notes")
@@ -310,7 +330,9 @@ def _read_tree(value: Any, columns: int, cuts: int, decoder: Decoder) -> nx.DiGr
         if (parent is None) != (node == 0) or type(parent) not in (int, type(None)):
             raise _Damage(f"node {node} has no place in the tree")
         parents[node] = parent
-        tree.add_node(node, **_read_node(node, entry, columns, cuts, decoder))
+        attributes = _read_node(node, entry, columns, cuts, decoder)
+        _check_basis(node, attributes["basis"], columns, rules + cuts)
+        tree.add_node(node, **attributes)
     tree.add_edges_from((parent, node) for node, parent in parents.items() if parent is not None)
     if len(tree) != len(parents) or (parents and not nx.is_arborescence(tree)):
         raise _Damage("its nodes are not one tree")
@@ -324,7 +346,9 @@ def _read_node(
     node: int, entry: dict[str, Any], columns: int, cuts: int, decoder: Decoder
 ) -> dict[str, Any]:
     """Read what a node carries: the parts every node has are checked, the rest is decoded."""
-    needed = ("bound", "depth", "outcome", "added", "pivots", "seconds", "start", "evidence")
+    needed = (
+        "bound", "depth", "outcome", "added", "pivots", "seconds", "start", "evidence", "basis",
+    )  # fmt: skip
     if not all(key in entry for key in needed):
         raise _Damage(f"node {node} lacks a part")
     attributes = {
@@ -345,6 +369,18 @@ def _read_node(
     if not sound:
         raise _Damage(f"node {node} holds something that no node holds")
     return attributes
+
+
+def _check_basis(node: int, basis: Any, columns: int, rows: int) -> None:
+    """Make sure that a basis holds as many activities as row values, none of them twice."""
+    if basis is None:
+        return
+    sound = isinstance(basis, np.ndarray) and basis.ndim == 1 and basis.dtype.kind == "i"
+    if sound and len(basis):
+        sound = bool(basis.min() >= 0 and basis.max() < columns + rows)
+        sound = sound and len(np.unique(basis)) == len(basis) == 2 * int((basis < columns).sum())
+    if not sound:
+        raise _Damage(f"node {node} has no such basis")
 
 
 def _read_added(node: int, value: Any, columns: int, cuts: int, decoder: Decoder) -> tuple:

@@ -41,6 +41,7 @@ from intplan.relaxation.rows import RowStore
 
 FEASIBILITY = 1e-9  # how far past a bound a basic value may lie, for bounds up to a thousand
 PIVOT = 1e-9  # smallest pivot of the ratio test
+ENTRY = 1e-7  # smallest pivot that lets a freed variable enter
 SLACK = 1e-11  # added to reduced costs in the ratio test, so that near ties take the large pivot
 DRIFT = 1e-8  # residual of the original rows that calls for a refactorisation
 FEW = 8  # a violation below this share of all flips together is settled by a few of them
@@ -267,6 +268,15 @@ class Dictionary:
     def activities(self) -> np.ndarray:
         """Return the activities' values at the current point, (columns,)."""
         return self.point()[: self.columns]
+
+    def basis(self) -> np.ndarray:
+        """Return what tells this basis from that of all row values, (2k,) variable numbers.
+
+        They are the basic activities and the non-basic row values, as many of either.
+        """
+        n = self.columns
+        inner, outer = self.basic[self.basic < n], self.nonbasic[self.nonbasic >= n]
+        return np.concatenate((inner, outer)).astype(np.int32)
 
     def held_rows(self) -> np.ndarray:
         """Return the numbers of the rows this dictionary holds, ascending."""
@@ -578,6 +588,25 @@ class Dictionary:
         self.side[column] = 0.0 if least == most else (-1.0 if above else 1.0)
         self.pivots += 1
         self.since_refactored += 1
+
+    def enter(self, variable: int) -> None:
+        """Bring a non-basic variable that may pass its bound into the basis.
+
+        It moves the way that lets the cost fall; of the basic variables that are within their
+        bounds, the one that reaches one of them first leaves (the ratio test of the primal simplex
+        method).  Where none does, the row with the largest entry gives way.
+        """
+        column = -1 - self.place.item(variable)
+        rising = self.reduced.item(column) < 0
+        changes = self.entries[:, column] if rising else -self.entries[:, column]
+        sizes = np.abs(changes)
+        rooms = np.where(changes > 0, self.rooms[:, 1], self.rooms[:, 0])
+        usable = (sizes > ENTRY) & (rooms >= -self.tolerance)
+        ratios = np.where(usable, np.maximum(rooms, 0.0) / sizes, np.inf)
+        row = ratios.argmin().item() if usable.any() else -1
+        if row < 0 or ratios[row] == np.inf:
+            row = sizes.argmax().item()
+        self._pivot(row, column, int(changes[row] > 0))
 
     # ------------------------------------------------------------------ accuracy
 

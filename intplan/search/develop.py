@@ -75,8 +75,7 @@ class NodeWork:
         self.context = context
         self.number = number
         self.bound = inherited
-        if dictionary is not None:
-            self.dictionary = dictionary
+        self.dictionary = dictionary
         self.bounds = bounds
         self.steps: list[dict[str, Any]] = []
         self._inherited_closure = closure
@@ -124,7 +123,7 @@ class NodeWork:
             if not last and self.tighten(proof):
                 continue
             if context.time_to_dive() and dive(
-                context, dictionary, self.bounds, guided=context.nodes > 1
+                context, dictionary, self.bounds, context.best.plan if context.nodes > 1 else None
             ):
                 if context.best.beats(proof.bound):
                     return self.close("beaten", proof)
@@ -136,7 +135,7 @@ class NodeWork:
                 if self.closed:
                     return None
                 continue
-            self._keep_open(proof)
+            self.keep_open(proof)
             return Split(choice.column, choice.value, choice.down_gain, choice.up_gain)
         raise AssertionError("the last attempt returns")
 
@@ -400,7 +399,7 @@ class NodeWork:
         column = free[np.abs(proof.reduced[free]).argmax()].item()
         value = round(x.item(column))
         up = value < bounds.most[column]
-        self._keep_open(proof)
+        self.keep_open(proof)
         return Split(column, value + 0.5 if up else value - 0.5, 1.0 - up, float(up))
 
     def _settle_pinned(self) -> Split | None:
@@ -431,7 +430,7 @@ class NodeWork:
         if bound is None or not context.best.beats_exactly(bound):
             return False
         closure = context.record.exact_closure(1, multipliers, bound, self.bounds)
-        self._finish(outcome, _rounded_down(bound), closure)
+        self._finish(outcome, rounded_down(bound), closure)
         return True
 
     def _settle_empty(self) -> bool:
@@ -469,7 +468,7 @@ class NodeWork:
     def _exact_optimum(self, answer: ExactAnswer, value: Fraction) -> Split | None:
         context = self.context
         closure = context.record.exact_closure(1, answer.multipliers, value, self.bounds)
-        bound = _rounded_down(value)
+        bound = rounded_down(value)
         if context.best.beats_exactly(value):
             return self._finish("beaten", bound, closure)
         whole = context.problem.whole
@@ -498,7 +497,8 @@ class NodeWork:
         if waiting and self.closure is not None:
             self._finish("waiting", self.bound, self.closure)
 
-    def _keep_open(self, proof: Proof) -> None:
+    def keep_open(self, proof: Proof) -> None:
+        """Record that the node is split, with the best that is proven of it."""
         self._finish("split", self.bound, self.closure or self._closure(proof))
 
     def _closure(self, proof: Proof) -> dict[str, Any]:
@@ -508,10 +508,11 @@ class NodeWork:
         return self._closure_of[1]
 
     def _finish(self, outcome: str, bound: float, closure: dict[str, Any]) -> None:
-        self.context.record.close(self.number, outcome, bound, self.steps, closure)
+        basis = None if self.dictionary is None else self.dictionary.basis()
+        self.context.record.close(self.number, outcome, bound, self.steps, closure, basis)
 
 
-def _rounded_down(value: Fraction) -> float:
+def rounded_down(value: Fraction) -> float:
     """Return a double that is at most an exact value."""
     nearest = float(value)
     return nearest if Fraction(nearest) <= value else math.nextafter(nearest, -math.inf)

@@ -12,24 +12,29 @@ solutions, Mathematical Programming 102:71-90, 2005 (guided dives, towards the b
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary, Status
 from intplan.search.context import Context
 from intplan.search.tightening import Bounds
+from intplan.sheet.problem import Number
 
 FRACTION = 1e-6  # distance from a whole value that counts as fractional
 PIVOTS_A_STEP = 40
 DOWN = 3.0  # how much less a step down is liked than one up by the same distance: it settles less
 
 
-def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> bool:
+def dive(
+    context: Context, start: Dictionary, bounds: Bounds, towards: Sequence[Number] | None
+) -> bool:
     """Dive from a relaxed node; tell whether a better plan was found.
 
     Parameters
     ----------
     start, bounds : of the node, left unchanged
-    guided : fix activities towards the best plan so far instead of their nearest whole value
+    towards : a plan to fix activities towards; None for their nearest whole values
     """
     dictionary, bounds = start.copy(), bounds.copy()
     before = dictionary.pivots
@@ -44,7 +49,7 @@ def dive(context: Context, start: Dictionary, bounds: Bounds, guided: bool) -> b
             found |= plan is not None and context.best.offer(plan)
             break
         found |= context.round_to_plan(x, bounds)
-        column, up = _choose(context, dictionary, rows, guided)
+        column, up = _choose(dictionary, rows, towards)
         least, most, value = bounds.least.item(column), bounds.most.item(column), x.item(column)
         rounded_up, rounded_down = (float(np.ceil(value)), most), (least, float(np.floor(value)))
         first, second = (rounded_up, rounded_down) if up else (rounded_down, rounded_up)
@@ -66,15 +71,14 @@ def fractional_rows(dictionary: Dictionary, whole: np.ndarray) -> np.ndarray:
 
 
 def _choose(
-    context: Context, dictionary: Dictionary, rows: np.ndarray, guided: bool
+    dictionary: Dictionary, rows: np.ndarray, towards: Sequence[Number] | None
 ) -> tuple[int, bool]:
     """Choose the activity to fix and whether upwards."""
     columns = dictionary.basic[rows]
     values = dictionary.values[rows]
     parts = values - np.floor(values)
-    if guided and context.best.plan is not None:
-        plan = context.best.plan
-        wanted = np.array([float(plan[j]) for j in columns.tolist()])
+    if towards is not None:
+        wanted = np.array([float(towards[j]) for j in columns.tolist()])
         i = np.abs(wanted - values).argmin()
         return columns.item(i), bool(wanted[i] > values[i])
     distances = np.minimum(1.0 - parts, DOWN * parts)

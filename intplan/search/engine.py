@@ -164,7 +164,7 @@ class Search:
     def _run(self) -> SearchResult:
         self.context.record.open(0, None, 0, ())
         self.numbered = 1
-        root = RootWork(self.context)
+        root = self._root()
         try:
             try:
                 open_root = root.prepare()
@@ -208,12 +208,19 @@ class Search:
                 node = self._solve(node)
                 self._current = None
 
+    def _root(self) -> RootWork:
+        return RootWork(self.context)
+
+    def _develop_root(self, root: RootWork) -> Split | None:
+        """Solve the root; None once it is closed, else where to branch."""
+        return root.develop_root()
+
     def _solve_root(self, root: RootWork) -> Node | None:
         started = perf_counter()
         self.context.nodes = 1
         trials = self.context.pivots
         self._current = root
-        split = root.develop_root()
+        split = self._develop_root(root)
         self._current = None
         made = root.dictionary.pivots
         self.context.pivots += made

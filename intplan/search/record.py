@@ -55,6 +55,7 @@ class Recorder:
         self.tree.add_node(
             number, bound=None, depth=depth, outcome="waiting", added=added,
             pivots=0, seconds=0.0, start="warm" if parent is not None else "cold", evidence=None,
+            basis=None,
         )  # fmt: skip
         if parent is not None:
             self.tree.add_edge(parent, number)
@@ -66,12 +67,14 @@ class Recorder:
         bound: float | None,
         steps: list[dict[str, Any]],
         closure: dict[str, Any] | None,
+        basis: np.ndarray | None = None,
     ) -> None:
-        """Enter how a node ended."""
+        """Enter how a node ended, and the basis that its relaxation ended with."""
         node = self.tree.nodes[number]
         node["outcome"] = outcome
         node["bound"] = bound
         node["evidence"] = {"steps": steps, "closure": closure}
+        node["basis"] = basis
 
     def note_cut(self, cut: Cut) -> None:
         """Keep a cut; its number is its place in `cuts`."""

@@ -63,6 +63,7 @@ class SearchResult:
     cuts : the cuts in the order of their numbers
     nodes, pivots : nodes solved and pivots made, trials included
     seconds : time spent
+    reopened : nodes of an earlier tree that were solved again; None for a search from nothing
     """
 
     outcome: str
@@ -77,3 +78,4 @@ class SearchResult:
     nodes: int = 0
     pivots: int = 0
     seconds: float = 0.0
+    reopened: int | None = None

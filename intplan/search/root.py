@@ -25,7 +25,13 @@ SLACK_CUT = 1e-6  # room at which a cut no longer binds
 
 
 class RootWork(NodeWork):
-    """The root being solved; closes at once where the sheet contradicts itself."""
+    """The root being solved; closes at once where the sheet contradicts itself.
+
+    Attributes
+    ----------
+    free : the bounds that hold for every plan, not only for better ones than the best so far: cuts
+        are measured from them, so that no cut leans on the cut-off
+    """
 
     def __init__(self, context: Context) -> None:
         problem = context.problem
@@ -45,6 +51,7 @@ class RootWork(NodeWork):
         if not (self._round_bounds() and self._round_rules() and self._derive_bounds()):
             return False
         self.context.prover.set_box(self.bounds.least, self.bounds.most)
+        self.free = self.bounds.copy()
         self.start_from_nothing()
         return True
 
@@ -97,23 +104,27 @@ class RootWork(NodeWork):
     def cut(self) -> Split | None:
         """Add cuts while they lift the bound; a split if that had to be settled in rationals."""
         split = self._cut_in_rounds()
+        self.note_held_cuts()
+        return split
+
+    def note_held_cuts(self) -> None:
+        """Record the cuts that the root's relaxation holds."""
         rules = self.context.record.rules
         self.context.record.tree.nodes[0]["added"] = tuple(
             Added("cut", int(i) - rules, float(self.context.rows.least[i]))
             for i in self.dictionary.held_rows()
             if i >= rules
         )
-        return split
 
     def _cut_in_rounds(self) -> Split | None:
-        separator = Separator(self.context, self.bounds)
+        separator = Separator(self.context, self.free)
         started, stalled = self.dictionary.value, 0
         for _ in range(CUT_ROUNDS):
             rows = self.fractional_rows()
             if not len(rows) or self.context.limits.out_of_time():
                 return None
             before = self.dictionary.value
-            numbers = separator.separate(self.dictionary, self.bounds, rows)
+            numbers = separator.separate(self.dictionary, rows)
             if not len(numbers):
                 return None
             self.dictionary.add_rows(numbers)

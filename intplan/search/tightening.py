@@ -14,6 +14,7 @@ problem, Operations Research 2:393-410, 1954 (reduced-cost tightening).
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable
 
 import numpy as np
 
@@ -138,6 +139,30 @@ class Propagator:
                 break
         return list(touched), None
 
+    def again(
+        self, row: int, limit: int, columns: list[int], bounds: Bounds, log: list[dict]
+    ) -> None:
+        """Tighten activities by one limit of one row.
+
+        Parameters
+        ----------
+        row, limit : which, 0 for the least limit and 1 for the most
+        columns : the activities
+        bounds : tightened in place
+        log : receives a record for each that tightened a bound
+        """
+        entries = self.matrix[row]
+        touched = entries.nonzero()[0]
+        parts, least, most = entries[touched], bounds.least[touched], bounds.most[touched]
+        total = float(parts @ np.where((parts > 0) == bool(limit), least, most))
+        slack = self.row_most.item(row) - total if limit else total - self.row_least.item(row)
+        if not math.isfinite(slack):
+            return
+        size = np.abs(parts) @ np.maximum(np.abs(least), np.abs(most))
+        error = float(size + abs(slack)) * self.rounding
+        if math.isfinite(error):
+            self._tighten_row(row, columns, limit, (slack, error), bounds, log, [], False)
+
     def _round(
         self, bounds: Bounds, rows: np.ndarray, log: list[dict], divisible: bool
     ) -> tuple[list[int], int | None]:
@@ -181,7 +206,7 @@ class Propagator:
     def _tighten_row(
         self,
         row: int,
-        columns: np.ndarray,
+        columns: Iterable[int],
         limit: int,
         spare: tuple[float, float],
         bounds: Bounds,

@@ -290,6 +290,7 @@ class Sheet:
             warnings=warnings,
             activity_index=self.activity_index,
             _names=self._names,
+            _origin=self,
         )
         return new
 
@@ -319,6 +320,10 @@ class Sheet:
     def _problem(self) -> Problem:
         from intplan.sheet.problem import Problem
 
+        origin = self.__dict__.pop("_origin", None)
+        changed = None if origin is None else self._changed_problem(origin)
+        if changed is not None:
+            return changed
         bends = bends_of(self)
         check_size(len(self.rules), len(self.activities) + len(bends))
         terms = [rule.terms for rule in self.rules]
@@ -345,6 +350,40 @@ class Sheet:
             )
         except OverflowError:
             raise SheetError("the numbers of this sheet lie too far apart for doubles") from None
+
+    def _changed_problem(self, origin: Sheet) -> Problem | None:
+        """Return the problem made from that of the sheet that this one was changed from.
+
+        None where the soft rules are others, and the columns with them.
+        """
+        rules: list[Any] = []
+        soft: list[str] = []
+        for rule in self.rules:
+            i = origin.rule_index.get(rule.name)
+            old = None if i is None else origin.rules[i]
+            if rule.give is not None:
+                soft.append(rule.name)
+            if rule is old:
+                rules.append(i)
+            elif _same_but_limits(rule, old):
+                rules.append((i, rule.least, rule.most))
+            elif rule.give is None:
+                rules.append((rule.terms, rule.least, rule.most))
+            else:
+                return None
+        if soft != [rule.name for rule in origin.rules if rule.give is not None]:
+            return None
+        check_size(len(rules), len(self.activities) + len(origin.problem().bends))
+        pairs = zip(self.activities, origin.activities, strict=True)
+        bounds = {j: (a.least, a.most) for j, (a, old) in enumerate(pairs) if a is not old}
+        try:
+            return origin.problem().changed(rules, bounds, bends_of(self))
+        except OverflowError:
+            raise SheetError("the numbers of this sheet lie too far apart for doubles") from None
+
+
+def _same_but_limits(rule: Rule, old: Rule | None) -> bool:
+    return old is not None and rule.terms is old.terms and rule.give == old.give
 
 
 def _check_soft(sheet: Sheet, aim_terms: Terms) -> None:

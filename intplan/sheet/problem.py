@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 from typing import NamedTuple
 
@@ -18,6 +18,7 @@ import numpy as np
 
 Number = int | Fraction
 Terms = Sequence[tuple[int, Number]]
+Posed = tuple[Terms, Number | None, Number | None]
 
 
 class ExactRow(NamedTuple):
@@ -128,7 +129,7 @@ class Problem:
         aim_terms: Terms,
         aim_constant: Number,
         maximize: bool,
-        rules: Iterable[tuple[Terms, Number | None, Number | None]],
+        rules: Iterable[Posed],
         least: Sequence[Number | None],
         most: Sequence[Number | None],
         whole: Sequence[bool],
@@ -172,6 +173,57 @@ class Problem:
             cost_step=1 / unit if stepped else None,
             bends=bends,
         )
+
+    def changed(
+        self,
+        rules: Sequence[int | tuple[int, Number | None, Number | None] | Posed],
+        bounds: dict[int, tuple[Number | None, Number | None]],
+        bends: tuple[Bend, ...],
+    ) -> Problem:
+        """Return the problem with other rules and bounds over the same columns and aim.
+
+        Parameters
+        ----------
+        rules : for each rule its number here where it stays as it is, that number with its new
+            limits (as written), or the terms and limits of a new rule
+        bounds : new bounds by column
+        bends : the same columns, by the present numbers of their rules
+        """
+        rows, kept = [], []
+        for rule in rules:
+            if isinstance(rule, int):
+                rows.append(self.rows[rule])
+                kept.append(rule)
+            elif isinstance(rule[0], int):
+                old = self.rows[rule[0]]
+                low, high = (None if v is None else lowest(v * old.factor) for v in rule[1:])
+                rows.append(old._replace(least=low, most=high))
+                kept.append(rule[0])
+            else:
+                rows.append(exact_row(*rule))
+                kept.append(-1)
+        matrix = self.matrix[kept] if len(self.rows) else np.zeros((len(rows), len(self.cost)))
+        ends = np.array([self.row_least[kept], self.row_most[kept]]) if len(self.rows) else None
+        ends = np.empty((2, len(rows))) if ends is None else ends
+        for i, (rule, row) in enumerate(zip(rules, rows, strict=True)):
+            if isinstance(rule, int):
+                continue
+            ends[:, i] = as_double(row.least, -np.inf, row.shift), as_double(
+                row.most, np.inf, row.shift
+            )
+            if kept[i] < 0:
+                matrix[i] = 0.0
+                matrix[i, list(row.columns)] = scaled_doubles(row.coefficients, row.shift)
+        least, most = self.least.copy(), self.most.copy()
+        exact_least, exact_most = list(self.exact_least), list(self.exact_most)
+        for j, (low, high) in bounds.items():
+            exact_least[j], exact_most[j] = low, high
+            least[j], most[j] = as_double(low, -np.inf), as_double(high, np.inf)
+        return replace(
+            self, matrix=matrix, row_least=ends[0], row_most=ends[1], least=least, most=most,
+            rows=tuple(rows), exact_least=tuple(exact_least), exact_most=tuple(exact_most),
+            bends=bends,
+        )  # fmt: skip
 
     def aim_from_cost(self, cost: Number) -> Number:
         """Convert an exact cost in the engine's scale to the units of the written aim."""

@@ -32,12 +32,13 @@ class Separator:
     Parameters
     ----------
     context : of the search; the store and the record receive the cuts
-    bounds : of the root before the first round
+    bounds : of the root, those that do not lean on the cut-off
     """
 
     def __init__(self, context: Context, bounds: Bounds) -> None:
         problem = context.problem
         self.context = context
+        self.bounds = bounds
         self._aggregator = Aggregator(context.rows, context.record.rules, problem.whole)
         self._grain = _grain(problem)
         rows, limits = context.rows, map(context.arithmetic.row_limits, range(len(problem.rows)))
@@ -58,19 +59,19 @@ class Separator:
                     if binary[j]}) > 1
         }  # fmt: skip
 
-    def separate(self, dictionary: Dictionary, bounds: Bounds, rows: np.ndarray) -> np.ndarray:
+    def separate(self, dictionary: Dictionary, rows: np.ndarray) -> np.ndarray:
         """Find cuts at a dictionary's point and put the chosen ones into the store.
 
         Parameters
         ----------
-        dictionary, bounds : of the root as it is
+        dictionary : of the root as it is
         rows : (k,) dictionary rows of whole activities with a fractional value
 
         Returns
         -------
         The numbers of the new rows.
         """
-        context, rounding = self.context, self._rounding(dictionary, bounds)
+        context, rounding = self.context, self._rounding(dictionary)
         candidates = self._round_sums(rounding)
         if len(candidates) < ENOUGH:
             candidates += self._round_rows(rounding, dictionary, rows)
@@ -147,13 +148,15 @@ class Separator:
         numbers = np.concatenate((dictionary.nonbasic, dictionary.basic[near]))
         return [i for i in (numbers - dictionary.columns).tolist() if i in self._knapsacks]
 
-    def _rounding(self, dictionary: Dictionary, bounds: Bounds) -> Rounding:
-        """Gather what mixed-integer rounding needs under the root's present bounds."""
-        context, problem = self.context, self.context.problem
+    def _rounding(self, dictionary: Dictionary) -> Rounding:
+        """Gather what mixed-integer rounding needs at the root's present point."""
+        context, problem, bounds = self.context, self.context.problem, self.bounds
         cuts = context.rows.count - context.record.rules
+        size = np.maximum(np.abs(bounds.least), np.abs(bounds.most))
+        bounded = np.isfinite(size)
         return Rounding(
             context.rows, problem.whole, np.concatenate((self._grain, np.zeros(cuts))),
-            context.prover.reach, context.prover.open, (problem.least, problem.most),
+            float(size[bounded].sum()), (~bounded).nonzero()[0], (problem.least, problem.most),
             dictionary.activities(), bounds,
             np.concatenate((np.zeros(context.record.rules, bool), context.record.leaning_rows)),
             (np.concatenate((self._rounded_rows, np.zeros(cuts, bool))), self._rounded_columns),

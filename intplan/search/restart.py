@@ -1,0 +1,360 @@
+"""The search of a changed problem, taken up from the tree of the problem before the change.
+
+The root is re-optimised from the basis it ended with, with the cuts that still hold.  If that does
+not settle it, the nodes of the earlier tree wait in its place: each with the bound that its
+multipliers prove now, so that those closed before stay closed without being solved wherever that
+bound is no better than the best plan.  The others are opened best bound first, each from its own
+basis, which the dual simplex method repairs.
+
+Reference: A. M. Geoffrion, R. Nauss, Parametric and postoptimality analysis in integer linear
+programming, Management Science 23:453-466, 1977.
+"""
+
+from __future__ import annotations
+
+import heapq
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from fractions import Fraction
+from time import perf_counter
+from typing import Any
+
+import numpy as np
+
+from intplan.relaxation.dictionary import Dictionary
+from intplan.relaxation.start import cold_start
+from intplan.search.carry import Carrier, Kept, Places
+from intplan.search.context import Context
+from intplan.search.develop import NodeWork, Split, rounded_down
+from intplan.search.diving import dive
+from intplan.search.engine import Search
+from intplan.search.evidence import LEAST, MOST, Proof
+from intplan.search.limits import Limits
+from intplan.search.node import Node
+from intplan.search.result import SearchResult
+from intplan.search.root import RootWork
+from intplan.search.tightening import Bounds, tighten_by_cost
+from intplan.sheet.problem import Number, Problem
+
+
+def restart(
+    problem: Problem,
+    kept: Kept,
+    places: Places,
+    limits: Limits,
+    gap: Fraction = Fraction(0),
+    plan: Sequence[Number] | None = None,
+    first_plan: bool = False,
+    at: str | None = None,
+) -> SearchResult:
+    """Find the best whole-unit plan of a changed problem from the tree of the earlier one.
+
+    Parameters
+    ----------
+    problem : the rules and the aim as they are now
+    kept, places : the earlier search, and where its rules and columns are in `problem`
+    limits, gap : as in `intplan.search.branch_and_cut`
+    plan : the earlier plan in the columns of `problem`; the first in hand if it still fits
+    first_plan : stop at the first plan
+    at : "root" to branch anew from the root's basis, "leaves" to take up the earlier tree; by
+        default whichever `Restart` expects to be quicker
+    """
+    return Restart(problem, gap, limits, first_plan, kept, places, plan, at).run()
+
+
+@dataclass(slots=True)
+class KeptNode:
+    """A node of the earlier tree that waits in the present one.
+
+    Attributes
+    ----------
+    number, depth : of the node in the present tree
+    earlier : its number in the earlier tree
+    bound : what is proven of it now
+    bounds, steps : its bounds, and what tightened them since its parent
+    proof : of the bound, None where the bound is inherited
+    inherited : the record of what proves its parent's bound
+    basis : of the earlier node, or of its parent where it had none
+    """
+
+    number: int
+    depth: int
+    earlier: int
+    bound: float
+    bounds: Bounds
+    steps: list[dict[str, Any]]
+    proof: Proof | None
+    inherited: dict[str, Any] | None
+    basis: np.ndarray | None
+
+    def __lt__(self, other: Node | KeptNode) -> bool:
+        """Order as `Node` does."""
+        return (self.bound, self.number) < (other.bound, other.number)
+
+
+class KeptRoot(RootWork):
+    """The root of a changed problem, from the basis and the cuts of the earlier root."""
+
+    def __init__(self, context: Context, carrier: Carrier, plan: Sequence[Number] | None) -> None:
+        super().__init__(context)
+        self.carrier = carrier
+        self.plan = plan
+
+    def start_from_nothing(self) -> None:
+        """Make the first dictionary: that of the earlier root's basis."""
+        context, carrier = self.context, self.carrier
+        if self.plan is not None and context.arithmetic.fits(self.plan):
+            context.best.offer(list(self.plan))
+        root = carrier.kept.result.tree.nodes[0]
+        trials = [s for s in (root["evidence"] or {"steps": ()})["steps"] if s["by"] == "trial"]
+        self.steps += carrier.carry_steps(trials, self.bounds)
+        self.free = self.bounds.copy()
+        cuts = carrier.carry_cuts(self.bounds)
+        held = np.concatenate((np.arange(context.record.rules), cuts))
+        self.dictionary = opened(context, carrier, root["basis"], self.bounds, held)
+
+    def open_relaxation(self) -> Proof | Split | None:
+        """Solve the relaxation and find a first plan."""
+        proof = self._open_relaxation()
+        if not isinstance(proof, Proof) or self.context.best.value is not None:
+            return proof
+        self._dive()
+        if self.context.best.beats(proof.bound):
+            return self.close("beaten", proof)
+        return self.relax() if self.tighten(proof) else proof
+
+    def _dive(self) -> None:
+        """Look for a first plan near the earlier one."""
+        context = self.context
+        if len(self.fractional_rows()) and context.time_to_dive():
+            dive(context, self.dictionary, self.bounds, self.plan)
+
+
+class Restart(Search):
+    """One search that takes up an earlier tree; see `restart`."""
+
+    def __init__(
+        self,
+        problem: Problem,
+        gap: Fraction,
+        limits: Limits,
+        first_plan: bool,
+        kept: Kept,
+        places: Places,
+        plan: Sequence[Number] | None,
+        at: str | None,
+    ) -> None:
+        super().__init__(problem, gap, limits, first_plan)
+        self.earlier = kept.result.tree
+        self.carrier = Carrier(kept, places, self.context)
+        self.plan = plan
+        self.at = at
+        self.reopened = 0
+        self.held = np.arange(0)  # the rows that nodes hold
+
+    def _result(self) -> SearchResult:
+        result = super()._result()
+        result.reopened = self.reopened
+        return result
+
+    # ------------------------------------------------------------------ the root
+
+    def _root(self) -> RootWork:
+        return KeptRoot(self.context, self.carrier, self.plan)
+
+    def _develop_root(self, root: RootWork) -> Split | None:
+        """Solve the root; None if it closed, or if the earlier tree waits below it."""
+        assert isinstance(root, KeptRoot)
+        proof = root.open_relaxation()
+        if not isinstance(proof, Proof):
+            return proof
+        if not self._leaves_pay():
+            split = root.cut()
+            return split if split is not None or root.closed else root.develop()
+        root.keep_open(proof)
+        root.note_held_cuts()
+        self.held = root.dictionary.held_rows()
+        self._take_up_children(0, 0, root.bounds, root.bound, root.closure, 0, None)
+        return None
+
+    def _leaves_pay(self) -> bool:
+        """Tell whether to take the earlier tree up instead of branching anew from the root."""
+        if self.earlier.out_degree(0) != 2:
+            return False
+        return self.at != "root"
+
+    # ------------------------------------------------------------------ the earlier tree
+
+    def _solve(self, node: Node | KeptNode) -> Node | None:
+        if not isinstance(node, KeptNode):
+            return super()._solve(node)
+        if self.earlier.out_degree(node.earlier) == 2:
+            self._expand(node)
+            return None
+        return self._reopen(node)
+
+    def _close_unsolved(self, node: Node | KeptNode) -> None:
+        if isinstance(node, KeptNode):
+            self._record(node, "beaten")
+        else:
+            super()._close_unsolved(node)
+
+    def _take_up_children(
+        self,
+        earlier: int,
+        number: int,
+        bounds: Bounds,
+        bound: float,
+        closure: dict[str, Any] | None,
+        depth: int,
+        basis: np.ndarray | None,
+    ) -> None:
+        """Let the children of an earlier node wait, as children of a present one.
+
+        Parameters
+        ----------
+        earlier, number, depth : of the node, in the earlier and in the present tree
+        bounds, bound, closure : what the node ended with
+        basis : of the earlier node
+        """
+        basis = self.earlier.nodes[earlier]["basis"] if basis is None else basis
+        for child in sorted(self.earlier.successors(earlier)):
+            entry = self.earlier.nodes[child]
+            self.context.record.open(self.numbered, number, depth + 1, entry["added"])
+            node = KeptNode(
+                self.numbered, depth + 1, child, bound, bounds.copy(), [], None, closure,
+                basis if entry["basis"] is None else entry["basis"],
+            )  # fmt: skip
+            self.numbered += 1
+            if self._weigh(node):
+                heapq.heappush(self.heap, node)
+
+    def _weigh(self, node: KeptNode) -> bool:
+        """Take over a node's bounds and its closure; False if that closes it."""
+        entry, bounds, carrier = self.earlier.nodes[node.earlier], node.bounds, self.carrier
+        (added,) = entry["added"]
+        side = LEAST if added.kind == "least" else MOST
+        present = bounds.most.item(added.index) if side else bounds.least.item(added.index)
+        if added.value < present if side else added.value > present:
+            bounds.set(added.index, side, added.value, False)
+        evidence = entry["evidence"] or {"steps": (), "closure": None}
+        node.steps = carrier.carry_steps(evidence["steps"], bounds)
+        crossed = (bounds.least > bounds.most).nonzero()[0]
+        if len(crossed):
+            column = crossed.item(0)
+            leans = bool(bounds.leans[:, column].any())
+            closure = {"column": column, "leans": leans}
+            self.context.record.close(node.number, "empty", math.inf, node.steps, closure)
+            return False
+        weighed = carrier.weigh(evidence["closure"])
+        if weighed is None:
+            return True
+        proof = carrier.prove(weighed, bounds)
+        if not weighed.weight:
+            if proof.bound <= 0:
+                return True
+            closure = self.context.record.closure(proof, bounds)
+            self.context.record.close(node.number, "empty", math.inf, node.steps, closure)
+            return False
+        if proof.bound > node.bound:
+            node.bound, node.proof = proof.bound, proof
+        return not self._tied(node, evidence["closure"])
+
+    def _tied(self, node: KeptNode, closure: dict[str, Any]) -> bool:
+        """Close a node whose exact multipliers still show that nothing in it is better."""
+        multipliers = self.carrier.weigh_exactly(closure)
+        if multipliers is None or self.best.beats(node.bound) or not self.best.ties(node.bound):
+            return False
+        bounds, context = node.bounds, self.context
+        bound = context.arithmetic.exact_bound(1, multipliers, bounds.least, bounds.most)
+        if bound is None or not self.best.beats_exactly(bound):
+            return False
+        record = context.record.exact_closure(1, multipliers, bound, bounds)
+        context.record.close(node.number, "beaten", rounded_down(bound), node.steps, record)
+        return True
+
+    def _closure(self, node: KeptNode) -> dict[str, Any] | None:
+        if node.proof is None:
+            return node.inherited
+        return self.context.record.closure(node.proof, node.bounds)
+
+    def _record(self, node: KeptNode, outcome: str) -> dict[str, Any] | None:
+        """Record how a node ended that was not solved again; return its closure."""
+        closure = self._closure(node)
+        self.context.record.close(
+            node.number, outcome, node.bound, node.steps, closure, self._present_basis(node)
+        )
+        return closure
+
+    def _present_basis(self, node: KeptNode) -> np.ndarray | None:
+        """Return the basis of an earlier node in present numbers, where that is a basis still."""
+        if node.basis is None:
+            return None
+        n = len(self.carrier.kept.problem.cost)
+        earlier = np.asarray(node.basis, int)
+        inner, rows = earlier[earlier < n], earlier[earlier >= n] - n
+        columns, rows = self.carrier.places.columns[inner], self.carrier.row_map[rows]
+        if (columns < 0).any() or (rows < 0).any():
+            return None
+        return np.concatenate((columns, rows + len(self.problem.cost)))
+
+    def _expand(self, node: KeptNode) -> None:
+        """Put the children of an earlier split node in its place."""
+        best, bounds = self.best, node.bounds
+        closure = self._closure(node)
+        if node.proof is not None and best.value is not None:
+            changes = tighten_by_cost(node.proof, best.threshold, bounds, self.problem.whole)
+            if changes:
+                node.steps.append(
+                    {"by": "cost", "changes": changes, "closure": closure, "leans": True,
+                     "target": best.threshold}
+                )  # fmt: skip
+        basis = self._present_basis(node)
+        self.context.record.close(node.number, "split", node.bound, node.steps, closure, basis)
+        self._take_up_children(
+            node.earlier, node.number, bounds, node.bound, closure, node.depth, node.basis
+        )
+
+    def _reopen(self, node: KeptNode) -> Node | None:
+        """Solve an earlier node again from its own basis; return the child to dive into."""
+        started = perf_counter()
+        context = self.context
+        context.nodes += 1
+        self.reopened += 1
+        dictionary = opened(context, self.carrier, node.basis, node.bounds, self.held)
+        total = context.pivots
+        work = NodeWork(
+            context, node.number, node.bound, self._closure(node), dictionary, node.bounds
+        )
+        work.steps = node.steps
+        split = work.develop()
+        context.pivots += work.dictionary.pivots
+        entry = self.tree.nodes[node.number]
+        entry["pivots"] = context.pivots - total
+        entry["seconds"] = perf_counter() - started
+        return None if split is None else self._branch(work, node.depth, split)
+
+
+def opened(
+    context: Context,
+    carrier: Carrier,
+    basis: np.ndarray | None,
+    bounds: Bounds,
+    held: np.ndarray,
+) -> Dictionary:
+    """Return the dictionary of an earlier basis, or one made from nothing where that is no use.
+
+    Parameters
+    ----------
+    basis : of the earlier search, None where none was kept
+    bounds : of the node
+    held : numbers of the rows to hold
+    """
+    rows, cost = context.rows, context.problem.cost
+    found = carrier.basis(basis, bounds, held)
+    if found is not None:
+        dictionary = Dictionary.at_basis(rows, cost, bounds.least, bounds.most, found)
+        if not dictionary.dual_infeasible():
+            return dictionary
+    return cold_start(rows, cost, bounds.least, bounds.most, held, context.limits.out_of_time)
