@@ -147,7 +147,7 @@ def worth(
     prices = relaxation_prices(standing.sheet, stop)
     entries = sorted((item.worth(prices) for item in items), key=_rank)
     ended_by = weighing.ended_by if any(entry.unsettled for entry in entries) else None
-    return WorthTable(standing, tuple(entries), tuple(others), ended_by, tuple(floors))
+    return WorthTable(standing, tuple(entries), tuple(others), tuple(floors), ended_by)
 
 
 def _limits_of(sheet: Sheet) -> Iterator[tuple[str, dict[Side, Number]]]:
