@@ -515,7 +515,13 @@ def entry(name: str, **parts) -> Worth:
 
 def worths(text: str, *entries: Worth, others=(), floors=(), ended_by=None) -> str:
     standing = solve(Sheet.parse(text))
-    table = WorthTable(standing, entries, tuple(others), tuple(floors), ended_by)
+    table = WorthTable(
+        standing=standing,
+        entries=entries,
+        others=tuple(others),
+        floors=tuple(floors),
+        ended_by=ended_by,
+    )
     json.dumps(worth_data(table), allow_nan=False)
     return worth_text(table)
 
