@@ -2,6 +2,7 @@
 
 import doctest
 import math
+from contextlib import contextmanager
 from dataclasses import replace
 from fractions import Fraction
 
@@ -10,6 +11,7 @@ import pytest
 
 import intplan.planning.clash
 from intplan import IntplanError, Sheet, solve
+from intplan.planning.budget import Budget
 from intplan.planning.clash import Clash, broken_members, clash, find_clash, member_names, settle
 from intplan.planning.give import bendable_rules
 from intplan.sheet.model import Activity, Aim, Rule
@@ -106,7 +108,7 @@ def test_new_rules_rather_stay():
     sheet = Sheet.parse(text)
     standing = solve(sheet)
     for name in ("one", "two"):
-        found = find_clash(sheet, standing, (), intplan.planning.budget.Budget(), last=[name])
+        found = find_clash(sheet, standing, (), Budget(), last=[name])
         assert found.names == (name, "a most")
 
 
@@ -114,9 +116,7 @@ def test_a_known_plan_is_a_witness_without_a_search(monkeypatch):
     sheet = Sheet.parse('[activities]\na = { least = -inf, most = 5 }\n[rules]\nmore = "a >= 7"')
     standing = solve(sheet)
     tested = []
-    work = intplan.planning.clash._Filter(
-        standing, intplan.planning.budget.Budget(), ["more"], [[5], [7]]
-    )
+    work = intplan.planning.clash._Filter(standing, Budget(), ["more"], [[5], [7]])
     monkeypatch.setattr(work, "_test", lambda *what: tested.append(what))
     work.run()
     assert work.witnesses == {"more": [5], "a most": [7]} and not tested
@@ -162,6 +162,32 @@ def test_a_node_limit_leaves_an_honest_clash():
     found = clash(standing, node_limit=1)
     assert {"oak", "inn", "school"} <= set(found.names)
     assert found.smallest == (set(found.names) == set(found.witnesses))
+
+
+def test_a_clash_cut_short_goes_on_after_the_give(monkeypatch):
+    @contextmanager
+    def ended(self):
+        deadline, self.deadline = self.deadline, 0.0
+        yield
+        self.deadline = deadline
+
+    monkeypatch.setattr(Budget, "halved", ended)
+    found = clash(solve(Sheet.parse(JOINERY)), time_limit=60)
+    assert found.names == ("oak", "inn", "school") and found.smallest
+    assert set(found.give.alone) <= set(found.names)
+
+
+def test_a_test_ended_by_the_time_is_not_the_end_of_the_filter(monkeypatch):
+    sheet = Sheet.parse(JOINERY)
+    budget = Budget(time_limit=60)
+    work = intplan.planning.clash._Filter(solve(sheet), budget, (), ())
+
+    def slow(members, most_nodes):
+        budget.deadline = 0.0
+        return intplan.planning.clash._Test()
+
+    monkeypatch.setattr(work, "_test", slow)
+    assert work.run() is False and not work.smallest
 
 
 @pytest.mark.parametrize(

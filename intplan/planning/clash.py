@@ -326,6 +326,8 @@ class _Filter:
                 if self.budget.ended_by() is not None:
                     return False
                 self._try_without(name, most_nodes)
+            if self.budget.ended_by() is not None:
+                return self.smallest
             if len(self.members) == before:
                 if most_nodes is None:
                     return True
