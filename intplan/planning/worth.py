@@ -10,13 +10,14 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from functools import partial
 from typing import Any, Literal, NamedTuple
 
 from intplan.errors import IntplanError
 from intplan.planning.budget import LEAST_TIME, Budget
 from intplan.planning.prices import Prices, Side, relaxation_prices
 from intplan.planning.restart import restarted, support
-from intplan.planning.standing import StandingPlan
+from intplan.planning.standing import StandingPlan, solve
 from intplan.sheet.changes import change_sheet
 from intplan.sheet.model import Sheet
 from intplan.sheet.numbers import Number, lowest
@@ -25,7 +26,10 @@ Progress = Callable[[int, int], None]
 
 SIDES: tuple[Side, Side] = ("least", "most")
 FLOOR: dict[Side, Number] = {"least": 0}
-FIRST_NODES = 500  # nodes for a figure; one that takes more waits until the others are settled
+# Nodes for a figure by the kept tree: so many, and so many for each that the tree took. One that
+# takes more waits until the others are settled, and is then looked at afresh: where loosening took
+# the cuts away that made the tree small, the kept tree is of no help.
+FIRST_NODES = 100, 2
 LAST_NODES = 20_000  # nodes for such a figure where no limit is given: some would never end
 NO_OPTIMUM = {
     "within_gap": "this one is within a gap; solve the sheet without one",
@@ -280,12 +284,15 @@ class _Weighing:
         """Fill in the gains: the easy ones first, then those that took more than a few nodes."""
         tasks = [(item, "waived") for item in items]
         tasks += [(item, side) for item in items for side in item.limits]
-        self.round(tasks, FIRST_NODES)
+        few, times = FIRST_NODES
+        self.round(tasks, few + times * self.standing.search.nodes)
         hard = [task for task in tasks if task[0].gain(task[1]).ended_by in ("nodes", "time")]
         unlimited = self.budget.deadline is None and self.budget.nodes is None
-        self.round(hard, LAST_NODES if unlimited else None)
+        self.round(hard, LAST_NODES if unlimited else None, afresh=True)
 
-    def round(self, tasks: list[tuple[_Item, str]], most_nodes: int | None) -> None:
+    def round(
+        self, tasks: list[tuple[_Item, str]], most_nodes: int | None, afresh: bool = False
+    ) -> None:
         """Look once at each figure, within so many nodes and a fair share of the time."""
         for done, (item, task) in enumerate(tasks):
             if self.progress is not None:
@@ -296,19 +303,23 @@ class _Weighing:
             if ended_by is not None:
                 self.ended_by = ended_by
                 return
-            gain = self.gain(item.change(task), most_nodes, len(tasks) - done)
+            changes = change_sheet(self.standing.sheet, **item.change(task))
+            warm = partial(restarted, self.standing, changes)
+            search = partial(solve, changes.sheet) if afresh else warm
+            gain = self.gain(search, most_nodes, len(tasks) - done)
             self.ended_by = gain.ended_by or self.ended_by
             item.gains[task] = item.gain(task).narrowed(gain)
 
-    def gain(self, change: dict[str, Any], most_nodes: int | None, left: int) -> _Gain:
-        """Return what is known of the gain by a change, given one of `left` shares of the time."""
-        changes = change_sheet(self.standing.sheet, **change)
+    def gain(
+        self, search: Callable[..., StandingPlan], most_nodes: int | None, left: int
+    ) -> _Gain:
+        """Return the gain that a search finds, given one of `left` shares of the time."""
 
-        def search(*, time_limit: float | None, **limits: Any) -> StandingPlan:
+        def shared(*, time_limit: float | None, **limits: Any) -> StandingPlan:
             share = None if time_limit is None else max(time_limit / left, LEAST_TIME)
-            return restarted(self.standing, changes, time_limit=share, **limits)
+            return search(time_limit=share, **limits)
 
-        after = self.budget.run(search, most_nodes=most_nodes)
+        after = self.budget.run(shared, most_nodes=most_nodes)
         if after.outcome == "unbounded":
             return _Gain(0, None, runs_away=True)
         if after.outcome not in ("optimal", "unfinished"):
