@@ -153,12 +153,12 @@ def settle(
         raise TypeError(f"expected a Sheet or a StandingPlan, not {type(sheet).__name__}")
     bendable = bendable_rules(sheet, may_bend)
     if isinstance(subject, StandingPlan) and (
-        subject.result.plan is not None or subject.outcome == "infeasible"
+        subject.exact_plan is not None or subject.outcome == "infeasible"
     ):
         standing = subject
     else:
         standing = budget.run(solve, replace(sheet, aim=Aim()), progress=progress)
-    if standing.result.plan is not None:
+    if standing.exact_plan is not None:
         return Verdict("feasible", standing, None)
     if standing.outcome != "infeasible":
         return Verdict("undecided", standing, None)
@@ -288,7 +288,6 @@ class _Filter:
 
         self.sheet = standing.sheet
         self.budget = budget
-        self.known = known
         self.proof = standing
         self.witnesses: dict[str, Sequence[Number]] = {}
         endless = {r.name for r in self.sheet.rules if r.give is not None and r.give_most is None}
@@ -296,6 +295,7 @@ class _Filter:
         late = set(last)
         self.order = [n for n in names if n not in late] + [n for n in names if n in late]
         self.members = set(names) & support(standing)
+        self.known = [(a, broken_members(self.sheet, self.members, a)) for a in known]
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -337,8 +337,8 @@ class _Filter:
     def _try_without(self, name: str, most_nodes: int | None) -> None:
         """Drop a member if no plan meets the others, else keep the plan that does."""
         others = self.members - {name}
-        for amounts in self.known:
-            if not broken_members(self.sheet, others, amounts):
+        for amounts, broken in self.known:
+            if not broken & others:
                 self.witnesses[name] = amounts
                 return
         test = self._test(others, most_nodes)
