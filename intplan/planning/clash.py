@@ -199,14 +199,17 @@ def find_clash(
     work = _Filter(standing, budget, last, known)
     with budget.halved():
         complete = work.run()
-    give = find_give(sheet, work.names, may_bend, budget, progress)
+    needs_whole, names = _needs_whole(sheet, work.members, budget), work.names
+    give = find_give(sheet, names, may_bend, budget, progress)
     if not complete:
         work.run()
+        if not needs_whole and work.names != names:  # what fits a set fits any part of it
+            needs_whole = _needs_whole(sheet, work.members, budget)
     alone = {name: bending for name, bending in give.alone.items() if name in work.members}
     return Clash(
         sheet=sheet,
         names=work.names,
-        needs_whole=_needs_whole(sheet, work.members, budget),
+        needs_whole=needs_whole,
         smallest=work.smallest,
         witnesses={name: work.witness(name) for name in work.names if name in work.witnesses},
         give=replace(give, alone=alone),
