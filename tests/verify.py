@@ -173,10 +173,14 @@ class Checker:
     problem : the integers; its `exact_cost` is what the tree's bounds speak of
     tree, cuts : the evidence
     claim : no plan costs less, None for plus infinity
+    aimless : the tree looks for any plan, so that its bounds prove nothing and claim nothing
     """
 
-    def __init__(self, problem: Problem, tree: Any, cuts: Sequence[Any], claim: Any) -> None:
+    def __init__(
+        self, problem: Problem, tree: Any, cuts: Sequence[Any], claim: Any, aimless: bool = False
+    ) -> None:
         self.problem = problem
+        self.aimless = aimless
         self.tree = tree
         self.cuts = cuts
         self.claim = claim
@@ -299,6 +303,9 @@ class Checker:
         if "column" in closure or "row" in closure:
             require(outcome == "empty", "a missing value makes a node empty")
             return self.check_missing(closure, box, free)
+        if self.aimless and closure["weight"] == 1:
+            ended = outcome == "split" or self.claim_is_nothing
+            return require(ended, "a bound closes nothing without an aim")
         bound = self.check_closure(closure, box, free)
         if closure["weight"] == 0:
             return require(outcome == "empty", "a contradiction makes a node empty")
@@ -895,7 +902,26 @@ def walk_for_any(problem: Problem, result: Any) -> Summary:
     """Check the tree of a search for any plan: its steps, cuts and closed nodes."""
     stand_in = drawn_home(problem) if result.any_plan else problem
     claim = -math.inf if result.plan is not None or result.outcome == "unfinished" else None
-    return Checker(stand_in, result.tree, result.cuts, claim).walk()
+    return Checker(stand_in, result.tree, result.cuts, claim, aimless=result.any_plan).walk()
+
+
+def verify_standing(standing: Any, gap: Number = 0) -> Summary:
+    """Check a standing plan; its tree may speak of its sheet without some soft rules.
+
+    Those came later, and the plan meets them without bending: they take plans away or make them
+    dearer, so what was proven without them holds with them.
+    """
+    sheet, proven, result = standing.sheet, standing.proven_sheet, standing.result
+    if proven is sheet:
+        return verify(sheet.problem(), result, gap)
+    problem, columns = proven.problem(), len(proven.problem().whole)
+    left_out = [rule for rule in sheet.rules if rule.name not in proven.rule_index]
+    require(all(rule.give is not None for rule in left_out), "only soft rules may be left out")
+    if result.plan is not None:
+        require(check_plan(sheet.problem(), result.plan) == result.value, "the value is wrong")
+        require(not any(result.plan[columns:]), "a rule that was left out is bent")
+        result = replace(result, plan=result.plan[:columns])
+    return verify(problem, result, gap)
 
 
 def check_optimal(problem: Problem, result: Any, gap: Number) -> None:

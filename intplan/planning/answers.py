@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
-from intplan.planning.standing import StandingPlan, _least_bends
+from intplan.planning.standing import StandingPlan, least_bends
 from intplan.sheet.numbers import Number
 
 if TYPE_CHECKING:
@@ -18,9 +18,9 @@ def amounts_of(standing: StandingPlan) -> list[Number] | None:
 
     Where the aim has no limit, the plan that shows that some plan exists is nothing to keep to.
     """
-    if standing.result.plan is None or standing.outcome == "unbounded":
+    if standing.answer.plan is None or standing.outcome == "unbounded":
         return None
-    return standing.result.plan[: len(standing.sheet.activities)]
+    return standing.answer.plan[: len(standing.sheet.activities)]
 
 
 def with_amounts(
@@ -35,6 +35,6 @@ def with_amounts(
     check : of these amounts, which must be good
     changed : further fields of the result
     """
-    plan = [*amounts, *_least_bends(standing.sheet, check)]
+    plan = [*amounts, *least_bends(standing.sheet, check)]
     result = replace(standing.result, plan=plan, value=check.value, **changed)
     return StandingPlan(standing.sheet, result)

@@ -94,8 +94,8 @@ def compare(standing: StandingPlan, stop: Callable[[], bool] | None = None) -> C
 
     if standing.outcome == "unbounded":
         raise IntplanError("the aim has no limit, so there are no bounds to compare", None)
-    problem, result = standing.sheet.problem(), standing.result
-    names = column_names(standing.sheet)
+    problem, result = standing.proven_sheet.problem(), standing.result
+    names = column_names(standing.proven_sheet)
 
     def in_aim_units(cost: float | None) -> float | None:
         if cost is None or result.any_plan:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from fractions import Fraction
 from functools import cached_property
 from typing import Any
@@ -182,21 +182,11 @@ def _answer(
         if standing.outcome == "infeasible" or (
             amounts is not None and stands(changes, standing.sheet, amounts)
         ):
-            return _carried(standing, changes)
+            return standing.carried(changes)
     from intplan.planning.restart import restarted
 
     after = budget.run(restarted, standing, changes, gap=gap, progress=progress)
     return _keep(standing, after)
-
-
-def _carried(standing: StandingPlan, changes: Changes) -> StandingPlan:
-    """Return the answer as that of the changed sheet, whose new soft rules are not bent."""
-    plan = standing.result.plan
-    if plan is not None:
-        new = changes.sheet.rules[len(standing.sheet.rules) :]
-        sides = [limit for r in new if r.give is not None for limit in (r.least, r.most)]
-        plan = plan + [0] * (len(sides) - sides.count(None))
-    return StandingPlan(changes.sheet, replace(standing.result, plan=plan))
 
 
 def stands(changes: Changes, before: Sheet, amounts: Sequence[Number]) -> bool:

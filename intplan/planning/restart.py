@@ -4,10 +4,15 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from fractions import Fraction
+from typing import TYPE_CHECKING
 
-from intplan.planning.standing import Progress, StandingPlan, confirmed, solve
+from intplan.planning.standing import Progress, StandingPlan, confirmed, least_bends, solve
 from intplan.sheet import Sheet
 from intplan.sheet.changes import Changes
+from intplan.sheet.numbers import Number
+
+if TYPE_CHECKING:
+    from intplan.search.carry import Places
 
 
 def restarted(
@@ -30,9 +35,6 @@ def restarted(
     gap, time_limit, node_limit, progress, stop : as of `intplan.solve`
     at : "root" or "leaves" to force where the search is taken up; see `intplan.search.restart`
     """
-    import numpy as np
-
-    from intplan.search.carry import Places
     from intplan.search.limits import Limits
     from intplan.search.restart import restart
 
@@ -41,11 +43,10 @@ def restarted(
             changes.sheet, gap=gap, time_limit=time_limit, node_limit=node_limit,
             progress=progress, stop=stop,
         )  # fmt: skip
-    rules = np.array([-1 if place is None else place for place in changes.places], int)
     result = restart(
         changes.sheet.problem(),
         standing.kept,
-        Places(rules, _columns(standing.sheet, changes.sheet, changes.places)),
+        _places(standing, changes),
         Limits(time_limit, node_limit, stop, progress),
         gap=gap,
         plan=_plan(standing, changes.sheet),
@@ -56,39 +57,35 @@ def restarted(
 
 def restartable(standing: StandingPlan) -> bool:
     """Tell whether a standing plan's tree is one that can be taken up with its sheet's aim."""
-    result = standing.result
+    result = standing.answer
     return not result.any_plan and result.outcome != "unbounded"
 
 
-def _columns(before: Sheet, now: Sheet, places):
-    """Return where the columns of a sheet are in the changed one, -1 for those that are gone."""
+def _places(standing: StandingPlan, changes: Changes) -> Places:
+    """Return where the rules and columns of a standing plan's tree are in a changed sheet."""
     import numpy as np
 
-    activities = len(before.activities)
-    columns = list(range(activities))
-    new = {(bend.rule, bend.side): bend.column for bend in now.problem().bends}
+    from intplan.search.carry import Places
+
+    before, index = standing.proven_sheet, standing.sheet.rule_index
+    found = [changes.places[index[rule.name]] for rule in before.rules]
+    columns = list(range(len(before.activities)))
+    bends = {(bend.rule, bend.side): bend.column for bend in changes.sheet.problem().bends}
     for bend in before.problem().bends:
-        columns.append(new.get((places[bend.rule], bend.side), -1))
-    return np.array(columns, int)
+        place = found[bend.rule]
+        columns.append(-1 if place is None else bends.get((place, bend.side), -1))
+    rules = [-1 if place is None else place for place in found]
+    return Places(np.array(rules, int), np.array(columns, int))
 
 
-def _plan(standing: StandingPlan, sheet: Sheet):
+def _plan(standing: StandingPlan, sheet: Sheet) -> list[Number] | None:
     """Return the standing plan with the bends it needs in a changed sheet; None without one."""
-    plan = standing.result.plan
-    if plan is None:
+    if standing.answer.plan is None:
         return None
-    amounts = plan[: len(sheet.activities)]
-    bends = sheet.problem().bends
-    if not bends:
+    amounts = standing.answer.plan[: len(sheet.activities)]
+    if not sheet.problem().bends:
         return amounts
-    check = sheet.check(amounts)
-    return [
-        *amounts,
-        *(
-            check.rules[bend.rule].bend if check.rules[bend.rule].side == bend.side else 0
-            for bend in bends
-        ),
-    ]
+    return [*amounts, *least_bends(sheet, sheet.check(amounts))]
 
 
 def support(standing: StandingPlan) -> set[str]:

@@ -5,11 +5,11 @@ from __future__ import annotations
 import math
 import numbers
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 from dataclasses import dataclass, replace
 from fractions import Fraction
 from functools import cached_property
-from typing import TYPE_CHECKING, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 from intplan.errors import IntplanError
 from intplan.planning.naming import named_tree
@@ -20,8 +20,11 @@ from intplan.sheet.numbers import Number
 if TYPE_CHECKING:
     import networkx as nx
 
+    from intplan.planning.replan import Replan
+    from intplan.planning.worth import WorthTable
     from intplan.search import SearchResult
     from intplan.search.carry import Kept
+    from intplan.sheet.changes import Changes
     from intplan.sheet.checking import CheckResult
 
 Progress = Callable[[Number | None, Number | None], None]
@@ -56,7 +59,7 @@ class StandingPlan:
     @property
     def outcome(self) -> str:
         """``optimal``, ``within_gap``, ``infeasible``, ``unbounded`` or ``unfinished``."""
-        return self.result.outcome
+        return self.answer.outcome
 
     @property
     def ended_by(self) -> str | None:
@@ -65,17 +68,17 @@ class StandingPlan:
         ``range`` means that a whole activity would have to be branched on beyond the magnitude
         at which the search gives up.
         """
-        return self.result.ended_by
+        return self.answer.ended_by
 
     @property
     def exact_value(self) -> Number | None:
         """The aim of the plan, bend prices included, as an int or a Fraction; None without one."""
-        return self.result.value
+        return self.answer.value
 
     @property
     def exact_bound(self) -> Number | None:
         """What no plan can pass, as an int or a Fraction; None where nothing finite is proven."""
-        return self.result.bound
+        return self.answer.bound
 
     @property
     def value(self) -> int | float | None:
@@ -90,7 +93,7 @@ class StandingPlan:
     @cached_property
     def exact_plan(self) -> dict[str, Number] | None:
         """The amount of each activity by name, as an int or a Fraction; None without a plan."""
-        return _by_name(self.sheet, self.result.plan)
+        return _by_name(self.sheet, self.answer.plan)
 
     @cached_property
     def plan(self) -> dict[str, int | float] | None:
@@ -102,11 +105,11 @@ class StandingPlan:
     @cached_property
     def bends(self) -> dict[str, Number]:
         """How far each soft rule that bends does so, by name, in the units it is written in."""
-        if self.result.plan is None:
+        if self.answer.plan is None:
             return {}
         used: dict[str, Number] = {}
         for bend in self.sheet.problem().bends:
-            if amount := self.result.plan[bend.column]:
+            if amount := self.answer.plan[bend.column]:
                 name = self.sheet.rules[bend.rule].name
                 used[name] = used.get(name, 0) + amount
         return used
@@ -114,20 +117,20 @@ class StandingPlan:
     @cached_property
     def ray(self) -> dict[str, Number] | None:
         """If the aim has no limit: the activities that run away, and in what proportion."""
-        steps = _by_name(self.sheet, self.result.ray)
+        steps = _by_name(self.sheet, self.answer.ray)
         return steps and {name: step for name, step in steps.items() if step}
 
     @cached_property
     def check(self) -> CheckResult | None:
         """The plan held against the sheet, exactly; None without a plan."""
-        if self.result.plan is None:
+        if self.answer.plan is None:
             return None
-        return self.sheet.check(self.result.plan[: len(self.sheet.activities)])
+        return self.sheet.check(self.answer.plan[: len(self.sheet.activities)])
 
     @property
     def search(self) -> SearchNumbers:
         """What the search took."""
-        result = self.result
+        result = self.answer
         return SearchNumbers(result.nodes, result.pivots, len(result.cuts), result.seconds)
 
     @cached_property
@@ -139,14 +142,73 @@ class StandingPlan:
         rows it adds to its parent), `pivots`, `seconds`, `start` (``warm`` or ``cold``) and
         `evidence` (what closed it, in the search's own numbering).
         """
-        return named_tree(self.sheet, self.result)
+        return named_tree(self.proven_sheet, self.result)
+
+    @property
+    def answer(self) -> SearchResult:
+        """What is known of the plan; the tree and the cuts in it may be those of another sheet."""
+        return self.result
+
+    @cached_property
+    def proven_sheet(self) -> Sheet:
+        """The sheet that the tree speaks of.
+
+        It lacks the soft rules that came after the tree was made and that the plan meets without
+        bending: they take plans away or make them dearer, so no plan became better.
+        """
+        return sheet_without(self.sheet, self.result.tree.graph.get("without", ()))
 
     @cached_property
     def kept(self) -> Kept:
         """The search as one that a changed sheet can take up."""
         from intplan.search.carry import Kept
 
-        return Kept(self.sheet.problem(), self.result)
+        return Kept(self.proven_sheet.problem(), self.result)
+
+    def replan(self, **changes: Any) -> Replan:
+        """Tell what a change of rules does to this plan, which itself stays as it is.
+
+        Parameters
+        ----------
+        changes : `add`, `waive`, `set`, `freeze`, `stay_close`, `may_bend` and limits, as of
+            `intplan.planning.replan.replan`
+
+        Raises
+        ------
+        IntplanError
+            A change, a name or a limit makes no sense.
+        """
+        from intplan.planning.replan import replan
+
+        return replan(self, **changes)
+
+    def worth(self, **options: Any) -> WorthTable:
+        """Tell what each rule and bound costs the aim.
+
+        Parameters
+        ----------
+        options : as of `intplan.planning.worth.worth`
+
+        Raises
+        ------
+        IntplanError
+            The plan is not proven best, or a limit makes no sense.
+        """
+        from intplan.planning.worth import worth
+
+        return worth(self, **options)
+
+    def carried(self, changes: Changes) -> StandingPlan:
+        """Return this answer as that of a changed sheet, in which it stands.
+
+        Parameters
+        ----------
+        changes : of this sheet; they loosen nothing, and the plan meets what they added and
+            tightened, without bending further for it
+        """
+        from intplan.planning.carried import CarriedPlan
+
+        return CarriedPlan(self, changes)
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the standing plan to a JSON file, whole or not at all.
@@ -237,6 +299,14 @@ def solve(
     return StandingPlan(sheet, confirmed(sheet, result))
 
 
+def sheet_without(sheet: Sheet, names: Collection[str]) -> Sheet:
+    """Return a sheet without some of its rules."""
+    if not names:
+        return sheet
+    rules = tuple(rule for rule in sheet.rules if rule.name not in names)
+    return sheet.with_rules(sheet.activities, rules, sheet.warnings)
+
+
 def confirmed(sheet: Sheet, result: SearchResult) -> SearchResult:
     """Hold what a search found against the sheet, exactly.
 
@@ -268,7 +338,7 @@ def confirmed(sheet: Sheet, result: SearchResult) -> SearchResult:
         raise AssertionError("the search gave a plan that passes its bound")
     if check.value == result.value:
         return result
-    plan = [*result.plan[:activities], *_least_bends(sheet, check)]
+    plan = [*result.plan[:activities], *least_bends(sheet, check)]
     return replace(result, plan=plan, value=check.value)
 
 
@@ -314,7 +384,7 @@ def _exact_percent(gap: object) -> Fraction:
     raise IntplanError("a gap is a percentage from 0 to 100, such as 0.5", where="gap")
 
 
-def _least_bends(sheet: Sheet, check: CheckResult) -> list[Number]:
+def least_bends(sheet: Sheet, check: CheckResult) -> list[Number]:
     """Return how far each bend column must go for a plan, in the order of the columns."""
     return [
         check.rules[bend.rule].bend if check.rules[bend.rule].side == bend.side else 0

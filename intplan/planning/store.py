@@ -25,7 +25,7 @@ import numpy as np
 from intplan.errors import IntplanError, PlanFileError
 from intplan.files import read_file, write_atomically
 from intplan.planning.encoding import Decoder, EncodingError, decode_number, encode
-from intplan.planning.standing import StandingPlan, confirmed
+from intplan.planning.standing import StandingPlan, confirmed, sheet_without
 from intplan.sheet import Sheet
 from intplan.sheet.numbers import fraction_text
 
@@ -221,7 +221,7 @@ def _read_content(content: dict[str, Any], where: str) -> StandingPlan:
     if set(content) != {"sheet", "result"} or not isinstance(record, dict):
         raise _Damage("it has not exactly a sheet and a result")
     sheet = Sheet.from_record(content["sheet"], where)
-    result = _read_result(record, sheet.problem())
+    result = _read_result(record, sheet)
     try:
         result = confirmed(sheet, result)
     except AssertionError as error:
@@ -229,7 +229,7 @@ def _read_content(content: dict[str, Any], where: str) -> StandingPlan:
     return StandingPlan(sheet, result)
 
 
-def _read_result(record: dict[str, Any], problem: Problem) -> SearchResult:
+def _read_result(record: dict[str, Any], sheet: Sheet) -> SearchResult:
     from intplan.search import SearchResult
 
     names = {field.name for field in fields(SearchResult)}
@@ -237,6 +237,7 @@ def _read_result(record: dict[str, Any], problem: Problem) -> SearchResult:
         raise _Damage("its result has other parts than a search gives")
     decoder = Decoder()
     parts: dict[str, Any] = {}
+    problem = sheet.problem()
     columns = len(problem.whole)
     for name in names - {"tree", "cuts"}:
         value = record[name]
@@ -246,12 +247,26 @@ def _read_result(record: dict[str, Any], problem: Problem) -> SearchResult:
             parts[name] = None if value is None else _read_amounts(value, columns)
         else:
             parts[name] = decoder.decode(value)
+    proven = sheet_without(sheet, _left_out(record["tree"], sheet, decoder)).problem()
+    columns = len(proven.whole)
     parts["cuts"] = _read_cuts(record["cuts"], columns, decoder)
-    places = columns, len(problem.rows), len(parts["cuts"])
+    places = columns, len(proven.rows), len(parts["cuts"])
     parts["tree"] = _read_tree(record["tree"], *places, decoder)
     result = SearchResult(**parts)
     _check_result(result, problem)
     return result
+
+
+def _left_out(tree: Any, sheet: Sheet, decoder: Decoder) -> tuple[str, ...]:
+    """Return the names of the soft rules that a tree knows nothing of."""
+    notes = tree.get("notes") if isinstance(tree, dict) else None
+    left_out = decoder.decode(notes.get("without", ())) if isinstance(notes, dict) else ()
+    soft = {rule.name for rule in sheet.rules if rule.give is not None}
+    if not isinstance(left_out, tuple) or not all(
+        isinstance(name, str) and name in soft for name in left_out
+    ):
+        raise _Damage("its tree leaves out a rule that is no soft rule")
+    return left_out
 
 
 def _read_amounts(value: Any, columns: int) -> list[Any]:

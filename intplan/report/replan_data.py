@@ -44,7 +44,7 @@ def replan_data(change: Replan) -> Data:
 
 def searched(change: Replan) -> bool:
     """Tell whether the answer took a search, or the old one was carried over."""
-    return change.after.result.tree is not change.before.result.tree
+    return change.after.answer.tree is not change.before.answer.tree
 
 
 def had_plan(change: Replan) -> bool:

@@ -191,6 +191,25 @@ class Carrier:
             return closure
         return {**closure, "rows": self.row_map[rows]}
 
+    def renumbered_step(self, step: dict[str, Any]) -> dict[str, Any]:
+        """Return a step that holds as it is, by the present row numbers."""
+        if step["by"] == "rule":
+            row = int(self.row_map[step["row"]])
+            return step if row == step["row"] else {**step, "row": row}
+        closure = self.renumbered(step["closure"])
+        return step if closure is step["closure"] else {**step, "closure": closure}
+
+    def renumbered_basis(self, basis: np.ndarray) -> np.ndarray | None:
+        """Return an earlier basis by present numbers, None where part of it is gone."""
+        n = len(self.kept.problem.cost)
+        basis = np.asarray(basis, int)
+        columns = self.places.columns[basis[basis < n]]
+        rows = self.row_map[basis[basis >= n] - n]
+        if (columns < 0).any() or (rows < 0).any():
+            return None
+        present = len(self.context.problem.cost)
+        return np.concatenate((columns, rows + present)).astype(np.int32)
+
     # ------------------------------------------------------------------ cuts
 
     def carry_cuts(self, bounds: Bounds) -> np.ndarray:
@@ -221,18 +240,28 @@ class Carrier:
         held = self.row_map[self.rules + np.array(kept.held_cuts, int)]
         return held[held >= first]
 
+    def carry_all_cuts(self) -> None:
+        """Take over every cut of a search whose answer stays the same."""
+        cuts = self.kept.result.cuts
+        self.row_map[self.rules :] = self.context.record.rules + np.arange(len(cuts))
+        for cut in cuts:
+            used = self._rows_used(cut)
+            changed = bool(self.changed_rules[used[used < self.rules]].any())
+            self.context.record.note_cut(
+                replace(cut, evidence=self._renumbered_cut(cut, used, changed))
+            )
+
+    @staticmethod
+    def _rows_used(cut: Cut) -> np.ndarray:
+        """Return the earlier rows that a cut was derived from."""
+        evidence = cut.evidence
+        return np.asarray([evidence["row"]] if cut.kind == "cover" else evidence["rows"], int)
+
     def _carried_cut(self, cut: Cut, bounds: Bounds) -> Cut | None:
         """Return a cut as it holds now, None if something that it was derived from does not."""
-        evidence = cut.evidence
-        if cut.kind == "cover":
-            row = evidence["row"]
-            if self.wider_rules[row]:
-                return None
-            used = np.array([row])
-        else:
-            used = np.asarray(evidence["rows"], int)
-            if (self.row_map[used] < 0).any() or self.wider_rules[used[used < self.rules]].any():
-                return None
+        used = self._rows_used(cut)
+        if (self.row_map[used] < 0).any() or self.wider_rules[used[used < self.rules]].any():
+            return None
         if not self.same_columns and not self._unmoved(used):
             return None
         leans = False
@@ -361,12 +390,7 @@ class Carrier:
             present = bounds.most.item(column) if side else bounds.least.item(column)
             if value < present if side else value > present:
                 bounds.set(column, side, value, False)
-        if step["by"] == "rule":
-            row = int(self.row_map[step["row"]])
-            carried.append(step if row == step["row"] else {**step, "row": row})
-            return
-        closure = self.renumbered(step["closure"])
-        carried.append(step if closure is step["closure"] else {**step, "closure": closure})
+        carried.append(self.renumbered_step(step))
 
     def _derive_again(
         self, step: dict[str, Any], bounds: Bounds, carried: list[dict[str, Any]]

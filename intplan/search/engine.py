@@ -310,6 +310,8 @@ class Search:
         if self.best.plan is not None:
             self.ended_by = None
             result = self._result()
+            if self.tree.nodes[0]["evidence"] is None:  # what its cuts used was not recorded
+                result.cuts = []
         else:
             result = find_plan(self.problem, self.limits)
             result.nodes += self.context.nodes

@@ -288,16 +288,7 @@ class Restart(Search):
         return closure
 
     def _present_basis(self, node: KeptNode) -> np.ndarray | None:
-        """Return the basis of an earlier node in present numbers, where that is a basis still."""
-        if node.basis is None:
-            return None
-        n = len(self.carrier.kept.problem.cost)
-        earlier = np.asarray(node.basis, int)
-        inner, rows = earlier[earlier < n], earlier[earlier >= n] - n
-        columns, rows = self.carrier.places.columns[inner], self.carrier.row_map[rows]
-        if (columns < 0).any() or (rows < 0).any():
-            return None
-        return np.concatenate((columns, rows + len(self.problem.cost)))
+        return None if node.basis is None else self.carrier.renumbered_basis(node.basis)
 
     def _expand(self, node: KeptNode) -> None:
         """Put the children of an earlier split node in its place."""

@@ -48,7 +48,7 @@ class RootWork(NodeWork):
             Where the aim improves for ever along a direction, as far as doubles can tell.
         """
         self.context.prover.set_box(self.bounds.least, self.bounds.most)
-        if not (self._round_bounds() and self._round_rules() and self._derive_bounds()):
+        if not (self.round_limits() and self._derive_bounds()):
             return False
         self.context.prover.set_box(self.bounds.least, self.bounds.most)
         self.free = self.bounds.copy()
@@ -152,6 +152,10 @@ class RootWork(NodeWork):
             dictionary.drop_rows(places)
 
     # ------------------------------------------------------------------ tightening
+
+    def round_limits(self) -> bool:
+        """Round bounds and limits to what whole activities can reach; False if that closes it."""
+        return self._round_bounds() and self._round_rules()
 
     def _round_bounds(self) -> bool:
         """Round the bounds of whole activities inward."""
