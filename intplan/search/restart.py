@@ -106,11 +106,10 @@ class KeptRoot(RootWork):
         context, carrier = self.context, self.carrier
         if self.plan is not None and context.arithmetic.fits(self.plan):
             context.best.offer(list(self.plan))
+        cuts = carrier.carry_cuts(self.bounds)
         root = carrier.kept.result.tree.nodes[0]
         trials = [s for s in (root["evidence"] or {"steps": ()})["steps"] if s["by"] == "trial"]
         self.steps += carrier.carry_steps(trials, self.bounds)
-        self.free = self.bounds.copy()
-        cuts = carrier.carry_cuts(self.bounds)
         held = np.concatenate((np.arange(context.record.rules), cuts))
         self.dictionary = opened(context, carrier, root["basis"], self.bounds, held)
 
