@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 from intplan.planning.standing import Progress, StandingPlan, confirmed, least_bends, solve
 from intplan.sheet import Sheet
-from intplan.sheet.changes import Changes
+from intplan.sheet.changes import SIDES, Changes
 from intplan.sheet.numbers import Number
 
 if TYPE_CHECKING:
@@ -63,14 +63,19 @@ def restartable(standing: StandingPlan) -> bool:
 
 def _places(standing: StandingPlan, changes: Changes) -> Places:
     """Return where the rules and columns of a standing plan's tree are in a changed sheet."""
+    before, index = standing.proven_sheet, standing.sheet.rule_index
+    found = [changes.places[index[rule.name]] for rule in before.rules]
+    return _numbered(before, changes.sheet, found)
+
+
+def _numbered(before: Sheet, now: Sheet, found: list[int | None]) -> Places:
+    """Return places in numbers, those of the bends with their rules."""
     import numpy as np
 
     from intplan.search.carry import Places
 
-    before, index = standing.proven_sheet, standing.sheet.rule_index
-    found = [changes.places[index[rule.name]] for rule in before.rules]
     columns = list(range(len(before.activities)))
-    bends = {(bend.rule, bend.side): bend.column for bend in changes.sheet.problem().bends}
+    bends = {(bend.rule, bend.side): bend.column for bend in now.problem().bends}
     for bend in before.problem().bends:
         place = found[bend.rule]
         columns.append(-1 if place is None else bends.get((place, bend.side), -1))
@@ -88,15 +93,27 @@ def _plan(standing: StandingPlan, sheet: Sheet) -> list[Number] | None:
     return [*amounts, *least_bends(sheet, sheet.check(amounts))]
 
 
-def support(standing: StandingPlan) -> set[str]:
-    """Return the rules and bounds (``loaf most``) that some kept closure, step or cut uses."""
-    sheet = standing.sheet
-    names = {rule.name for rule in sheet.rules}
-    for activity in sheet.activities:
-        if activity.least is not None:
-            names.add(f"{activity.name} least")
-        if activity.most is not None:
-            names.add(f"{activity.name} most")
+def support(standing: StandingPlan, strictly: bool = True) -> set[str]:
+    """Return the rules and bounds (``loaf most``) that the kept tree rests on.
+
+    Parameters
+    ----------
+    standing : its tree is gone through
+    strictly : count also what closures use by no more than a rounding error, so that all else is
+        known to be of no account
+    """
+    from intplan.search.support import used_by_tree
+
+    sheet = standing.proven_sheet
+    rules, bounds = used_by_tree(standing.kept, strictly)
+    names = {sheet.rules[i].name for i in rules}
+    activities = len(sheet.activities)
+    bends = sheet.problem().bends
+    for column, side in bounds:
+        if column < activities:
+            names.add(f"{sheet.activities[column].name} {SIDES[side]}")
+        else:
+            names.add(sheet.rules[bends[column - activities].rule].name)
     return names
 
 
@@ -114,12 +131,28 @@ def feasible(
 
     Parameters
     ----------
-    standing : an infeasible standing plan of a sheet with the same activities and more rules or
-        tighter limits, whose tree is taken up; None to start from nothing
+    standing : an infeasible standing plan of a sheet with the same activities, whose tree is taken
+        up; None to start from nothing
     sheet : the rules to meet
     """
-    from dataclasses import replace
+    from intplan.search.engine import find_plan
+    from intplan.search.limits import Limits
+    from intplan.search.restart import restart_for_any_plan
 
-    from intplan.sheet.model import Aim
+    limits = Limits(time_limit, node_limit, stop, None)
+    if standing is None or standing.outcome != "infeasible":
+        result = find_plan(sheet.problem(), limits)
+    else:
+        places = _places_by_name(standing.proven_sheet, sheet)
+        result = restart_for_any_plan(sheet.problem(), standing.kept, places, limits)
+    return StandingPlan(sheet, confirmed(sheet, result))
 
-    return solve(replace(sheet, aim=Aim()), time_limit=time_limit, node_limit=node_limit, stop=stop)
+
+def _places_by_name(before: Sheet, now: Sheet) -> Places:
+    """Return where the rules and columns of a sheet are in one that shares rules with it."""
+    found: list[int | None] = []
+    for rule in before.rules:
+        place = now.rule_index.get(rule.name)
+        same = place is not None and now.rules[place].terms == rule.terms
+        found.append(place if same else None)
+    return _numbered(before, now, found)

@@ -99,6 +99,11 @@ def drawn_home(problem: Problem) -> Problem:
 def find_plan(problem: Problem, limits: Limits) -> SearchResult:
     """Find any whole-unit plan, whatever the aim: optimal means that one was found."""
     result = Search(drawn_home(problem), Fraction(0), limits, first_plan=True).run()
+    return as_any_plan(problem, result)
+
+
+def as_any_plan(problem: Problem, result: SearchResult) -> SearchResult:
+    """Turn the answer of a search with a stand-in aim into one about any plan."""
     result.any_plan = True
     result.bound = None
     if result.plan is not None:

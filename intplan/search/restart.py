@@ -28,7 +28,7 @@ from intplan.search.carry import Carrier, Kept, Places
 from intplan.search.context import Context
 from intplan.search.develop import NodeWork, Split, rounded_down
 from intplan.search.diving import dive
-from intplan.search.engine import Search
+from intplan.search.engine import Search, as_any_plan, drawn_home
 from intplan.search.evidence import LEAST, MOST, Proof
 from intplan.search.limits import Limits
 from intplan.search.node import Node
@@ -45,7 +45,6 @@ def restart(
     limits: Limits,
     gap: Fraction = Fraction(0),
     plan: Sequence[Number] | None = None,
-    first_plan: bool = False,
     at: str | None = None,
 ) -> SearchResult:
     """Find the best whole-unit plan of a changed problem from the tree of the earlier one.
@@ -56,11 +55,23 @@ def restart(
     kept, places : the earlier search, and where its rules and columns are in `problem`
     limits, gap : as in `intplan.search.branch_and_cut`
     plan : the earlier plan in the columns of `problem`; the first in hand if it still fits
-    first_plan : stop at the first plan
     at : "root" to branch anew from the root's basis, "leaves" to take up the earlier tree; by
         default whichever `Restart` expects to be quicker
     """
-    return Restart(problem, gap, limits, first_plan, kept, places, plan, at).run()
+    return Restart(problem, gap, limits, False, kept, places, plan, at).run()
+
+
+def restart_for_any_plan(
+    problem: Problem, kept: Kept, places: Places, limits: Limits
+) -> SearchResult:
+    """Find any whole-unit plan of a changed problem from a tree that found none.
+
+    Parameters are those of `restart`; whatever the aims are, optimal means that a plan was found.
+    """
+    search = Restart(
+        drawn_home(problem), Fraction(0), limits, True, kept, places, plan=None, at=None
+    )
+    return as_any_plan(problem, search.run())
 
 
 @dataclass(slots=True)

@@ -1,0 +1,217 @@
+"""What a finished tree rests on: the rules and the written bounds that its evidence uses."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, field
+from fractions import Fraction
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+
+from intplan.search.carry import Kept
+from intplan.search.evidence import LEAST, MOST
+from intplan.search.result import Cut
+
+OWN = -1  # stands for a bound as the sheet has it
+ROUNDING = 1e-9  # share of a closure's multipliers below which a reduced cost may be an error
+
+
+@dataclass
+class _Fact:
+    """A tightened bound, a branching, a cut or a closure, and what it was derived from.
+
+    Attributes
+    ----------
+    rows : numbers of rules and cuts
+    bounds : numbers ``2 * column + side`` of the sheet's own bounds
+    facts : numbers of other facts
+    """
+
+    rows: Iterable[int] = ()
+    bounds: Iterable[int] = ()
+    facts: Iterable[int] = ()
+
+
+def used_by_tree(kept: Kept, strictly: bool) -> tuple[set[int], set[tuple[int, int]]]:
+    """Return the rules and bounds that the closures of a tree rest on.
+
+    Parameters
+    ----------
+    kept : the search
+    strictly : count also bounds that closures use by no more than a rounding error
+
+    Returns
+    -------
+    rules, bounds
+        Numbers of rules, and pairs (column, side) of finite bounds.
+    """
+    walk = _Walk(kept, strictly)
+    walk.through()
+    return walk.collected()
+
+
+@dataclass
+class _Walk:
+    """One walk through a tree, from the root down.
+
+    Attributes
+    ----------
+    facts : all that was derived, each from earlier ones
+    closures : numbers of the facts that close nodes
+    cuts : the fact of each cut
+    """
+
+    kept: Kept
+    strictly: bool
+    facts: list[_Fact] = field(default_factory=list)
+    closures: list[int] = field(default_factory=list)
+    cuts: list[int] = field(default_factory=list)
+
+    def __post_init__(self) -> None:
+        problem = self.kept.problem
+        self.rules = len(problem.rows)
+        self.matrix = self.kept.store().matrix
+        self.finite = np.array([np.isfinite(problem.least), np.isfinite(problem.most)])
+
+    @cached_property
+    def touched(self) -> list[np.ndarray]:
+        """The columns of each row."""
+        return [line.nonzero()[0] for line in self.matrix]
+
+    def through(self) -> None:
+        """Note every fact of the tree."""
+        tree = self.kept.result.tree
+        sources = np.full((2, len(self.kept.problem.cost)), OWN)
+        waiting = [(0, sources)]
+        while waiting:
+            number, sources = waiting.pop()
+            node = tree.nodes[number]
+            for added in node["added"]:
+                if added.kind != "cut":
+                    side = LEAST if added.kind == "least" else MOST
+                    sources[side, added.index] = self._note(_Fact())
+            evidence = node["evidence"] or {"steps": (), "closure": None}
+            if number == 0:
+                self._note_cuts(sources, evidence["steps"])
+            else:
+                self._note_steps(evidence["steps"], sources)
+            if evidence["closure"] is not None and node["outcome"] != "split":
+                self.closures.append(self._note(self._closure(evidence["closure"], sources)))
+            waiting += [(child, sources.copy()) for child in tree.successors(number)]
+
+    def _note(self, fact: _Fact) -> int:
+        self.facts.append(fact)
+        return len(self.facts) - 1
+
+    def _note_cuts(self, sources: np.ndarray, steps: Sequence[dict[str, Any]]) -> None:
+        """Note the root's steps and, with the bounds before the first that uses a cut, the cuts."""
+        early = [step for step in steps if step["by"] in ("whole", "rule")]
+        self._note_steps(early, sources)
+        for cut in self.kept.result.cuts:
+            self.cuts.append(self._note(self._cut(cut, sources)))
+        self._note_steps([step for step in steps if step not in early], sources)
+
+    def _note_steps(self, steps: Iterable[dict[str, Any]], sources: np.ndarray) -> None:
+        for step in steps:
+            if "row" in step and step["by"] == "whole":
+                continue
+            for column, side, _ in step["changes"]:
+                if step["by"] == "whole":
+                    fact = self._premises([], [2 * column + side], sources)
+                elif step["by"] == "rule":
+                    fact = self._rule_step(step, column, sources)
+                else:
+                    fact = self._closure(step["closure"], sources, (column, side))
+                sources[side, column] = self._note(fact)
+
+    def _premises(
+        self, rows: Iterable[int], bounds: Iterable[int], sources: np.ndarray
+    ) -> _Fact:
+        """Return what rests on rows and on bounds as they are now."""
+        own, facts = [], []
+        for number in bounds:
+            column, side = divmod(int(number), 2)
+            source = int(sources[side, column])
+            if source != OWN:
+                facts.append(source)
+            elif self.finite[side, column]:
+                own.append(int(number))
+        return _Fact([int(i) for i in rows], own, facts)
+
+    def _rule_step(self, step: dict[str, Any], column: int, sources: np.ndarray) -> _Fact:
+        row = step["row"]
+        columns = self.touched[row]
+        columns = columns[columns != column]
+        rising = (self.matrix[row, columns] > 0) == bool(step["limit"])
+        own_side = self.matrix[row, column] > 0
+        opposite = 2 * column + int(own_side != bool(step["limit"]))
+        bounds = [*(2 * columns + ~rising).tolist(), opposite]
+        return self._premises([row], bounds, sources)
+
+    def _closure(
+        self,
+        closure: dict[str, Any],
+        sources: np.ndarray,
+        moved: tuple[int, int] | None = None,
+    ) -> _Fact:
+        """Return what a closure rests on; `moved` is a bound that it takes to be passed."""
+        if "column" in closure:
+            column = closure["column"]
+            return self._premises([], [2 * column, 2 * column + 1], sources)
+        if "row" in closure:
+            return _Fact([closure["row"]])
+        rows = np.asarray(closure["rows"], int)
+        values = closure["multipliers"]
+        if closure["exact"]:
+            values = np.array([float(Fraction(y)) for y in values])
+        parts = values @ self.matrix[rows] if len(rows) else np.zeros(self.matrix.shape[1])
+        reduced = (self.kept.problem.cost if closure["weight"] else 0.0) - parts
+        error = ROUNDING * (1.0 + float(np.abs(values).sum()))
+        least, most = reduced > error, reduced < -error
+        if self.strictly:
+            unclear = (np.abs(reduced) <= error) & self._filled(rows, closure["weight"])
+            least, most = least | unclear, most | unclear
+        numbers = np.concatenate((2 * least.nonzero()[0], 2 * most.nonzero()[0] + 1)).tolist()
+        if moved is not None:
+            column, side = moved
+            numbers = [n for n in numbers if n != 2 * column + 1 - side]
+        return self._premises(rows, numbers, sources)
+
+    def _filled(self, rows: np.ndarray, weight: int) -> np.ndarray:
+        """Tell which columns stand in some of the rows, or in the aim where it counts."""
+        filled = (self.matrix[rows] != 0).any(axis=0)
+        return filled | (self.kept.problem.cost != 0) if weight else filled
+
+    def _cut(self, cut: Cut, sources: np.ndarray) -> _Fact:
+        evidence = cut.evidence
+        if cut.kind == "cover":
+            row = evidence["row"]
+            items = np.array([j for j in self.touched[row]], int)
+            numbers = np.concatenate((2 * items, 2 * items + 1))
+            return self._premises([row], numbers, sources)
+        rows = np.asarray(evidence["rows"], int)
+        numbers = np.asarray(evidence["bounds"], int)
+        if self.strictly:
+            columns = (self.matrix[rows] != 0).any(axis=0).nonzero()[0]
+            numbers = np.union1d(numbers, np.concatenate((2 * columns, 2 * columns + 1)))
+        return self._premises(rows, numbers, sources)
+
+    def collected(self) -> tuple[set[int], set[tuple[int, int]]]:
+        """Return what the closures rest on in the end."""
+        rules: set[int] = set()
+        bounds: set[tuple[int, int]] = set()
+        seen = set(self.closures)
+        waiting = list(seen)
+        while waiting:
+            fact = self.facts[waiting.pop()]
+            bounds.update((number >> 1, number & 1) for number in fact.bounds)
+            for row in fact.rows:
+                if row < self.rules:
+                    rules.add(row)
+            cuts = {self.cuts[row - self.rules] for row in fact.rows if row >= self.rules}
+            further = cuts.union(fact.facts)
+            waiting += further - seen
+            seen |= further
+        return rules, bounds
