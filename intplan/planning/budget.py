@@ -7,7 +7,7 @@ from contextlib import contextmanager
 from time import perf_counter
 from typing import Any
 
-from intplan.planning.standing import StandingPlan, _read_limits
+from intplan.planning.standing import StandingPlan, read_limits
 
 LEAST_TIME = 1e-3  # seconds given to a search that is started all the same
 
@@ -33,7 +33,7 @@ class Budget:
         node_limit: int | None = None,
         stop: Callable[[], bool] | None = None,
     ) -> None:
-        limits = _read_limits(time_limit, 0, node_limit)
+        limits = read_limits(time_limit, 0, node_limit)
         self.deadline = None if limits.seconds is None else perf_counter() + limits.seconds
         self.nodes = limits.nodes
         self.stop = stop

@@ -14,7 +14,7 @@ from intplan.planning.clash import Clash, find_clash
 from intplan.planning.closeness import Closeness, closest, read_percent
 from intplan.planning.give import Give, bendable_rules
 from intplan.planning.numbers import nearest
-from intplan.planning.standing import Progress, StandingPlan, _exact_percent
+from intplan.planning.standing import Progress, StandingPlan, exact_percent
 from intplan.sheet import Sheet
 from intplan.sheet.changes import Changes, change_sheet
 from intplan.sheet.checking import check_rule
@@ -144,7 +144,7 @@ def replan(
     """
     percent = None if stay_close is None else read_percent(stay_close)
     budget = Budget(time_limit, node_limit, stop)
-    share = _exact_percent(gap)
+    share = exact_percent(gap)
     plan = standing.exact_plan if freeze else None
     changes = change_sheet(standing.sheet, add=add, waive=waive, set=set, freeze=freeze, plan=plan)
     bendable = None if may_bend is None else bendable_rules(changes.sheet, may_bend)

@@ -285,7 +285,7 @@ def solve(
     """
     if not isinstance(sheet, Sheet):
         raise TypeError(f"expected a Sheet, such as Sheet.read gives, not {type(sheet).__name__}")
-    limits = _read_limits(time_limit, gap, node_limit)
+    limits = read_limits(time_limit, gap, node_limit)
     from intplan.search import branch_and_cut
 
     result = branch_and_cut(
@@ -342,14 +342,22 @@ def confirmed(sheet: Sheet, result: SearchResult) -> SearchResult:
     return replace(result, plan=plan, value=check.value)
 
 
-class _Limits(NamedTuple):
+class SearchLimits(NamedTuple):
+    """The limits of a search: seconds or None, a gap in percent, nodes or None."""
+
     seconds: float | None
     gap: Fraction
     nodes: int | None
 
 
-def _read_limits(time_limit: object, gap: object, node_limit: object) -> _Limits:
-    """Check the limits of a search."""
+def read_limits(time_limit: object, gap: object, node_limit: object) -> SearchLimits:
+    """Check the limits of a search, as `solve` takes them.
+
+    Raises
+    ------
+    IntplanError
+        If one makes no sense.
+    """
     seconds = None
     if time_limit is not None:
         if not isinstance(time_limit, numbers.Real) or isinstance(time_limit, bool):
@@ -363,15 +371,21 @@ def _read_limits(time_limit: object, gap: object, node_limit: object) -> _Limits
         or node_limit < 1
     ):
         raise IntplanError("a node limit is a whole number from 1", where="node_limit")
-    return _Limits(
+    return SearchLimits(
         None if seconds == math.inf else seconds,
-        _exact_percent(gap),
+        exact_percent(gap),
         None if node_limit is None else int(node_limit),
     )
 
 
-def _exact_percent(gap: object) -> Fraction:
-    """Return the percent as written: a double by its shortest decimal."""
+def exact_percent(gap: object) -> Fraction:
+    """Return a gap in percent as it is written: a double by its shortest decimal.
+
+    Raises
+    ------
+    IntplanError
+        If it is no percentage from 0 to 100.
+    """
     if isinstance(gap, numbers.Real) and not isinstance(gap, bool):
         if isinstance(gap, numbers.Rational):
             percent = Fraction(gap.numerator, gap.denominator)
