@@ -145,6 +145,7 @@ def feasible(
     else:
         places = _places_by_name(standing.proven_sheet, sheet)
         result = restart_for_any_plan(sheet.problem(), standing.kept, places, limits)
+    result.bound = None  # soft rules may be bent further than the plan needs
     return StandingPlan(sheet, confirmed(sheet, result))
 
 
