@@ -470,6 +470,9 @@ def answers() -> list[tuple[Problem, SearchResult]]:
     return kept
 
 
+AIMED = ("bound", "bound of a node")  # a tree that looks for any plan claims no bounds
+
+
 @pytest.mark.parametrize("name", TAMPERINGS)
 def test_tampering_is_noticed(
     name: str, answers: list[tuple[Problem, SearchResult]]
@@ -482,7 +485,7 @@ def test_tampering_is_noticed(
     tried = refused = 0
     for problem, result in answers:
         changed = copy.deepcopy(result)
-        if not tamper(changed):
+        if (result.any_plan and name in AIMED) or not tamper(changed):
             continue
         tried += 1
         try:

@@ -304,7 +304,7 @@ class Checker:
             require(outcome == "empty", "a missing value makes a node empty")
             return self.check_missing(closure, box, free)
         if self.aimless and closure["weight"] == 1:
-            ended = outcome == "split" or self.claim_is_nothing
+            ended = outcome == "split" or (self.claim_is_nothing and outcome != "empty")
             return require(ended, "a bound closes nothing without an aim")
         bound = self.check_closure(closure, box, free)
         if closure["weight"] == 0:

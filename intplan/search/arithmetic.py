@@ -190,13 +190,13 @@ class Arithmetic:
         )
 
     def bound_of(self, column: int, side: int, value: float) -> Number | None:
-        """Return a node's bound exactly: the written one where the double stands for it."""
+        """Return a node's bound exactly: the written one where the double is no tighter."""
         problem = self.problem
         if side:
-            written, double = problem.exact_most[column], problem.most[column]
+            written = problem.exact_most[column] if value >= problem.most[column] else None
         else:
-            written, double = problem.exact_least[column], problem.least[column]
-        return written if value == double else _exact(value)
+            written = problem.exact_least[column] if value <= problem.least[column] else None
+        return _exact(value) if written is None else written
 
     def exact_bound(
         self,

@@ -144,6 +144,18 @@ class Carrier:
             self.scale = _share(before, now, places.aim_rule)
         self.plain = self.shrunk and places.same_aim and self.scale == 1
 
+    def rows_to_look_at(self) -> np.ndarray:
+        """Return the present rules that are new, have other limits or touch other bounds."""
+        before, now = self.kept.problem, self.context.problem
+        there = self.places.rules[self.places.rules >= 0]
+        fresh = np.ones(len(now.rows), bool)
+        fresh[there] = False
+        fresh[self.places.rules[self.changed_rules & (self.places.rules >= 0)]] = True
+        columns = self.places.columns
+        moved = (now.least[columns] != before.least) | (now.most[columns] != before.most)
+        fresh |= (now.matrix[:, columns[moved]] != 0).any(axis=1)
+        return fresh.nonzero()[0]
+
     # ------------------------------------------------------------------ multipliers
 
     def weigh(self, closure: dict[str, Any] | None) -> Weighed | None:

@@ -112,17 +112,28 @@ class KeptRoot(RootWork):
         self.carrier = carrier
         self.plan = plan
 
+    def _derive_bounds(self) -> bool:
+        """Derive bounds from the rules: where nothing was loosened, from those that changed."""
+        carrier = self.carrier
+        if not carrier.plain:
+            return super()._derive_bounds() and self._take_over()
+        return self._take_over() and self._propagate(rows=carrier.rows_to_look_at())
+
+    def _take_over(self) -> bool:
+        """Take over the cuts and the tightened bounds of the earlier root."""
+        self.cuts = self.carrier.carry_cuts(self.bounds)
+        evidence = self.carrier.kept.result.tree.nodes[0]["evidence"] or {"steps": ()}
+        self.steps += self.carrier.carry_steps(evidence["steps"], self.bounds)
+        return not closed_by_crossing(self.context, self.number, self.bounds, self.steps)
+
     def start_from_nothing(self) -> None:
         """Make the first dictionary: that of the earlier root's basis."""
         context, carrier = self.context, self.carrier
         if self.plan is not None and context.arithmetic.fits(self.plan):
             context.best.offer(list(self.plan))
-        cuts = carrier.carry_cuts(self.bounds)
-        root = carrier.kept.result.tree.nodes[0]
-        trials = [s for s in (root["evidence"] or {"steps": ()})["steps"] if s["by"] == "trial"]
-        self.steps += carrier.carry_steps(trials, self.bounds)
-        held = np.concatenate((np.arange(context.record.rules), cuts))
-        self.dictionary = opened(context, carrier, root["basis"], self.bounds, held)
+        held = np.concatenate((np.arange(context.record.rules), self.cuts))
+        basis = carrier.kept.result.tree.nodes[0]["basis"]
+        self.dictionary = opened(context, carrier, basis, self.bounds, held)
 
     def open_relaxation(self) -> Proof | Split | None:
         """Solve the relaxation and find a first plan."""
@@ -250,12 +261,7 @@ class Restart(Search):
             bounds.set(added.index, side, added.value, False)
         evidence = entry["evidence"] or {"steps": (), "closure": None}
         node.steps = carrier.carry_steps(evidence["steps"], bounds)
-        crossed = (bounds.least > bounds.most).nonzero()[0]
-        if len(crossed):
-            column = crossed.item(0)
-            leans = bool(bounds.leans[:, column].any())
-            closure = {"column": column, "leans": leans}
-            self.context.record.close(node.number, "empty", math.inf, node.steps, closure)
+        if closed_by_crossing(self.context, node.number, bounds, node.steps):
             return False
         weighed = carrier.weigh(evidence["closure"])
         if weighed is None:
@@ -335,6 +341,19 @@ class Restart(Search):
         entry["pivots"] = context.pivots - total
         entry["seconds"] = perf_counter() - started
         return None if split is None else self._branch(work, node.depth, split)
+
+
+def closed_by_crossing(
+    context: Context, number: int, bounds: Bounds, steps: list[dict[str, Any]]
+) -> bool:
+    """Close a node in which an activity has no value left; tell whether that is so."""
+    crossed = (bounds.least > bounds.most).nonzero()[0]
+    if not len(crossed):
+        return False
+    column = crossed.item(0)
+    closure = {"column": column, "leans": bool(bounds.leans[:, column].any())}
+    context.record.close(number, "empty", math.inf, steps, closure)
+    return True
 
 
 def opened(

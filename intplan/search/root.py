@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from fractions import Fraction
+from typing import Any
 
 import numpy as np
 
@@ -215,7 +216,11 @@ class RootWork(NodeWork):
 
     def _derive_bounds(self) -> bool:
         """Propagate every rule, divisible activities included."""
-        touched, failed = self.context.propagator.run(self.bounds, [], self.steps, first=True)
+        return self._propagate(first=True)
+
+    def _propagate(self, **how: Any) -> bool:
+        """Propagate rules as `Propagator.run` is told to; False if that closes the root."""
+        touched, failed = self.context.propagator.run(self.bounds, [], self.steps, **how)
         if failed is not None and self._refuted_by_rule(failed):
             return False
         for j in touched:
@@ -228,12 +233,12 @@ class RootWork(NodeWork):
 def _outward(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     """Return the bounds in doubles, those of large whole numbers moved outward where rounded."""
     least, most = problem.least.copy(), problem.most.copy()
-    for j in (np.maximum(np.abs(least), np.abs(most)) > LARGE).nonzero()[0].tolist():
-        low, high = problem.exact_least[j], problem.exact_most[j]
-        if low is not None:
-            least[j] = _outward_double(low, 0)
-        if high is not None:
-            most[j] = _outward_double(high, 1)
+    for side, (bounds, written) in enumerate(
+        ((least, problem.exact_least), (most, problem.exact_most))
+    ):
+        large = problem.whole & np.isfinite(bounds) & (np.abs(bounds) > LARGE)
+        for j in large.nonzero()[0].tolist():
+            bounds[j] = _outward_double(written[j], side)
     return least, most
 
 

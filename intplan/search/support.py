@@ -53,6 +53,33 @@ def used_by_tree(kept: Kept, strictly: bool) -> tuple[set[int], set[tuple[int, i
 
 
 @dataclass
+class _Sources:
+    """The bounds of a node, and the fact that each is known by.
+
+    Attributes
+    ----------
+    facts : (2, columns) numbers of facts, `OWN` for the sheet's own bounds
+    values : (2, columns)
+    """
+
+    facts: np.ndarray
+    values: np.ndarray
+
+    def copy(self) -> _Sources:
+        """Return an independent copy."""
+        return _Sources(self.facts.copy(), self.values.copy())
+
+    def tightens(self, column: int, side: int, value: float) -> bool:
+        """Tell whether a bound is tighter than the present one."""
+        present = self.values[side, column]
+        return bool(value < present if side else value > present)
+
+    def set(self, column: int, side: int, value: float, fact: int) -> None:
+        """Take over a bound."""
+        self.facts[side, column], self.values[side, column] = fact, value
+
+
+@dataclass
 class _Walk:
     """One walk through a tree, from the root down.
 
@@ -83,7 +110,9 @@ class _Walk:
     def through(self) -> None:
         """Note every fact of the tree."""
         tree = self.kept.result.tree
-        sources = np.full((2, len(self.kept.problem.cost)), OWN)
+        problem = self.kept.problem
+        own = np.full((2, len(problem.cost)), OWN)
+        sources = _Sources(own, np.array([problem.least, problem.most]))
         waiting = [(0, sources)]
         while waiting:
             number, sources = waiting.pop()
@@ -91,7 +120,8 @@ class _Walk:
             for added in node["added"]:
                 if added.kind != "cut":
                     side = LEAST if added.kind == "least" else MOST
-                    sources[side, added.index] = self._note(_Fact())
+                    if sources.tightens(added.index, side, added.value):
+                        sources.set(added.index, side, added.value, self._note(_Fact()))
             evidence = node["evidence"] or {"steps": (), "closure": None}
             if number == 0:
                 self._note_cuts(sources, evidence["steps"])
@@ -105,7 +135,7 @@ class _Walk:
         self.facts.append(fact)
         return len(self.facts) - 1
 
-    def _note_cuts(self, sources: np.ndarray, steps: Sequence[dict[str, Any]]) -> None:
+    def _note_cuts(self, sources: _Sources, steps: Sequence[dict[str, Any]]) -> None:
         """Note the root's steps and, with the bounds before the first that uses a cut, the cuts."""
         early = [step for step in steps if step["by"] in ("whole", "rule")]
         self._note_steps(early, sources)
@@ -113,34 +143,36 @@ class _Walk:
             self.cuts.append(self._note(self._cut(cut, sources)))
         self._note_steps([step for step in steps if step not in early], sources)
 
-    def _note_steps(self, steps: Iterable[dict[str, Any]], sources: np.ndarray) -> None:
+    def _note_steps(self, steps: Iterable[dict[str, Any]], sources: _Sources) -> None:
         for step in steps:
             if "row" in step and step["by"] == "whole":
                 continue
-            for column, side, _ in step["changes"]:
+            for column, side, value in step["changes"]:
+                if not sources.tightens(column, side, value):
+                    continue
                 if step["by"] == "whole":
                     fact = self._premises([], [2 * column + side], sources)
                 elif step["by"] == "rule":
                     fact = self._rule_step(step, column, sources)
                 else:
                     fact = self._closure(step["closure"], sources, (column, side))
-                sources[side, column] = self._note(fact)
+                sources.set(column, side, value, self._note(fact))
 
     def _premises(
-        self, rows: Iterable[int], bounds: Iterable[int], sources: np.ndarray
+        self, rows: Iterable[int], bounds: Iterable[int], sources: _Sources
     ) -> _Fact:
         """Return what rests on rows and on bounds as they are now."""
         own, facts = [], []
         for number in bounds:
             column, side = divmod(int(number), 2)
-            source = int(sources[side, column])
+            source = int(sources.facts[side, column])
             if source != OWN:
                 facts.append(source)
             elif self.finite[side, column]:
                 own.append(int(number))
         return _Fact([int(i) for i in rows], own, facts)
 
-    def _rule_step(self, step: dict[str, Any], column: int, sources: np.ndarray) -> _Fact:
+    def _rule_step(self, step: dict[str, Any], column: int, sources: _Sources) -> _Fact:
         row = step["row"]
         columns = self.touched[row]
         columns = columns[columns != column]
@@ -153,7 +185,7 @@ class _Walk:
     def _closure(
         self,
         closure: dict[str, Any],
-        sources: np.ndarray,
+        sources: _Sources,
         moved: tuple[int, int] | None = None,
     ) -> _Fact:
         """Return what a closure rests on; `moved` is a bound that it takes to be passed."""
@@ -184,7 +216,7 @@ class _Walk:
         filled = (self.matrix[rows] != 0).any(axis=0)
         return filled | (self.kept.problem.cost != 0) if weight else filled
 
-    def _cut(self, cut: Cut, sources: np.ndarray) -> _Fact:
+    def _cut(self, cut: Cut, sources: _Sources) -> _Fact:
         evidence = cut.evidence
         if cut.kind == "cover":
             row = evidence["row"]

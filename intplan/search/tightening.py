@@ -105,7 +105,12 @@ class Propagator:
         self._closed += closed
 
     def run(
-        self, bounds: Bounds, changed: list[int], log: list[dict], first: bool = False
+        self,
+        bounds: Bounds,
+        changed: list[int],
+        log: list[dict],
+        first: bool = False,
+        rows: np.ndarray | None = None,
     ) -> tuple[list[int], int | None]:
         """Propagate from changed activities until little more comes of it.
 
@@ -115,6 +120,7 @@ class Propagator:
         changed : the activities whose bounds have just changed
         log : receives one record a row and activity that tightened a bound
         first : also tighten divisible activities, and look at every row
+        rows : the rows to begin with, instead of those of the changed activities
 
         Returns
         -------
@@ -125,6 +131,8 @@ class Propagator:
         for _ in range(FIRST_ROUNDS if first else ROUNDS):
             if first:
                 rows = np.arange(len(self.matrix))
+            elif rows is not None:
+                pass
             elif len(changed) == 1:
                 rows = self.rows_of[changed[0]]
             else:
@@ -132,6 +140,7 @@ class Propagator:
             if not len(rows):
                 break
             changed, empty = self._round(bounds, rows, log, first)
+            rows = None
             touched.update(changed)
             if empty is not None:
                 return list(touched), empty
