@@ -9,6 +9,7 @@ from fractions import Fraction
 import numpy as np
 import pytest
 
+import intplan.planning.budget
 import intplan.planning.clash
 from intplan import IntplanError, Sheet, solve
 from intplan.planning import restart
@@ -119,7 +120,7 @@ def test_a_known_plan_is_a_witness_without_a_search(monkeypatch):
     sheet = Sheet.parse('[activities]\na = { least = -inf, most = 5 }\n[rules]\nmore = "a >= 7"')
     standing = solve(sheet)
     tested = []
-    work = intplan.planning.clash._Filter(standing, Budget(), ["more"], [[5], [7]])
+    work = intplan.planning.clash._Filter(sheet, standing, Budget(), ["more"], [[5], [7]])
     monkeypatch.setattr(work, "_test", lambda *what: tested.append(what))
     work.run()
     assert work.witnesses == {"more": [5], "a most": [7]} and not tested
@@ -183,7 +184,7 @@ def test_a_clash_cut_short_goes_on_after_the_give(monkeypatch):
 def test_a_test_ended_by_the_time_is_not_the_end_of_the_filter(monkeypatch):
     sheet = Sheet.parse(JOINERY)
     budget = Budget(time_limit=60)
-    work = intplan.planning.clash._Filter(solve(sheet), budget, (), ())
+    work = intplan.planning.clash._Filter(sheet, solve(sheet), budget, (), ())
 
     def slow(members, most_nodes):
         budget.deadline = 0.0
@@ -191,6 +192,46 @@ def test_a_test_ended_by_the_time_is_not_the_end_of_the_filter(monkeypatch):
 
     monkeypatch.setattr(work, "_test", slow)
     assert work.run() is False and not work.smallest
+
+
+def test_a_test_that_would_not_end_is_given_up(monkeypatch):
+    # Without a limit too: the set is then not known to be the smallest, and all else still is.
+    lines = ["[activities]"] + [f"x{j} = {{ most = 1 }}" for j in range(24)] + ["[rules]"]
+    lines += ["half = \"" + " + ".join(f"{2 * j + 30}*x{j}" for j in range(24)) + " = 491\""]
+    lines += ['few = "x0 + x1 + x2 <= 1"', 'one = "x0 + x1 >= 2"']
+    sheet = Sheet.parse("\n".join(lines))
+    standing = solve(sheet)
+    work = intplan.planning.clash._Filter(sheet, standing, Budget(), ["half"], ())
+    tried = []
+
+    def hard(members, most_nodes):
+        tried.append(most_nodes)
+        return intplan.planning.clash._Test()
+
+    monkeypatch.setattr(work, "_test", hard)
+    assert work.run() is True and not work.smallest
+    assert tried == [intplan.planning.clash.FIRST_NODES] * len(work.members) + (
+        [intplan.planning.budget.LAST_NODES] * len(work.members)
+    )
+
+
+def test_activities_without_bounds_are_settled():
+    text = """
+    [activities]
+    a = { least = -inf }
+    b = { least = -inf }
+    [rules]
+    odd = "2*a - 2*b = 1"
+    far = { rule = "a + b >= 70", give = 3 }
+    """
+    verdict = settle(Sheet.parse(text))
+    assert verdict.outcome == "infeasible" and verdict.clash.names == ("odd",)
+    assert verdict.clash.smallest and verdict.clash.needs_whole
+    sheet = Sheet.parse(text.replace("= 1", "= 8") + 'strip = "60*a - 77*b = 2"')
+    verdict = settle(sheet)
+    assert verdict.outcome == "feasible" and verdict.standing.sheet is sheet
+    check = sheet.check(list(verdict.standing.exact_plan.values()))
+    assert check.good and check.value == verdict.standing.exact_value
 
 
 @pytest.mark.parametrize(

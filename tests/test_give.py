@@ -6,9 +6,11 @@ from fractions import Fraction
 import numpy as np
 import pytest
 
+import intplan.planning.give
 from intplan import Sheet, solve
 from intplan.planning.budget import Budget
 from intplan.planning.clash import clash
+from intplan.planning.directions import widest
 from intplan.planning.give import (
     Bending,
     Give,
@@ -16,7 +18,6 @@ from intplan.planning.give import (
     bendable_rules,
     bent,
     find_give,
-    widest,
 )
 from intplan.sheet.model import Aim, Rule
 from tests.families import Instance, build, instance_of
@@ -156,6 +157,80 @@ def test_a_limit_leaves_an_honest_give():
     )
 
 
+# ------------------------------------------------------------------------------ searches that end
+
+
+WORKSHOP = """
+[activities]
+a = { most = 3 }
+b = { most = 4 }
+c = { most = 5 }
+d = { most = 4 }
+e = { most = 5 }
+f = { most = 4 }
+[rules]
+r0 = "2*a + 5*c = 26"
+r1 = "5*b + 3*e = 31"
+r2 = "2*a + 5*c + 2*d + 2*e = 44"
+r3 = "7*a + 3*b + 3*d + f = 45"
+r4 = "6*b + 8*c + 4*d + 12*e + 14*f = 168"
+r5 = "71 <= 2*a + 3*c + 8*d + 5*e + 7*f <= 78"
+"""
+
+
+def test_bends_are_not_branched_on():
+    # Each bend by itself is whole; branching on them, the search stays at a bound of 12 for ever.
+    give = give_of(WORKSHOP, node_limit=3000)
+    sheet = Sheet.parse(WORKSHOP)
+    assert give.proven and agrees(give.total, least_by_reference(sheet, give.weighted))
+
+
+PARITY = """
+[activities]
+a = { most = 40 }
+b = { most = 40 }
+c = { most = 40 }
+[rules]
+odd = "2*a + 4*b - 6*c = 7"
+low = "a + b + c >= 130"
+"""
+
+
+def test_that_bending_frees_nothing_is_asked_first(monkeypatch):
+    # odd has no plan in whole units, however far low bends; fractions would have one.
+    sheet = Sheet.parse(PARITY)
+    monkeypatch.setattr(intplan.planning.give, "_solve_elastic", None)
+    give = find_give(sheet, ("odd", "low"), ("low",), Budget())
+    assert (give.alone, give.least, give.proven) == ({"low": None}, None, True)
+
+
+def test_without_the_least_give_one_is_known(monkeypatch):
+    plain = intplan.planning.give._solve_elastic
+
+    def stopped(sheet, **limits):
+        return plain(sheet, **{**limits, "stop": lambda: True})
+
+    monkeypatch.setattr(intplan.planning.give, "_solve_elastic", stopped)
+    give = give_of(JOINERY)
+    assert give.least and not give.proven and "inn" not in give.alone
+    moved = bent(Sheet.parse(JOINERY), give.least)
+    assert moved.check(list(give.plan.exact_plan.values())).good
+    assert give.total == sum(bending.amount for bending in give.least)
+
+
+def test_gives_of_activities_without_bounds():
+    give = give_of(
+        """
+        [activities]
+        a = { least = -inf }
+        b = { least = -inf }
+        [rules]
+        odd = "2*a - 2*b = 1"
+        """
+    )
+    assert give.total == 1 and give.proven and list(give.alone) == ["odd"]
+
+
 # ------------------------------------------------------------------------------ at random
 
 
@@ -225,8 +300,9 @@ def test_every_give_is_the_least():
     [
         ("0.5*a + 0.25*b <= 16", Fraction(1, 4)),
         ("6*a - 10*b >= 4", 2),
-        ("6*a - 10*b >= 5", None),
-        ("2 <= 2*a + 4*b <= 7", None),
+        ("6*a - 10*b >= 5", 1),
+        ("2 <= 2*a + 4*b <= 7", 1),
+        ("3*a + 6*b >= 4.5", Fraction(3, 2)),
         ("2*a + oil <= 4", None),
     ],
 )

@@ -10,6 +10,7 @@ from typing import Any
 from intplan.planning.standing import StandingPlan, read_limits
 
 LEAST_TIME = 1e-3  # seconds given to a search that is started all the same
+LAST_NODES = 20_000  # nodes of one inner search where no limit is given: some would never end
 
 
 class Budget:
@@ -47,6 +48,11 @@ class Budget:
         if self.nodes is not None and self.nodes < 1:
             return "nodes"
         return None
+
+    @property
+    def last_nodes(self) -> int | None:
+        """The nodes of one inner search whose end nobody asked for; None where a limit is given."""
+        return LAST_NODES if self.deadline is None and self.nodes is None else None
 
     @contextmanager
     def halved(self) -> Iterator[None]:

@@ -4,21 +4,19 @@ from __future__ import annotations
 
 from collections.abc import Callable, Collection, Iterable, Sequence
 from dataclasses import dataclass, replace
-from functools import partial
 from typing import NamedTuple
 
 from intplan.errors import IntplanError
 from intplan.planning.budget import Budget
-from intplan.planning.directions import bounded, runs_away
+from intplan.planning.directions import any_plan
 from intplan.planning.give import Give, bendable_rules, find_give
-from intplan.planning.standing import Progress, StandingPlan, solve
+from intplan.planning.standing import Progress, StandingPlan, least_bends
 from intplan.sheet import Activity, Aim, Sheet
 from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number
 
 SIDES = ("least", "most")
 FIRST_NODES = 500  # nodes of a first test; one that takes more waits until the others are done
-AWAY_NODES = 10  # nodes of a test in which whole activities may run away, before it is bounded
 ENDED = {
     "time": "the time limit came first",
     "nodes": "the node limit came first",
@@ -157,13 +155,28 @@ def settle(
     ):
         standing = subject
     else:
-        standing = budget.run(solve, replace(sheet, aim=Aim()), progress=progress)
+        standing = _any_plan_of(sheet, budget)
     if standing.exact_plan is not None:
         return Verdict("feasible", standing, None)
     if standing.outcome != "infeasible":
         return Verdict("undecided", standing, None)
     found = find_clash(sheet, standing, bendable, budget, progress=progress)
     return Verdict("infeasible", standing, found)
+
+
+def _any_plan_of(sheet: Sheet, budget: Budget) -> StandingPlan:
+    """Return the answer that shows some plan of a sheet, or that it has none."""
+    found = any_plan(sheet, budget)
+    if found.amounts is None or found.search.sheet is sheet:
+        return found.search
+    check = sheet.check(found.amounts)
+    if not check.good:
+        raise AssertionError(f"the plan of the bounded form breaks {check.broken[0].name}")
+    bends = least_bends(sheet, check)
+    result = replace(
+        found.search.result, plan=[*found.amounts, *bends], value=check.value, bound=check.value
+    )
+    return StandingPlan(sheet, result)
 
 
 def find_clash(
@@ -181,7 +194,7 @@ def find_clash(
     Parameters
     ----------
     sheet : has no plan
-    standing : proves that, for the sheet or for the sheet without its aim
+    standing : proves that, for the sheet with its aim or without, or for its bounded form
     may_bend : from `bendable_rules`
     budget : the limits, shared with what came before
     last : rules and bounds that are tried last, so that they rather stay in the clash
@@ -196,7 +209,7 @@ def find_clash(
     1999). It starts from the rules and bounds that the evidence uses, and every test that finds
     no plan cuts the set down to the evidence of that test.
     """
-    work = _Filter(standing, budget, last, known)
+    work = _Filter(sheet, standing, budget, last, known)
     with budget.halved():
         complete = work.run()
     needs_whole, names = _needs_whole(sheet, work.members, budget), work.names
@@ -271,8 +284,7 @@ class _Filter:
 
     Parameters
     ----------
-    standing : an infeasible standing plan
-    budget, last, known : as for `find_clash`
+    sheet, standing, budget, last, known : as for `find_clash`
 
     Attributes
     ----------
@@ -282,6 +294,7 @@ class _Filter:
 
     def __init__(
         self,
+        sheet: Sheet,
         standing: StandingPlan,
         budget: Budget,
         last: Sequence[str],
@@ -289,9 +302,10 @@ class _Filter:
     ) -> None:
         from intplan.planning.restart import support
 
-        self.sheet = standing.sheet
+        self.sheet = sheet
         self.budget = budget
-        self.proof = standing
+        same = standing.sheet.activities == sheet.activities  # unlike those of a bounded form
+        self.proof = standing if same else None
         self.witnesses: dict[str, Sequence[Number]] = {}
         endless = {r.name for r in self.sheet.rules if r.give is not None and r.give_most is None}
         names = [name for name in member_names(self.sheet) if name not in endless]
@@ -318,7 +332,8 @@ class _Filter:
     def run(self) -> bool:
         """Leave out one member after the other; false where a limit came first.
 
-        A test that takes long is left for later: it is easier once the set is smaller.
+        A test that takes long is left for later: it is easier once the set is smaller. Where
+        nobody set a limit, one that then takes too long is given up.
         """
         most_nodes: int | None = FIRST_NODES
         while not self.smallest:
@@ -332,9 +347,9 @@ class _Filter:
             if self.budget.ended_by() is not None:
                 return self.smallest
             if len(self.members) == before:
-                if most_nodes is None:
+                if most_nodes == self.budget.last_nodes:
                     return True
-                most_nodes = None
+                most_nodes = self.budget.last_nodes
         return True
 
     def _try_without(self, name: str, most_nodes: int | None) -> None:
@@ -352,32 +367,17 @@ class _Filter:
 
     def _test(self, members: Collection[str], most_nodes: int | None) -> _Test:
         """Look for a plan that meets the members."""
-        from intplan.planning.restart import feasible, support
+        from intplan.planning.restart import support
 
         sheet = restricted(self.sheet, members)
-        away = runs_away(sheet)
-        nodes = AWAY_NODES if away else most_nodes
-        test = self.budget.run(feasible, self.proof, sheet, most_nodes=nodes)
-        if test.result.plan is not None:
-            return _Test(amounts=test.result.plan[: len(sheet.activities)])
-        if test.outcome == "infeasible":
-            self.proof = test
-            return _Test(support=support(test))
-        if away and self.budget.ended_by() is None:
-            return self._test_bounded(sheet, most_nodes)
-        return _Test()
-
-    def _test_bounded(self, sheet: Sheet, most_nodes: int | None) -> _Test:
-        """Look for a plan of a sheet in which whole activities lack bounds."""
-        from intplan.planning.restart import feasible, support
-
-        form = bounded(sheet, partial(self.budget.run, solve))
-        if form is None or self.budget.ended_by() is not None:
+        found = any_plan(sheet, self.budget, self.proof, most_nodes)
+        if found.amounts is not None:
+            return _Test(amounts=found.amounts)
+        if found.search.outcome != "infeasible":
             return _Test()
-        test = self.budget.run(feasible, None, form.sheet, most_nodes=most_nodes)
-        if test.result.plan is not None:
-            return _Test(amounts=form.lift(test.result.plan))
-        return _Test(support=support(test) if test.outcome == "infeasible" else None)
+        if found.search.sheet is sheet:
+            self.proof = found.search
+        return _Test(support=support(found.search))
 
 
 def _needs_whole(sheet: Sheet, members: Collection[str], budget: Budget) -> bool | None:

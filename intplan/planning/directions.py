@@ -16,14 +16,75 @@ import math
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
+from functools import partial
 from itertools import count
+from typing import NamedTuple
 
-from intplan.planning.give import widest
+from intplan.planning.budget import Budget
 from intplan.planning.standing import StandingPlan, solve
 from intplan.sheet import Activity, Aim, Rule, Sheet
 from intplan.sheet.numbers import Number, lowest
 
 Solve = Callable[[Sheet], StandingPlan]
+
+AWAY_NODES = 10  # nodes of a search in which whole activities may run away, before it is bounded
+
+
+class AnyPlan(NamedTuple):
+    """What a search for any plan of a sheet came to.
+
+    Attributes
+    ----------
+    amounts : of the activities, if it found a plan
+    search : the last search; ``infeasible`` where there is none. Its sheet is the one asked about,
+        or the bounded form, which shares the names of rules and bounds
+    """
+
+    amounts: Sequence[Number] | None
+    search: StandingPlan
+
+
+def any_plan(
+    sheet: Sheet,
+    budget: Budget,
+    proof: StandingPlan | None = None,
+    most_nodes: int | None = None,
+) -> AnyPlan:
+    """Look for any plan of a sheet, whatever its aim, by its bounded form if it might not end.
+
+    Parameters
+    ----------
+    sheet : soft rules count at the limits to which they may bend
+    budget : the limits, shared with what came before
+    proof : shows that a sheet of the same activities has no plan; its tree is taken up
+    most_nodes : a node limit of one search
+    """
+    from intplan.planning.restart import feasible
+
+    away = runs_away(sheet)
+    few = AWAY_NODES if most_nodes is None else min(AWAY_NODES, most_nodes)
+    nodes = few if away else most_nodes
+    test = budget.run(feasible, proof, sheet, most_nodes=nodes)
+    if test.answer.plan is not None:
+        return AnyPlan(test.answer.plan[: len(sheet.activities)], test)
+    if test.outcome == "infeasible" or not away or budget.ended_by() is not None:
+        return AnyPlan(None, test)
+    form = bounded(sheet, partial(budget.run, solve))
+    if form is None or budget.ended_by() is not None:
+        return AnyPlan(None, test)
+    test = budget.run(feasible, None, form.sheet, most_nodes=most_nodes)
+    return AnyPlan(None if test.answer.plan is None else form.lift(test.answer.plan), test)
+
+
+def widest(rule: Rule) -> Rule:
+    """Return a soft rule as a firm one at the limits to which it may bend; others as they are."""
+    if rule.give is None:
+        return rule
+    least = most = None
+    if rule.give_most is not None:
+        least = None if rule.least is None else lowest(rule.least - rule.give_most)
+        most = None if rule.most is None else lowest(rule.most + rule.give_most)
+    return replace(rule, least=least, most=most, give=None, give_most=None, text="")
 
 
 @dataclass(frozen=True)

@@ -7,10 +7,11 @@ from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
 from itertools import count
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 from intplan.errors import IntplanError, excerpt, unknown
 from intplan.planning.budget import Budget
+from intplan.planning.directions import any_plan, widest
 from intplan.planning.standing import Progress, StandingPlan, solve
 from intplan.sheet import Activity, Aim, Rule, Sheet
 from intplan.sheet.checking import check_rule
@@ -111,20 +112,21 @@ def find_give(
             least, proven = _least_bendings(sheet, may_bend, blamed, budget)
     if least is not None:
         with budget.halved():
-            plan = budget.run(solve, bent(sheet, least), progress=progress)
+            moved = bent(sheet, least)
+            plan = budget.run(solve, moved, most_nodes=budget.last_nodes, progress=progress)
     alone: dict[str, Bending | None] = {}
     for name in blamed:
         if budget.ended_by() is not None:
             proven = False
             break
-        bendings, settled = _least_bendings(sheet, (name,), (name,), budget)
-        if settled:
-            alone[name] = bendings[0] if bendings else None
-        proven = proven and settled
+        found = _least_bendings(sheet, (name,), (name,), budget)
+        if found.proven:
+            alone[name] = found.bendings[0] if found.bendings else None
+        proven = proven and found.proven
     return Give(
         alone=alone,
         least=least,
-        total=None if least is None else lowest(sum(b.amount * weighted[b.name] for b in least)),
+        total=None if least is None else _total(sheet, least),
         weighted=weighted,
         plan=plan,
         may_bend=may_bend,
@@ -151,70 +153,104 @@ def bent(sheet: Sheet, bendings: Iterable[Bending]) -> Sheet:
     return replace(sheet, rules=tuple(rules))
 
 
-def widest(rule: Rule) -> Rule:
-    """Return a soft rule as a firm one at the limits to which it may bend; others as they are."""
-    if rule.give is None:
-        return rule
-    least = most = None
-    if rule.give_most is not None:
-        least = None if rule.least is None else lowest(rule.least - rule.give_most)
-        most = None if rule.most is None else lowest(rule.most + rule.give_most)
-    return replace(rule, least=least, most=most, give=None, give_most=None, text="")
-
-
 def _weight(rule: Rule) -> Number:
     return 1 if rule.give is None else rule.give
 
 
+class _Found(NamedTuple):
+    """The least bendings that are known, None if none are, and whether that is proven."""
+
+    bendings: tuple[Bending, ...] | None
+    proven: bool
+
+
 def _least_bendings(
     sheet: Sheet, bending: Sequence[str], blamed: Sequence[str], budget: Budget
-) -> tuple[tuple[Bending, ...] | None, bool]:
-    """Return the least bendings of these rules that leave a plan (None: there are none).
+) -> _Found:
+    """Find the least bendings of these rules that leave a plan.
 
-    The second entry tells whether that is proven.
+    First comes the question whether the others leave one at all. The search for the least could
+    not tell: without a limit to the bends it would go on for ever.
     """
-    freed = budget.run(_solve_elastic, _elastic(sheet, bending, blamed))
-    settled = freed.outcome in ("optimal", "infeasible")
-    if freed.result.plan is None:
-        return None, settled
-    found = []
-    for rule in map(widest, sheet.rules):
-        check = check_rule(rule, sheet.rule_value(rule, freed.result.plan))
-        if check.side is not None:
-            found.append(Bending(rule.name, check.side, -check.spare))
-    return tuple(found), settled
+    wide = tuple(map(widest, sheet.rules))
+    others = tuple(rule for rule in wide if rule.name not in bending)
+    some = any_plan(replace(sheet, aim=Aim(), rules=others), budget, None, budget.last_nodes)
+    if some.amounts is None:
+        return _Found(None, some.search.outcome == "infeasible")
+    known = _bendings(sheet, wide, some.amounts)
+    if budget.ended_by() is not None:
+        return _Found(known, False)
+    elastic = _elastic(sheet, bending, blamed, _total(sheet, known))
+    freed = budget.run(_solve_elastic, elastic, most_nodes=budget.last_nodes)
+    if freed.answer.plan is None:
+        return _Found(known, False)
+    found = _bendings(sheet, wide, freed.answer.plan)
+    least = min((known, found), key=lambda bendings: _total(sheet, bendings))
+    return _Found(least, _total(sheet, least) == freed.exact_bound)
 
 
-def _solve_elastic(sheet: Sheet, **limits: object) -> StandingPlan:
-    """Solve an elastic sheet."""
-    return solve(sheet, **limits)  # type: ignore[arg-type]
+def _bendings(
+    sheet: Sheet, wide: Sequence[Rule], amounts: Sequence[Number]
+) -> tuple[Bending, ...]:
+    """Return how far each rule must bend for a plan."""
+    checks = ((rule.name, check_rule(rule, sheet.rule_value(rule, amounts))) for rule in wide)
+    return tuple(Bending(n, check.side, -check.spare) for n, check in checks if check.side)
 
 
-def _elastic(sheet: Sheet, bending: Sequence[str], blamed: Sequence[str]) -> Sheet:
-    """Return a sheet in which these rules bend without limit, with no aim but the prices.
+def _total(sheet: Sheet, bendings: Iterable[Bending]) -> Number:
+    """Return the weighted sum of bendings."""
+    rules, index = sheet.rules, sheet.rule_index
+    return lowest(sum(b.amount * _weight(rules[index[b.name]]) for b in bendings))
 
-    Its activities are those of the sheet, then the bends. A rule that only takes whole steps has
-    bends in whole steps, so that bounds of the aim can be rounded. One of the blamed rules must
-    bend; where all of these take steps, that is a rule, from which the search learns much.
+
+def _solve_elastic(sheet: Sheet, **limits: Any) -> StandingPlan:
+    """Solve an elastic sheet.
+
+    The bends that are whole by themselves once the activities are, at the least that these need,
+    go into the search as divisible, so that it branches on activities alone. That the aim comes
+    in steps still holds for the plans that matter.
+    """
+    from intplan.search import branch_and_cut
+
+    problem = sheet.problem()
+    priced = [column for column, _ in sheet.aim.terms]
+    whole = problem.whole.copy()
+    whole[priced] = False
+    return StandingPlan(sheet, branch_and_cut(replace(problem, whole=whole), **limits))
+
+
+def _elastic(
+    sheet: Sheet, bending: Sequence[str], blamed: Sequence[str], enough: Number
+) -> Sheet:
+    """Return a sheet in which these rules bend, with no aim but the prices.
+
+    Its activities are those of the sheet, then the bends. A rule in whole activities misses its
+    limits in whole steps, and so it bends. Where all do, bounds of the aim can be rounded, and no
+    bend costs more than what is known to be enough for all. One of the blamed rules must bend;
+    where all of these take steps, that is a rule, from which the search learns much.
     """
     unused = _unused_names(sheet)
     activities, rules = list(sheet.activities), list(map(widest, sheet.rules))
+    places = [sheet.rule_index[name] for name in bending]
+    steps = {i: _step(sheet, rules[i]) for i in places}
+    stepped = None not in steps.values()
     prices: list[tuple[int, Number]] = []
-    steps: list[tuple[int, Number]] = []
-    for name in bending:
-        i = sheet.rule_index[name]
-        step = _step(sheet, rules[i])
+    must: list[tuple[int, Number]] = []
+    for i in places:
+        size = steps[i] or 1
+        price = lowest(size * _weight(sheet.rules[i]))
+        most = math.floor(Fraction(enough) / price) if stepped else None
         for limit, sign in ((rules[i].least, 1), (rules[i].most, -1)):
             if limit is None:
                 continue
-            column, size = len(activities), step or 1
-            activities.append(Activity(next(unused), whole=step is not None))
+            column = len(activities)
+            activities.append(Activity(next(unused), most=most, whole=steps[i] is not None))
             rules[i] = replace(rules[i], terms=(*rules[i].terms, (column, sign * size)), text="")
-            prices.append((column, lowest(size * _weight(sheet.rules[i]))))
-            if name in blamed:
-                steps.append((column, 1))
-    if steps and all(activities[column].whole for column, _ in steps):
-        rules.append(Rule(next(unused), tuple(steps), 1, None))
+            prices.append((column, price))
+            if rules[i].name in blamed:
+                must.append((column, 1))
+    if must and all(activities[column].whole for column, _ in must):
+        rules.append(Rule(next(unused), tuple(must), 1, None))
     return replace(
         sheet,
         aim=Aim("minimize", tuple(prices)),
@@ -224,15 +260,13 @@ def _elastic(sheet: Sheet, bending: Sequence[str], blamed: Sequence[str]) -> She
 
 
 def _step(sheet: Sheet, rule: Rule) -> Number | None:
-    """Return the step of a rule in whole activities whose limits are whole steps, else None."""
-    if not rule.terms or not all(sheet.activities[j].whole for j, _ in rule.terms):
+    """Return the step in which a rule can miss its limits; None with divisible activities in it."""
+    if not all(sheet.activities[j].whole for j, _ in rule.terms):
         return None
-    below = math.lcm(*(c.denominator for _, c in rule.terms))
-    step = Fraction(math.gcd(*(int(c * below) for _, c in rule.terms)), below)
-    limits = (limit for limit in (rule.least, rule.most) if limit is not None)
-    if any((limit / step).denominator != 1 for limit in limits):
-        return None
-    return lowest(step)
+    limits = [limit for limit in (rule.least, rule.most) if limit is not None]
+    sizes = [*(c for _, c in rule.terms), *limits]
+    below = math.lcm(*(size.denominator for size in sizes))
+    return lowest(Fraction(math.gcd(*(int(size * below) for size in sizes)), below))
 
 
 def _unused_names(sheet: Sheet) -> Iterator[str]:

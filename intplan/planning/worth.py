@@ -30,7 +30,6 @@ FLOOR: dict[Side, Number] = {"least": 0}
 # takes more waits until the others are settled, and is then looked at afresh: where loosening took
 # the cuts away that made the tree small, the kept tree is of no help.
 FIRST_NODES = 100, 2
-LAST_NODES = 20_000  # nodes for such a figure where no limit is given: some would never end
 NO_OPTIMUM = {
     "within_gap": "this one is within a gap; solve the sheet without one",
     "infeasible": "this sheet has no plan; ask which rules clash",
@@ -112,8 +111,8 @@ def worth(
     below_zero : whether to weigh what keeps an activity from falling below 0 as well: a bound that
         few planners could do without, and few searches get through without
     time_limit, node_limit : seconds and nodes for all searches together; with neither, a figure
-        is left open after `LAST_NODES` nodes, since a sheet without one of its bounds may be one
-        that no search gets through
+        is left open after `budget.LAST_NODES` nodes, since a sheet without one of its bounds may
+        be one that no search gets through
     progress : called with the number of figures looked at and of those there are
     stop : polled; once it returns true, what is known is returned
 
@@ -287,8 +286,7 @@ class _Weighing:
         few, times = FIRST_NODES
         self.round(tasks, few + times * self.standing.search.nodes)
         hard = [task for task in tasks if task[0].gain(task[1]).ended_by in ("nodes", "time")]
-        unlimited = self.budget.deadline is None and self.budget.nodes is None
-        self.round(hard, LAST_NODES if unlimited else None, afresh=True)
+        self.round(hard, self.budget.last_nodes, afresh=True)
 
     def round(
         self, tasks: list[tuple[_Item, str]], most_nodes: int | None, afresh: bool = False
