@@ -237,7 +237,7 @@ def measure(
         return None
     standing, load = saved_and_loaded(solved)
     measured = Measured(case.instance.name, family, fresh, load, len(standing.result.tree))
-    wanted = changes if fresh < SLOW else -(-changes // 4)
+    wanted = changes if fresh < SLOW else max(2, changes // 4)
     for kind in (PLANNERS, DENSE):
         for change in islice(cutting(standing, kind), wanted // 2):
             measured.changes.append(measure_change(standing, kind, change, time_limit, quick))
@@ -251,7 +251,7 @@ def run(names: list[str], changes: int, time_limit: float, quick: bool) -> Repor
     makers = families()
     warm = makers["demo"]()[0]
     measure(warm, "demo", 2, time_limit, quick)
-    report = Report(changes, quick)
+    report = Report(changes, time_limit, quick)
     for name in names:
         for case in makers[name]():
             measured = measure(case, name, changes, time_limit, quick)
@@ -283,6 +283,7 @@ class Report:
     """Everything one run measured."""
 
     asked: int
+    time_limit: float
     quick: bool
     sheets: list[Measured] = field(default_factory=list)
     left_out: list[str] = field(default_factory=list)
@@ -307,8 +308,8 @@ class Report:
         names = ", ".join(f"{name} {number}" for name, number in bench.versions().items())
         text = (
             f"{names}; {os.cpu_count()} cores. One run of each change and way. Ratios are of"
-            " seconds, ours over the reference's from scratch on the changed sheet; geometric"
-            " means over the changes that both finished."
+            " seconds, ours over the reference's from scratch on the changed sheet, as geometric"
+            f" means; a search that was ended after {self.time_limit:g} s counts with that time."
         )
         slow = [sheet.name for sheet in self.sheets if len(sheet.changes) < self.asked // 2 * 2]
         if slow:
@@ -338,20 +339,19 @@ class Report:
 
     def _line(self, name: str, group: list[Measured]) -> list[str]:
         every = [one for sheet in group for one in sheet.changes]
-        done = [one for one in every if one.verdict != "unfinished"]
-        by_kind = {kind: [one for one in done if one.kind == kind] for kind in (PLANNERS, DENSE)}
+        by_kind = {kind: [one for one in every if one.kind == kind] for kind in (PLANNERS, DENSE)}
         cells = [
             name,
             str(len(every)),
             str(sum(one.outcome == "infeasible" for one in every)),
-            f"**{mean(one.ratio for one in done)}**",
+            f"**{mean(one.ratio for one in every)}**",
             *(mean(one.ratio for one in kept) for kept in by_kind.values()),
-            f"{max((one.ratio for one in done), default=math.nan):.2f}",
+            f"{max(one.ratio for one in every):.2f}",
         ]
         if self.quick:
-            cells.append(median(one.nodes for one in done))
+            cells.append(median(one.nodes for one in every))
         else:
-            cells += self._ways(group, done)
+            cells += self._ways(group, every)
         stands = [ours / theirs for sheet in group for ours, theirs in sheet.stands]
         odd = [
             sheet.answers if len(group) == 1 else f"{sheet.name}: {sheet.answers}"
@@ -361,10 +361,10 @@ class Report:
         share = f"{geometric_mean(stands):.4f}" if stands else "-"
         return [*cells, share, "; ".join(odd) or "agree"]
 
-    def _ways(self, group: list[Measured], done: list[Timed]) -> list[str]:
-        cells = [mean(one.ways[w] / one.reference for one in done) for w in (*PLACES, "scratch")]
-        nodes = [median(one.nodes for one in done)]
-        nodes += [median(one.way_nodes[way] for one in done) for way in ("root", "scratch")]
+    def _ways(self, group: list[Measured], every: list[Timed]) -> list[str]:
+        cells = [mean(one.ways[w] / one.reference for one in every) for w in (*PLACES, "scratch")]
+        nodes = [median(one.nodes for one in every)]
+        nodes += [median(one.way_nodes[way] for one in every) for way in ("root", "scratch")]
         opened = [(one.reopened, sheet.tree) for sheet in group for one in sheet.changes
                   if one.reopened is not None]  # fmt: skip
         share = f"{sum(o for o, _ in opened)} / {sum(t for _, t in opened)}" if opened else "-"
@@ -374,15 +374,15 @@ class Report:
     def _summary(self) -> str:
         """Say what the table has no column for."""
         changes = self.changes()
-        done = [one for one in changes if one.verdict != "unfinished"]
-        faster = sum(one.ratio < 1 for one in done)
+        unfinished = sum(one.verdict == "unfinished" for one in changes)
+        faster = sum(one.ratio < 1 for one in changes)
         lines = [
-            f"- {len(changes)} changes, {len(changes) - len(done)} of them not finished by one of"
-            f" the two; re-planning was faster than the reference on {faster}.",
+            f"- {len(changes)} changes, {unfinished} of them not finished by one of the two;"
+            f" re-planning was faster than the reference on {faster}.",
         ]
-        impossible = [one for one in done if one.outcome == "infeasible"]
+        impossible = [one for one in changes if one.outcome == "infeasible"]
         if impossible:
-            possible = [one for one in done if one.outcome != "infeasible"]
+            possible = [one for one in changes if one.outcome != "infeasible"]
             lines.append(
                 f"- Where a plan is left: {mean(one.ratio for one in possible)}; where none is"
                 f" ({len(impossible)} changes), the proof of that: "
@@ -395,7 +395,7 @@ class Report:
                 f" {mean(clashes)}."
             )
         for name in () if self.quick else (*PLACES, "scratch"):
-            ratios = [one.seconds / one.ways[name] for one in done]
+            ratios = [one.seconds / one.ways[name] for one in changes]
             lines.append(f"- Re-planning over intplan {WAYS[name]}: {mean(ratios)}.")
         answered = sum(len(sheet.stands) for sheet in self.sheets)
         fallen = sum(sheet.fallen for sheet in self.sheets)
