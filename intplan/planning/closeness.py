@@ -1,7 +1,11 @@
-"""Staying close: of all plans that are good enough, the one that moves least from the old plan."""
+"""Staying close: of all plans that are good enough, the one that moves least from the old plan.
+
+Of several that move as little the one with the best value is taken, by a second search.
+"""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
@@ -9,7 +13,7 @@ from itertools import count
 
 from intplan.errors import IntplanError
 from intplan.planning.answers import amounts_of, with_amounts
-from intplan.planning.budget import Budget
+from intplan.planning.budget import LAST_NODES, Budget
 from intplan.planning.standing import StandingPlan, solve
 from intplan.sheet import Activity, Aim, Rule, Sheet
 from intplan.sheet.model import bends_of
@@ -25,7 +29,8 @@ class Closeness:
     Attributes
     ----------
     asked : the percentage of the best value by which the plan may miss it
-    done : the plan is proven to be the nearest among those
+    done : the plan is proven to be the nearest among those; of several the one with the best
+        value, unless a limit came before that was known
     reason : why not, in words; empty where it is done
     distance : the sum of what the activities of the plan differ from the old plan, in their units;
         None where one of the plans is missing
@@ -89,13 +94,20 @@ def closest(
     if check.good and _within(after.sheet, check.value, allowed):
         answer = after if not first else _moved(after, old)
         return answer, Closeness(percent, True, "", 0, first, answer.exact_value)
-    found = budget.run(_solve_extended, _extended(after.sheet, old, allowed))
+    extended = _extended(after.sheet, old, allowed, first)
+    found = budget.run(_solve_extended, extended, most_nodes=budget.last_nodes)
     nearest = amounts_of(found)
-    reason = "" if found.outcome == "optimal" else _why(found.ended_by)
+    reason = "" if found.outcome == "optimal" else _why(found.ended_by, budget)
     way = first if nearest is None else distance(old, nearest[: len(old)])
     if nearest is None or way >= first:
         return after, Closeness(percent, not reason, reason, first, first, value)
     answer = _moved(after, nearest[: len(old)])
+    if not reason and answer.exact_value != value and budget.ended_by() is None:
+        best_near = _best_within(after.sheet, extended, way)
+        found = budget.run(_solve_extended, best_near, most_nodes=budget.last_nodes)
+        nearest = amounts_of(found)
+        if nearest is not None:
+            answer = max(answer, _moved(after, nearest[: len(old)]), key=_goodness)
     if not _within(after.sheet, answer.exact_value, allowed):
         raise AssertionError("the nearest plan is worse than it may be")
     return answer, Closeness(percent, not reason, reason, way, first, answer.exact_value)
@@ -106,8 +118,16 @@ def distance(old: Sequence[Number], new: Sequence[Number]) -> Number:
     return lowest(sum(abs(a - b) for a, b in zip(old, new, strict=True)))
 
 
-def _why(ended_by: str | None) -> str:
+def _goodness(answer: StandingPlan) -> Number:
+    """Return a number that is the larger the better the value is."""
+    value = answer.exact_value
+    return value if answer.sheet.aim.sense == "maximize" else -value
+
+
+def _why(ended_by: str | None, budget: Budget) -> str:
     """Say in words why the nearest plan is not known."""
+    if ended_by == "nodes" and budget.last_nodes is not None:
+        return f"it was given up after {LAST_NODES:,} nodes"
     return f"{ENDED.get(ended_by, 'the range of the search')} came first"
 
 
@@ -137,12 +157,13 @@ def _solve_extended(sheet: Sheet, **limits: object) -> StandingPlan:
     return solve(sheet, **limits)  # type: ignore[arg-type]
 
 
-def _extended(sheet: Sheet, old: Sequence[Number], allowed: Number) -> Sheet:
+def _extended(sheet: Sheet, old: Sequence[Number], allowed: Number, known: Number) -> Sheet:
     """Return a sheet whose best plan is the nearest to `old` among those that are good enough.
 
     Its activities are those of the sheet, then the bends of soft rules, then how far each
-    activity goes above and below its old amount. Its rules are those of the sheet, then one that
-    holds the aim with the prices of bends, then a balance for each activity.
+    activity goes above and below its old amount: no further than `known`, at which distance there
+    is such a plan. Its rules are those of the sheet, then one that holds the aim with the prices
+    of bends, then a balance for each activity.
     """
     unused = _unused_names(sheet)
     activities, rules = list(sheet.activities), list(sheet.rules)
@@ -160,9 +181,12 @@ def _extended(sheet: Sheet, old: Sequence[Number], allowed: Number) -> Sheet:
     ways = []
     for j, (activity, amount) in enumerate(zip(sheet.activities, old, strict=True)):
         up, down = len(activities), len(activities) + 1
-        above = None if activity.most is None else max(lowest(activity.most - amount), 0)
-        below = None if activity.least is None else max(lowest(amount - activity.least), 0)
         whole = activity.whole
+        above = below = math.floor(known) if whole else None
+        if activity.most is not None:
+            above = max(lowest(activity.most - amount), 0)
+        if activity.least is not None:
+            below = max(lowest(amount - activity.least), 0)
         activities.append(Activity(next(unused), most=above, whole=whole))
         activities.append(Activity(next(unused), most=below, whole=whole))
         rules.append(Rule(next(unused), ((j, 1), (up, -1), (down, 1)), amount, amount))
@@ -170,6 +194,13 @@ def _extended(sheet: Sheet, old: Sequence[Number], allowed: Number) -> Sheet:
     return replace(
         sheet, aim=Aim("minimize", tuple(ways)), activities=tuple(activities), rules=tuple(rules)
     )
+
+
+def _best_within(sheet: Sheet, extended: Sheet, way: Number) -> Sheet:
+    """Return the extended sheet whose best plan is the best one no further than `way`."""
+    near = Rule(next(_unused_names(extended)), extended.aim.terms, None, way)
+    aim = Aim(sheet.aim.sense or "minimize", extended.rules[len(sheet.rules)].terms)
+    return replace(extended, aim=aim, rules=(*extended.rules, near))
 
 
 def _unused_names(sheet: Sheet) -> Iterator[str]:
