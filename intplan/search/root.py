@@ -31,8 +31,11 @@ class RootWork(NodeWork):
     Attributes
     ----------
     free : the bounds that hold for every plan, not only for better ones than the best so far: cuts
-        are measured from them, so that no cut leans on the cut-off
+        are measured from them at first, so that they do not lean on the cut-off
+    cut_rounds : most rounds of cuts
     """
+
+    cut_rounds = CUT_ROUNDS
 
     def __init__(self, context: Context) -> None:
         problem = context.problem
@@ -120,28 +123,30 @@ class RootWork(NodeWork):
     def _cut_in_rounds(self) -> Split | None:
         separator = Separator(self.context, self.free)
         started, stalled = self.dictionary.value, 0
-        for _ in range(CUT_ROUNDS):
+        for _ in range(self.cut_rounds):
             rows = self.fractional_rows()
             if not len(rows) or self.context.limits.out_of_time():
                 return None
             before = self.dictionary.value
             numbers = separator.separate(self.dictionary, rows)
-            if not len(numbers):
-                return None
-            self.dictionary.add_rows(numbers)
-            proof = self.relax()
-            if not isinstance(proof, Proof):
-                return proof
-            self._drop_slack_cuts()
-            self.try_rounding()
-            if self.context.best.beats(proof.bound):
-                return self.close("beaten", proof)
-            self.tighten(proof)
+            if len(numbers):
+                self.dictionary.add_rows(numbers)
+                proof = self.relax()
+                if not isinstance(proof, Proof):
+                    return proof
+                self._drop_slack_cuts()
+                self.try_rounding()
+                if self.context.best.beats(proof.bound):
+                    return self.close("beaten", proof)
+                self.tighten(proof)
             gain = self.dictionary.value - before
             total = self.dictionary.value - started
             stalled = stalled + 1 if gain < STALL * max(total, 1e-9) else 0
-            if stalled >= PATIENCE:
+            if stalled < PATIENCE and len(numbers):
+                continue
+            if separator.bounds is self.bounds or not self.bounds.leans.any():
                 return None
+            separator.bounds, stalled = self.bounds, 0
         return None
 
     def _drop_slack_cuts(self) -> None:

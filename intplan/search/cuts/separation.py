@@ -122,13 +122,21 @@ class Separator:
 
         Where the aim has no step they are made in integers or not at all: a cut weakened by a
         rounding error leaves the bound a hair below the best plan, and with no step to bridge
-        the hair it costs more branching than it saves.
+        the hair it costs more branching than it saves.  Where activities lack a bound they are
+        made in integers if they can be: a rounding error cannot be bounded over such an activity,
+        even if the combination is free of it.
         """
-        if self.context.problem.cost_step is not None:
+        stepped = self.context.problem.cost_step is not None
+        if stepped and not len(rounding.open):
             return gomory_cuts(rounding, limits, lines, 2 * CUTS_A_ROUND)
         best = deepest_combinations(rounding, limits, lines, CUTS_A_ROUND)
-        cuts = (integer_gomory_cut(rounding, limits, line) for line in best)
-        return [cut for cut in cuts if cut is not None]
+        made = [integer_gomory_cut(rounding, limits, line) for line in best]
+        cuts = [cut for cut in made if cut is not None]
+        if stepped:
+            left = [line for line, cut in zip(best, made, strict=True) if cut is None]
+            lines = np.array(left).reshape(len(left), lines.shape[1])
+            cuts += gomory_cuts(rounding, limits, lines, CUTS_A_ROUND)
+        return cuts
 
     def _covers(self, rounding: Rounding, dictionary: Dictionary) -> list[Candidate]:
         """Return cover cuts of the rules that bind, or nearly."""
