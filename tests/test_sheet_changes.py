@@ -218,6 +218,14 @@ def test_what_changes_nothing_is_told():
         changes = change_sheet(SHEET, set={name: text})
         assert changes.notes == (f"{name} is as it was before",)
         assert changes.changed == changes.tightened == changes.loosened == ()
+    plan = dict.fromkeys(("loaf", "roll_tray", "overtime"), 0)
+    for change in ({"set": {"overtime": "= 0"}}, {"freeze": ["overtime"], "plan": plan}):
+        changes = change_sheet(SHEET, **change)  # the least was 0 already, but the most was not
+        assert (changes.notes, changes.changed) == ((), ("overtime most",))
+    changes = change_sheet(SHEET, set={"roll_tray least": "= 20", "roll_tray most": "= 100"})
+    assert changes.notes == ("roll_tray least is as it was before",)
+    changes = change_sheet(SHEET, set={"roll_tray": "20 <= roll_tray <= 240"})
+    assert changes.notes == ("roll_tray is as it was before",) and changes.changed == ()
     changes = change_sheet(SHEET, add={"calm": "0 <= 3"})
     assert changes.notes == ("calm holds for every plan, whatever the activities",)
     assert changes.tightened == ("calm",)

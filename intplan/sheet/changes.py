@@ -215,6 +215,7 @@ class _Work:
         self.sheet = sheet
         self.rules: dict[int, Rule | None] = {}  # by old index; None for a waived one
         self.activities: dict[int, Activity] = {}
+        self.bounds_set: list[tuple[str, tuple[str, ...]]] = []  # by one setting or freezing each
         self.new: dict[str, Rule] = {}
         self.touched: dict[str, str] = {}  # "oven most" to what was done to it
         self.waived: list[str] = []
@@ -313,6 +314,7 @@ class _Work:
         sides = {s: v for s, v in zip(SIDES, (least, most), strict=True) if v is not None}
         self.touch(("activity", old.name), sides, how, where)
         self.activities[j] = replace(old, **sides)
+        self.bounds_set.append((old.name, tuple(sides)))
 
     def freeze(self, name: str, plan: Mapping[str, Number] | None) -> None:
         """Keep an activity at the amount that it has in a plan."""
@@ -374,7 +376,8 @@ class _Work:
             old, now[i] = now[i], rule
             if rule is not None:
                 _check_limits(rule, f"set {rule.name}")
-                self.compare(rule.name, (old.least, old.most), (rule.least, rule.most))
+                if not self.compare(rule.name, (old.least, old.most), (rule.least, rule.most)):
+                    self.notes.append(f"{rule.name} is as it was before")
         places: tuple[int | None, ...] = tuple(range(len(now)))
         if None in self.rules.values():
             at = count()
@@ -398,13 +401,16 @@ class _Work:
                 if side == "least":
                     pair = (old.least, None), (now.least, None)
                 self.compare(name, *pair)
+        for name, sides in self.bounds_set:
+            if sides and not any(f"{name} {side}" in self.changed for side in sides):
+                whose = f"{name} {sides[0]}" if len(sides) == 1 else name
+                self.notes.append(f"{whose} is as it was before")
         return tuple(activities)
 
-    def compare(self, name: str, old: Limits, new: Limits) -> None:
-        """Tell whether limits allow less than the old ones, or more."""
+    def compare(self, name: str, old: Limits, new: Limits) -> bool:
+        """Note whether limits allow less than the old ones, or more; return whether either."""
         if old == new:
-            self.notes.append(f"{name} is as it was before")
-            return
+            return False
         self.changed.append(name)
         least = _compared(old[0], new[0], -1)
         most = _compared(old[1], new[1], 1)
@@ -412,6 +418,7 @@ class _Work:
             self.tightened.append(name)
         if max(least, most) > 0:
             self.loosened.append(name)
+        return True
 
 
 def _compared(old: Number | None, new: Number | None, outward: int) -> int:
