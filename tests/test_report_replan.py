@@ -513,14 +513,14 @@ def entry(name: str, **parts) -> Worth:
     return Worth(name, **(known | parts))
 
 
-def worths(text: str, *entries: Worth, others=(), floors=(), ended_by=None) -> str:
+def worths(text: str, *entries: Worth, others=(), floors=(), **ended) -> str:
     standing = solve(Sheet.parse(text))
     table = WorthTable(
         standing=standing,
         entries=entries,
         others=tuple(others),
         floors=tuple(floors),
-        ended_by=ended_by,
+        **({"ended_by": None} | ended),
     )
     json.dumps(worth_data(table), allow_nan=False)
     return worth_text(table)
@@ -545,7 +545,7 @@ def test_worths_of_every_kind():
         "Without oven: the aim has no limit. One more: +2 EUR (2.5 a unit in fractions).\n"
         "Without mixer: from +1 EUR to +5 EUR, not settled. One more: +2 EUR (2.5 a unit in "
         "fractions).\n"
-        "Without shelf: nothing or better, not settled. One less: not settled.\n"
+        "Without shelf: not settled. One less: not settled.\n"
         "Without loaf most: +1/3 EUR (about 0.333333). One more: nothing "
         "(0.333333 a unit in fractions).\n"
         "Without roll_tray least: +8 EUR. One less: +2 EUR (2.5 a unit in fractions).",
@@ -561,6 +561,20 @@ def test_worths_of_every_kind():
 def test_worths_where_less_is_better():
     text = worths(SOFT, entry("need", side="least", toward="least"))
     assert "Without need: -3 h. One less: -2 h (2.5 a unit in fractions)." in text
+
+
+def test_worths_that_are_not_settled():
+    some = entry("oven", waived=None, at_least=0, at_most=5, unsettled=("waived",))
+    text = worths(BAKERY, some, ended_by="nodes")
+    assert "Without oven: up to +5 EUR, not settled." in text
+    assert "\n\nThe node limit came before every figure was settled.\n\n" in text
+    text = worths(BAKERY, some, ended_by="nodes", given_up=20_000)
+    assert text.split("\n\n")[-2] == (
+        "Some figures were given up after 20,000 nodes; `--time-limit` or `--node-limit` gives "
+        "them longer."
+    )
+    most = entry("oven", waived=None, at_most=None, unsettled=("waived",))
+    assert "Without oven: +3 EUR or better, not settled." in worths(BAKERY, most)
 
 
 def test_rules_that_cost_nothing_are_counted():

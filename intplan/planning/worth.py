@@ -82,6 +82,7 @@ class WorthTable:
     floors : the names of bounds that keep an activity from falling below 0, and were left out
     ended_by : what left figures open: ``time``, ``nodes``, ``interrupt`` or ``range``; None where
         all are settled
+    given_up : where no limit was asked for, the nodes after which a figure was left open
     """
 
     standing: StandingPlan
@@ -89,6 +90,7 @@ class WorthTable:
     others: tuple[str, ...]
     floors: tuple[str, ...]
     ended_by: str | None
+    given_up: int | None = None
 
     def __iter__(self) -> Iterator[Worth]:
         return iter(self.entries)
@@ -150,7 +152,8 @@ def worth(
     prices = relaxation_prices(standing.sheet, stop)
     entries = sorted((item.worth(prices) for item in items), key=_rank)
     ended_by = weighing.ended_by if any(entry.unsettled for entry in entries) else None
-    return WorthTable(standing, tuple(entries), tuple(others), tuple(floors), ended_by)
+    given_up = budget.last_nodes if ended_by == "nodes" else None
+    return WorthTable(standing, tuple(entries), tuple(others), tuple(floors), ended_by, given_up)
 
 
 def _limits_of(sheet: Sheet) -> Iterator[tuple[str, dict[Side, Number]]]:

@@ -42,7 +42,12 @@ def worth_text(found: WorthTable) -> str:
             f"Not weighed: {bounds} {keep} activities from falling below 0; `--below-zero` "
             "weighs them too."
         )
-    if found.ended_by:
+    if found.given_up:
+        blocks.append(
+            f"Some figures were given up after {found.given_up:,} nodes; `--time-limit` or "
+            "`--node-limit` gives them longer."
+        )
+    elif found.ended_by:
         blocks.append(ENDED[found.ended_by])
     return "\n\n".join([*blocks, CAUTION])
 
@@ -85,10 +90,11 @@ def _waived(sheet: Sheet, entry: Worth) -> str:
         return "the aim has no limit"
     if entry.waived is not None:
         return _step(sheet, entry.waived)
-    least = f"{_step(sheet, entry.at_least)} or better"
+    least = _step(sheet, entry.at_least)
     if entry.at_most is None:
-        return f"{least}, not settled"
-    return f"from {_step(sheet, entry.at_least)} to {_step(sheet, entry.at_most)}, not settled"
+        return f"{least} or better, not settled" if entry.at_least else "not settled"
+    span = f"from {least} to" if entry.at_least else "up to"
+    return f"{span} {_step(sheet, entry.at_most)}, not settled"
 
 
 def _step(sheet: Sheet, gain: Number) -> str:
