@@ -137,11 +137,12 @@ class _Walk:
 
     def _note_cuts(self, sources: _Sources, steps: Sequence[dict[str, Any]]) -> None:
         """Note the root's steps and, with the bounds before the first that uses a cut, the cuts."""
-        early = [step for step in steps if step["by"] in ("whole", "rule")]
-        self._note_steps(early, sources)
+        kinds = [step["by"] in ("whole", "rule") for step in steps]
+        first = kinds.index(False) if False in kinds else len(kinds)
+        self._note_steps(steps[:first], sources)
         for cut in self.kept.result.cuts:
             self.cuts.append(self._note(self._cut(cut, sources)))
-        self._note_steps([step for step in steps if step not in early], sources)
+        self._note_steps(steps[first:], sources)
 
     def _note_steps(self, steps: Iterable[dict[str, Any]], sources: _Sources) -> None:
         for step in steps:
