@@ -194,25 +194,27 @@ def test_a_test_ended_by_the_time_is_not_the_end_of_the_filter(monkeypatch):
     assert work.run() is False and not work.smallest
 
 
-def test_a_test_that_would_not_end_is_given_up(monkeypatch):
+def test_tests_that_would_not_end_are_given_up(monkeypatch):
     # Without a limit too: the set is then not known to be the smallest, and all else still is.
-    lines = ["[activities]"] + [f"x{j} = {{ most = 1 }}" for j in range(24)] + ["[rules]"]
-    lines += ["half = \"" + " + ".join(f"{2 * j + 30}*x{j}" for j in range(24)) + " = 491\""]
-    lines += ['few = "x0 + x1 + x2 <= 1"', 'one = "x0 + x1 >= 2"']
-    sheet = Sheet.parse("\n".join(lines))
-    standing = solve(sheet)
-    work = intplan.planning.clash._Filter(sheet, standing, Budget(), ["half"], ())
-    tried = []
+    sheet = Sheet.parse(JOINERY)
+    asked = []
 
     def hard(members, most_nodes):
-        tried.append(most_nodes)
+        asked.append(most_nodes)
+        budget.nodes -= most_nodes
         return intplan.planning.clash._Test()
 
+    standing, budget = solve(sheet), Budget()
+    work = intplan.planning.clash._Filter(sheet, standing, budget, (), ())
     monkeypatch.setattr(work, "_test", hard)
-    assert work.run() is True and not work.smallest
-    assert tried == [intplan.planning.clash.FIRST_NODES] * len(work.members) + (
-        [intplan.planning.budget.LAST_NODES] * len(work.members)
-    )
+    with budget.ending():
+        assert budget.nodes == intplan.planning.budget.ENDING_NODES
+        assert work.run() and not work.smallest
+    members = len(work.members)
+    assert asked[:members] == [intplan.planning.clash.FIRST_NODES] * members
+    assert len(asked) == 2 * members and asked[members] > 2 * asked[-1]
+    assert budget.nodes is budget.fair_nodes is None
+    assert clash(standing).smallest  # nothing of this stays
 
 
 def test_activities_without_bounds_are_settled():

@@ -10,7 +10,8 @@ from typing import Any
 from intplan.planning.standing import StandingPlan, read_limits
 
 LEAST_TIME = 1e-3  # seconds given to a search that is started all the same
-LAST_NODES = 20_000  # nodes of one inner search where no limit is given: some would never end
+LAST_NODES = 20_000  # nodes of one search beside the answer where no limit is given
+ENDING_NODES = 10_000  # the same for many searches together
 
 
 class Budget:
@@ -38,6 +39,8 @@ class Budget:
         self.deadline = None if limits.seconds is None else perf_counter() + limits.seconds
         self.nodes = limits.nodes
         self.stop = stop
+        self.unlimited = self.deadline is None and self.nodes is None
+        self.capped = False
 
     def ended_by(self) -> str | None:
         """Return ``interrupt``, ``time`` or ``nodes`` once that limit is reached."""
@@ -51,8 +54,25 @@ class Budget:
 
     @property
     def last_nodes(self) -> int | None:
-        """The nodes of one inner search whose end nobody asked for; None where a limit is given."""
-        return LAST_NODES if self.deadline is None and self.nodes is None else None
+        """The nodes after which a search is given up; None where a limit is given for all."""
+        return LAST_NODES if self.unlimited else None
+
+    @contextmanager
+    def ending(self) -> Iterator[None]:
+        """Set an end to all searches within where no limit is given: some would go on for ever."""
+        self.capped = self.unlimited
+        if self.capped:
+            self.nodes = ENDING_NODES
+        try:
+            yield
+        finally:
+            if self.capped:
+                self.nodes, self.capped = None, False
+
+    @property
+    def fair_nodes(self) -> int | None:
+        """Half of the nodes until that end, so that one search leaves some to others; or None."""
+        return max(self.nodes // 2, 1) if self.capped and self.nodes is not None else None
 
     @contextmanager
     def halved(self) -> Iterator[None]:

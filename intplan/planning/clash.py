@@ -16,7 +16,7 @@ from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number
 
 SIDES = ("least", "most")
-FIRST_NODES = 500  # nodes of a first test; one that takes more waits until the others are done
+FIRST_NODES = 100  # nodes of a first test; one that takes more waits until the others are done
 ENDED = {
     "time": "the time limit came first",
     "nodes": "the node limit came first",
@@ -210,11 +210,11 @@ def find_clash(
     no plan cuts the set down to the evidence of that test.
     """
     work = _Filter(sheet, standing, budget, last, known)
-    with budget.halved():
+    with budget.halved(), budget.ending():
         complete = work.run()
     needs_whole, names = _needs_whole(sheet, work.members, budget), work.names
     give = find_give(sheet, names, may_bend, budget, progress)
-    if not complete:
+    if not complete and not budget.unlimited:
         work.run()
         if not needs_whole and work.names != names:  # what fits a set fits any part of it
             needs_whole = _needs_whole(sheet, work.members, budget)
@@ -332,10 +332,9 @@ class _Filter:
     def run(self) -> bool:
         """Leave out one member after the other; false where a limit came first.
 
-        A test that takes long is left for later: it is easier once the set is smaller. Where
-        nobody set a limit, one that then takes too long is given up.
+        A test that takes long is left for later: it is easier once the set is smaller.
         """
-        most_nodes: int | None = FIRST_NODES
+        hard = False
         while not self.smallest:
             before = len(self.members)
             for name in self.order:
@@ -343,13 +342,13 @@ class _Filter:
                     continue
                 if self.budget.ended_by() is not None:
                     return False
-                self._try_without(name, most_nodes)
+                self._try_without(name, self.budget.fair_nodes if hard else FIRST_NODES)
             if self.budget.ended_by() is not None:
                 return self.smallest
             if len(self.members) == before:
-                if most_nodes == self.budget.last_nodes:
+                if hard:
                     return True
-                most_nodes = self.budget.last_nodes
+                hard = True
         return True
 
     def _try_without(self, name: str, most_nodes: int | None) -> None:

@@ -108,21 +108,21 @@ def find_give(
     least = plan = None
     proven = not blamed
     if blamed and budget.ended_by() is None:
-        with budget.halved():
+        with budget.halved(), budget.ending():
             least, proven = _least_bendings(sheet, may_bend, blamed, budget)
     if least is not None:
-        with budget.halved():
-            moved = bent(sheet, least)
-            plan = budget.run(solve, moved, most_nodes=budget.last_nodes, progress=progress)
+        with budget.halved(), budget.ending():
+            plan = budget.run(solve, bent(sheet, least), progress=progress)
     alone: dict[str, Bending | None] = {}
-    for name in blamed:
-        if budget.ended_by() is not None:
-            proven = False
-            break
-        found = _least_bendings(sheet, (name,), (name,), budget)
-        if found.proven:
-            alone[name] = found.bendings[0] if found.bendings else None
-        proven = proven and found.proven
+    with budget.ending():
+        for name in blamed:
+            if budget.ended_by() is not None:
+                proven = False
+                break
+            found = _least_bendings(sheet, (name,), (name,), budget, budget.fair_nodes)
+            if found.proven:
+                alone[name] = found.bendings[0] if found.bendings else None
+            proven = proven and found.proven
     return Give(
         alone=alone,
         least=least,
@@ -165,7 +165,11 @@ class _Found(NamedTuple):
 
 
 def _least_bendings(
-    sheet: Sheet, bending: Sequence[str], blamed: Sequence[str], budget: Budget
+    sheet: Sheet,
+    bending: Sequence[str],
+    blamed: Sequence[str],
+    budget: Budget,
+    most_nodes: int | None = None,
 ) -> _Found:
     """Find the least bendings of these rules that leave a plan.
 
@@ -174,14 +178,14 @@ def _least_bendings(
     """
     wide = tuple(map(widest, sheet.rules))
     others = tuple(rule for rule in wide if rule.name not in bending)
-    some = any_plan(replace(sheet, aim=Aim(), rules=others), budget, None, budget.last_nodes)
+    some = any_plan(replace(sheet, aim=Aim(), rules=others), budget, None, most_nodes)
     if some.amounts is None:
         return _Found(None, some.search.outcome == "infeasible")
     known = _bendings(sheet, wide, some.amounts)
     if budget.ended_by() is not None:
         return _Found(known, False)
     elastic = _elastic(sheet, bending, blamed, _total(sheet, known))
-    freed = budget.run(_solve_elastic, elastic, most_nodes=budget.last_nodes)
+    freed = budget.run(_solve_elastic, elastic, most_nodes=most_nodes)
     if freed.answer.plan is None:
         return _Found(known, False)
     found = _bendings(sheet, wide, freed.answer.plan)
