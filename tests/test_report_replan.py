@@ -424,7 +424,7 @@ def test_gives_of_every_kind():
     (block,) = give_blocks(sheet, loose, MEMBERS)
     assert block == (
         "The least give found: oven from at most 9 to 10 (1 more) and shop from at least 6 to 4 "
-        "(2 less), 3 in all.\nA limit came before the least give was proven."
+        "(2 less), 3 in all.\nThe search for the least give was cut short."
     )
     helpless = {"alone": {}, "least": None, "total": None}
     assert give_blocks(sheet, a_give(sheet, **helpless), MEMBERS) == [
@@ -443,6 +443,60 @@ def test_gives_of_every_kind():
     assert give_blocks(sheet, a_give(sheet, **only), MEMBERS) == [
         "shop alone cannot free the plan, however far it bends."
     ]
+
+
+def wide(rules: int = 1, activities: int = 9) -> Sheet:
+    """Return a sheet with many rules over many activities of 0 or 1, one of 2 to 3."""
+    names = [f"a{k}" for k in range(activities)]
+    lines = [f"{name} = {{ most = 1 }}" for name in names] + ["b = { least = 2, most = 3 }"]
+    says = [f"r{k} = '{' + '.join(names)} >= {k + 20}'" for k in range(rules)]
+    return Sheet.parse("\n".join(["[activities]", *lines, "[rules]", *says]))
+
+
+def test_bounds_of_a_large_clash_share_lines():
+    sheet = wide()
+    names = ("r0", *(f"a{k} {s}" for k in range(9) for s in ("least", "most")), "b least", "b most")
+    (block,) = clash_blocks(Clash(sheet, names, False, False, {}, None))
+    assert block.split("\n") == [
+        "1 rule and 20 bounds clash: no plan in whole units can meet them together. They are "
+        "not yet the smallest set: some may not be needed. Fractions would not fit either.",
+        "  r0       a0 + a1 + a2 + a3 + a4 + a5 + a6 + a7 + a8 >= 20",
+        "  b least  b >= 2",
+        "  b most   b <= 3",
+        "  and that a0, a1, a2, a3, a4 and 4 other activities cannot be above 1",
+        "  and that a0, a1, a2, a3, a4 and 4 other activities cannot be below 0",
+    ]
+    only = Clash(sheet, tuple(f"a{k} most" for k in range(3)), None, True, {}, None)
+    assert clash_blocks(only)[0].endswith("\n  that a0, a1 and a2 cannot be above 1")
+    assert clash_blocks(only)[0].startswith("These 3 bounds clash: ")
+
+
+def test_rules_of_a_large_clash_are_counted():
+    sheet = wide(rules=23)
+    names = tuple(f"r{k}" for k in range(23))
+    alone = {name: None if k % 2 else Bending(name, "least", k) for k, name in enumerate(names)}
+    give = a_give(sheet, alone=alone, may_bend=names, weighted=dict.fromkeys(names, 1), least=None)
+    clashing, freed = clash_blocks(Clash(sheet, names, None, True, {}, give))
+    lines = clashing.split("\n")
+    assert len(lines) == 22 and lines[-1].strip() == "(3 more rules)"
+    assert freed.split("\n")[-2:] == [
+        "r1, r3, r5, r7, r9 and 6 other rules each alone cannot free the plan, however far they "
+        "bend.",
+        "Bending these 23 rules cannot free the plan.",
+    ]
+    every = {name: Bending(name, "least", 1) for name in names}
+    freed = give_blocks(sheet, a_give(sheet, alone=every, least=None, proven=False), names)
+    assert freed[0].split("\n")[-2] == "So could 3 more rules alone."
+
+
+def test_the_algebra_of_a_changed_rule_is_shortened():
+    long = " + ".join(f"{10 + k}*activity_{k}" for k in range(9))
+    lines = [f"activity_{k} = {{ most = 1 }}" for k in range(9)]
+    text = "\n".join(["[activities]", *lines, "[rules]", f"r = '{long} <= 90'"])
+    changes = change_sheet(Sheet.parse(text), set={"r": "<= 80"}, add={"s": f"{long} <= 99"})
+    lines = changes_table(changes).split("\n")
+    assert re.fullmatch(r"  changed  r: 10\*activity_0 \+ .* more\) .* <= 80 \(.* 90\)", lines[1])
+    assert lines[2] == f"  new      s: {long} <= 99"
 
 
 def test_a_clash_that_is_not_the_smallest():

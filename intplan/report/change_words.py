@@ -15,8 +15,8 @@ from intplan.sheet.changes import Changes
 from intplan.sheet.numbers import Number, show
 
 SEVERAL = 4  # more changes than this are counted in a sentence, not named
-LONGEST_RULE = 72  # characters of the algebra of a rule that is only named
-LONGEST_NEW = 400  # the same where the rule is new or changed
+LONGEST_RULE = 72  # characters of the algebra of a rule that is there already
+LONGEST_NEW = 400  # the same where its algebra is new
 
 
 # ---------------------------------------------------------------------------------- algebra
@@ -201,7 +201,8 @@ def _came_out(changes: Changes, change: Change) -> str:
     if change.kind == "waived":
         return algebra(changes.before, change.name, LONGEST_RULE)
     if change.what == "rule":
-        return algebra(changes.sheet, change.name, LONGEST_NEW)
+        longest = LONGEST_RULE if change.kind == "changed" else LONGEST_NEW
+        return algebra(changes.sheet, change.name, longest)
     return bounds_algebra(changes.sheet, change.name)
 
 

@@ -7,12 +7,16 @@ from collections.abc import Sequence
 from intplan.planning import Bending, Clash, Give, Verdict
 from intplan.report.change_words import LONGEST_RULE, algebra, limit_of, note_of
 from intplan.report.numbers import brief, readable, value_text
-from intplan.report.phrases import CAUTION, ENDED, listing, title_line
+from intplan.report.phrases import CAUTION, ENDED, count, few, listing, title_line
 from intplan.report.tables import plan_table, table
 from intplan.report.text import no_plan_sentence, verdict
 from intplan.sheet import Sheet
+from intplan.sheet.numbers import Number
 
 BENDS_NAMED = 6  # rules that may bend; more of them are counted
+RULES_SHOWN = 20  # rules of a clash, and rules that free it alone; more of them are counted
+ALIKE = 3  # bounds of a clash at the same number share a line from so many on
+FEW = 6  # members of a clash; of more it is told how many are rules
 
 
 def clash_text(sheet: Sheet, found: Verdict) -> str:
@@ -53,10 +57,7 @@ def _clash_sentences(clash: Clash) -> str:
     if len(clash.names) == 1:
         sentences = [f"{clash.names[0]} alone cannot be met by any plan{units}."]
     else:
-        rules = all(name in clash.sheet.rule_index for name in clash.names)
-        kind = "rules" if rules else "rules and bounds"
-        clashing = f"These {len(clash.names)} {kind} clash"
-        sentences = [f"{clashing}: no plan{units} can meet them together."]
+        sentences = [f"{_counted(clash)} clash: no plan{units} can meet them together."]
         if clash.smallest:
             sentences.append("Without any one of them there is a plan.")
         else:
@@ -68,24 +69,57 @@ def _clash_sentences(clash: Clash) -> str:
     return " ".join(sentences)
 
 
+def _counted(clash: Clash) -> str:
+    """Count the members of a clash, rules and bounds by themselves where they are many."""
+    members = len(clash.names)
+    rules = sum(name in clash.sheet.rule_index for name in clash.names)
+    if members > FEW and 0 < rules < members:
+        return f"{count(rules, 'rule')} and {count(members - rules, 'bound')}"
+    kind = "rules" if rules == members else "rules and bounds" if rules else "bounds"
+    return f"These {members} {kind}"
+
+
 def _members(clash: Clash) -> str:
-    """Return a line for each rule and bound of a clash; bounds at 0 from below share one."""
+    """Return a line for each rule and bound of a clash; bounds at the same number share one."""
     sheet = clash.sheet
-    rows, floors = [], []
-    for name in clash.names:
-        i = sheet.rule_index.get(name)
-        if i is None and name.endswith(" least") and limit_of(sheet, name, "least") == 0:
-            floors.append(name.removesuffix(" least"))
-            continue
-        says = algebra(sheet, name, LONGEST_RULE)
-        most = None if i is None else sheet.rules[i].give_most
-        bends = "" if most is None else f"bends by at most {readable(most)}"
-        rows.append([name, "  ".join(filter(None, (says, bends, note_of(sheet, name))))])
+    rules = [name for name in clash.names if name in sheet.rule_index]
+    rows = [[name, _says(sheet, name)] for name in rules[:RULES_SHOWN]]
+    if len(rules) > RULES_SHOWN:
+        rows.append([f"({count(len(rules) - RULES_SHOWN, 'more rule')})", ""])
+    shared = []
+    for (side, limit), names in _alike(clash).items():
+        floor = side == "least" and limit == 0
+        if len(names) < ALIKE and not floor:
+            rows += [[f"{name} {side}", _says(sheet, f"{name} {side}")] for name in names]
+        else:
+            beyond = "below" if side == "least" else "above"
+            named = few(names, "other activities")
+            shared.append(f"that {named} cannot be {beyond} {readable(limit)}")
     lines = [table(rows)] if rows else []
-    if floors:
-        others = "and that " if rows else "that "
-        lines.append(f"  {others}{listing(floors)} cannot be below 0")
+    for sentence in shared:
+        lines.append(f"  {'and ' if lines else ''}{sentence}")
     return "\n".join(lines)
+
+
+def _says(sheet: Sheet, name: str) -> str:
+    """Write what a rule or bound of a clash says."""
+    i = sheet.rule_index.get(name)
+    most = None if i is None else sheet.rules[i].give_most
+    bends = "" if most is None else f"bends by at most {readable(most)}"
+    parts = (algebra(sheet, name, LONGEST_RULE), bends, note_of(sheet, name))
+    return "  ".join(filter(None, parts))
+
+
+def _alike(clash: Clash) -> dict[tuple[str, Number], list[str]]:
+    """Return the activities whose bounds clash, by side and number, least bounds at 0 last."""
+    found: dict[tuple[str, Number], list[str]] = {}
+    for name in clash.names:
+        if name not in clash.sheet.rule_index:
+            activity, _, side = name.rpartition(" ")
+            limit = limit_of(clash.sheet, name, side) or 0
+            found.setdefault((side, limit), []).append(activity)
+    floors = found.pop(("least", 0), [])
+    return found | ({("least", 0): floors} if floors else {})
 
 
 # ---------------------------------------------------------------------------------- give
@@ -100,8 +134,11 @@ def give_blocks(sheet: Sheet, give: Give, clashing: Sequence[str]) -> list[str]:
     give : what frees it
     clashing : the rules and bounds of the clash
     """
-    lines = [_bending_sentence(sheet, name, bend) for name, bend in give.alone.items()]
     free = [bend for bend in give.alone.values() if bend is not None]
+    lines = [f"{b.name} alone would have to go {_way(sheet, b)}." for b in free[:RULES_SHOWN]]
+    if len(free) > RULES_SHOWN:
+        lines.append(f"So could {count(len(free) - RULES_SHOWN, 'more rule')} alone.")
+    lines += _idle_sentences([name for name, bend in give.alone.items() if bend is None])
     if give.least is not None and list(give.least) != free:
         lines.append(_least_sentence(sheet, give, give.least))
         beyond = [bend.name for bend in give.least if bend.name not in clashing]
@@ -111,7 +148,7 @@ def give_blocks(sheet: Sheet, give: Give, clashing: Sequence[str]) -> list[str]:
     elif give.least is None and give.proven and not (lines and len(give.may_bend) == 1):
         lines.append(_helpless_sentence(give))
     if not give.proven:
-        lines.append("A limit came before the least give was proven.")
+        lines.append("The search for the least give was cut short.")
     blocks = ["\n".join(lines)] if lines else []
     if give.plan is not None:
         blocks.append(" ".join(["With this give there is a plan.", *verdict(give.plan)]))
@@ -121,11 +158,14 @@ def give_blocks(sheet: Sheet, give: Give, clashing: Sequence[str]) -> list[str]:
     return blocks
 
 
-def _bending_sentence(sheet: Sheet, name: str, bend: Bending | None) -> str:
-    """Say how far one rule would have to go by itself."""
-    if bend is None:
-        return f"{name} alone cannot free the plan, however far it bends."
-    return f"{name} alone would have to go {_way(sheet, bend)}."
+def _idle_sentences(names: Sequence[str]) -> list[str]:
+    """Name the rules that free nothing by themselves."""
+    if not names:
+        return []
+    bends = "it bends" if len(names) == 1 else "they bend"
+    each = "" if len(names) == 1 else "each "
+    named = few(names, "other rules")
+    return [f"{named} {each}alone cannot free the plan, however far {bends}."]
 
 
 def _way(sheet: Sheet, bend: Bending) -> str:

@@ -62,3 +62,10 @@ def count(number: int, noun: str) -> str:
 def listing(parts: Sequence[str]) -> str:
     """Write a list as a sentence does: ``a, b and c``."""
     return parts[0] if len(parts) == 1 else f"{', '.join(parts[:-1])} and {parts[-1]}"
+
+
+def few(names: Sequence[str], others: str = "others", most: int = 6) -> str:
+    """Write a list as a sentence does, and count the `others` where there are many."""
+    if len(names) <= most:
+        return listing(names)
+    return listing([*names[: most - 1], f"{len(names) - most + 1:,} {others}"])
