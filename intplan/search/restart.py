@@ -56,9 +56,38 @@ def restart(
     limits, gap : as in `intplan.search.branch_and_cut`
     plan : the earlier plan in the columns of `problem`; the first in hand if it still fits
     at : "root" to branch anew from the root's basis, "leaves" to take up the earlier tree; by
-        default whichever `Restart` expects to be quicker
+        default the leaves where they are likely to pay, until they turn out not to
     """
-    return Restart(problem, gap, limits, False, kept, places, plan, at).run()
+    leaves = leaves_pay(kept) if at is None else at == "leaves"
+    search = Restart(problem, gap, limits, False, kept, places, plan, leaves)
+    if at is None and leaves:
+        search.most_nodes = len(kept.result.tree) * PATIENCE + FEW
+    try:
+        return search.run()
+    except _Outgrown:
+        spent = search
+    search = Restart(problem, gap, limits, False, kept, places, spent.best.plan or plan, False)
+    search.context.nodes, search.context.pivots = spent.context.nodes, spent.context.pivots
+    search.reopened = spent.reopened
+    return search.run()
+
+
+class _Outgrown(Exception):
+    """Raised where the earlier tree takes more nodes than a tree made anew is likely to."""
+
+
+def leaves_pay(kept: Kept) -> bool:
+    """Tell whether to take up the leaves of an earlier tree instead of branching anew.
+
+    What the leaves save is the choice of the branchings: the trials that it took.  Where the
+    earlier search chose by what it had learnt, and most of its nodes took few pivots, a tree made
+    anew for the changed problem is smaller and no dearer.
+    """
+    result = kept.result
+    if result.tree.out_degree(0) != 2:
+        return False
+    pivots = [pivots for _, pivots in result.tree.nodes(data="pivots") if pivots]
+    return sum(pivots) >= TRIED * len(pivots) or not pivots
 
 
 def restart_for_any_plan(
@@ -68,10 +97,15 @@ def restart_for_any_plan(
 
     Parameters are those of `restart`; whatever the aims are, optimal means that a plan was found.
     """
-    search = Restart(
-        drawn_home(problem), Fraction(0), limits, True, kept, places, plan=None, at=None
-    )
+    stand_in, leaves = drawn_home(problem), len(kept.result.tree) > 1
+    search = Restart(stand_in, Fraction(0), limits, True, kept, places, None, leaves)
     return as_any_plan(problem, search.run())
+
+
+TRIED = 12  # pivots a node of the earlier tree from which its leaves are worth taking up
+PATIENCE = 0.5  # nodes next to the earlier tree's after which its leaves are given up
+FEW = 10  # nodes that the leaves are granted in any case
+WORTHWHILE = 0.1  # share of the gap that a round of cuts must close to be followed by another
 
 
 @dataclass(slots=True)
@@ -106,6 +140,8 @@ class KeptNode:
 
 class KeptRoot(RootWork):
     """The root of a changed problem, from the basis and the cuts of the earlier root."""
+
+    patience = 1
 
     def __init__(self, context: Context, carrier: Carrier, plan: Sequence[Number] | None) -> None:
         super().__init__(context)
@@ -145,6 +181,14 @@ class KeptRoot(RootWork):
             return self.close("beaten", proof)
         return self.relax() if self.tighten(proof) else proof
 
+    def _stalled(self, gain: float, total: float) -> bool:
+        """Tell whether a round of cuts closed too little of the gap."""
+        best = self.context.best
+        if best.value is None:
+            return super()._stalled(gain, total)
+        gap = best.threshold - (self.dictionary.value - gain)
+        return gain < WORTHWHILE * gap
+
     def _dive(self) -> None:
         """Look for a first plan near the earlier one."""
         context = self.context
@@ -164,13 +208,14 @@ class Restart(Search):
         kept: Kept,
         places: Places,
         plan: Sequence[Number] | None,
-        at: str | None,
+        leaves: bool,
     ) -> None:
         super().__init__(problem, gap, limits, first_plan)
         self.earlier = kept.result.tree
         self.carrier = Carrier(kept, places, self.context)
         self.plan = plan
-        self.at = at
+        self.leaves = leaves
+        self.most_nodes = math.inf  # beyond which the leaves are given up
         self.reopened = 0
         self.held = np.arange(0)  # the rows that nodes hold
 
@@ -190,8 +235,8 @@ class Restart(Search):
         proof = root.open_relaxation()
         if not isinstance(proof, Proof):
             return proof
-        if not self._leaves_pay():
-            split = root.cut()
+        if not self.leaves or self.earlier.out_degree(0) != 2:
+            split = root.cut(proof)
             return split if split is not None or root.closed else root.develop()
         root.keep_open(proof)
         root.note_held_cuts()
@@ -199,15 +244,11 @@ class Restart(Search):
         self._take_up_children(0, 0, root.bounds, root.bound, root.closure, 0, None)
         return None
 
-    def _leaves_pay(self) -> bool:
-        """Tell whether to take the earlier tree up instead of branching anew from the root."""
-        if self.earlier.out_degree(0) != 2:
-            return False
-        return self.at != "root"
-
     # ------------------------------------------------------------------ the earlier tree
 
     def _solve(self, node: Node | KeptNode) -> Node | None:
+        if self.context.nodes > self.most_nodes:
+            raise _Outgrown
         if not isinstance(node, KeptNode):
             return super()._solve(node)
         if self.earlier.out_degree(node.earlier) == 2:

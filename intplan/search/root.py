@@ -32,10 +32,10 @@ class RootWork(NodeWork):
     ----------
     free : the bounds that hold for every plan, not only for better ones than the best so far: cuts
         are measured from them at first, so that they do not lean on the cut-off
-    cut_rounds : most rounds of cuts
+    patience : stalled rounds of cuts in a row that end the cutting
     """
 
-    cut_rounds = CUT_ROUNDS
+    patience = PATIENCE
 
     def __init__(self, context: Context) -> None:
         problem = context.problem
@@ -83,7 +83,7 @@ class RootWork(NodeWork):
         opened = self._open_relaxation()
         if not isinstance(opened, Proof):
             return opened
-        split = self.cut()
+        split = self.cut(opened)
         return split if split is not None or self.closed else self.develop()
 
     def _open_relaxation(self) -> Proof | Split | None:
@@ -93,7 +93,6 @@ class RootWork(NodeWork):
             return proof
         if self.try_rounding() and len(self.context.prover.open):
             self._bound_by_cost()
-        self.tighten(proof)
         self.context.prover.set_box(self.bounds.least, self.bounds.most)
         return proof
 
@@ -105,9 +104,17 @@ class RootWork(NodeWork):
 
     # ------------------------------------------------------------------ cuts
 
-    def cut(self) -> Split | None:
-        """Add cuts while they lift the bound; a split if that had to be settled in rationals."""
-        split = self._cut_in_rounds()
+    def cut(self, proof: Proof) -> Split | None:
+        """Add cuts while they lift the bound; a split if that had to be settled in rationals.
+
+        Bounds are tightened by reduced costs only once cuts stall: at a bound that leans on the
+        cut-off, the relaxation's point is no corner of the plans, and few cuts take it away.
+
+        Parameters
+        ----------
+        proof : of the relaxation's bound
+        """
+        split = self._cut_in_rounds(proof)
         self.note_held_cuts()
         return split
 
@@ -120,10 +127,10 @@ class RootWork(NodeWork):
             if i >= rules
         )
 
-    def _cut_in_rounds(self) -> Split | None:
+    def _cut_in_rounds(self, proof: Proof | Split | None) -> Split | None:
         separator = Separator(self.context, self.free)
-        started, stalled = self.dictionary.value, 0
-        for _ in range(self.cut_rounds):
+        started, stalled, tightened = self.dictionary.value, 0, False
+        for _ in range(CUT_ROUNDS):
             rows = self.fractional_rows()
             if not len(rows) or self.context.limits.out_of_time():
                 return None
@@ -138,16 +145,24 @@ class RootWork(NodeWork):
                 self.try_rounding()
                 if self.context.best.beats(proof.bound):
                     return self.close("beaten", proof)
-                self.tighten(proof)
+                if tightened:
+                    self.tighten(proof)
             gain = self.dictionary.value - before
             total = self.dictionary.value - started
-            stalled = stalled + 1 if gain < STALL * max(total, 1e-9) else 0
-            if stalled < PATIENCE and len(numbers):
+            stalled = stalled + 1 if self._stalled(gain, total) else 0
+            if stalled < self.patience and len(numbers):
                 continue
-            if separator.bounds is self.bounds or not self.bounds.leans.any():
+            if tightened or not self.tighten(proof):
                 return None
-            separator.bounds, stalled = self.bounds, 0
+            proof = self.relax()
+            if not isinstance(proof, Proof):
+                return proof
+            separator.bounds, stalled, tightened = self.bounds, 0, True
         return None
+
+    def _stalled(self, gain: float, total: float) -> bool:
+        """Tell whether a round of cuts lifted the bound by too little."""
+        return gain < STALL * max(total, 1e-9)
 
     def _drop_slack_cuts(self) -> None:
         """Let cuts that do not bind leave the dictionary."""

@@ -23,6 +23,7 @@ from intplan.search.evidence import LEAST, MOST, Proof
 MARGIN = 1e-7  # share of a unit by which a rounded bound must be proven
 HUGE = 1e100  # stands for infinity where infinities would multiply zeros
 EXACT = 2.0**52  # whole bounds beyond this are left alone
+FAR = 1e6  # units from its other bound at which a bound by cost adds more error than it helps
 ROUNDS = 2  # rounds of propagation at a node
 FIRST_ROUNDS = 12  # rounds at the root
 TRIED = 16  # nodes at which propagation is tried before it is judged
@@ -323,7 +324,7 @@ def tighten_by_cost(
         if size <= 0:
             continue
         units = spare / size
-        if units > EXACT:
+        if units > FAR:
             continue
         if proof.reduced[j] > 0:
             value = math.floor(bounds.least.item(j) + units + MARGIN)
