@@ -203,7 +203,7 @@ def test_an_interrupt_leaves_a_true_bound_at_every_poll() -> None:
 def test_an_interrupt_inside_the_root_proves_nothing(monkeypatch: pytest.MonkeyPatch) -> None:
     """A plan found by rounding is not called best when the root itself was not finished."""
 
-    def interrupted(self: root.RootWork) -> None:
+    def interrupted(self: root.RootWork, proof: object) -> None:
         raise exact.Stopped
 
     for seed in range(60):
