@@ -133,17 +133,17 @@ def test_why_it_is_not_done():
 
 
 def test_a_limit_between_the_best_plan_and_the_nearest(monkeypatch):
-    from intplan.planning import closeness
+    from intplan.planning import restart
 
     standing = solve(Sheet.parse(DESKS))
-    plain = closeness._solve_extended
+    plain = restart.extended
 
-    def ended(sheet, **limits):
-        found = plain(sheet, **limits)
+    def ended(after, sheet, **limits):
+        found = plain(after, sheet, **limits)
         result = replace(found.result, outcome="unfinished", ended_by="time")
         return replace(found, result=result)
 
-    monkeypatch.setattr(closeness, "_solve_extended", ended)
+    monkeypatch.setattr(restart, "extended", ended)
     answer = replan(standing, add={"few": "desk <= 5"}, stay_close=50)
     assert not answer.closeness.done
     assert answer.closeness.reason == "the time limit came first"

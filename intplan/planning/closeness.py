@@ -94,8 +94,10 @@ def closest(
     if check.good and _within(after.sheet, check.value, allowed):
         answer = after if not first else _moved(after, old)
         return answer, Closeness(percent, True, "", 0, first, answer.exact_value)
+    from intplan.planning import restart
+
     extended = _extended(after.sheet, old, allowed, first)
-    found = budget.run(_solve_extended, extended, most_nodes=budget.last_nodes)
+    found = budget.run(restart.extended, after, extended, most_nodes=budget.last_nodes)
     nearest = amounts_of(found)
     reason = "" if found.outcome == "optimal" else _why(found.ended_by, budget)
     way = first if nearest is None else distance(old, nearest[: len(old)])
@@ -104,7 +106,7 @@ def closest(
     answer = _moved(after, nearest[: len(old)])
     if not reason and answer.exact_value != value and budget.ended_by() is None:
         best_near = _best_within(after.sheet, extended, way)
-        found = budget.run(_solve_extended, best_near, most_nodes=budget.last_nodes)
+        found = budget.run(solve, best_near, most_nodes=budget.last_nodes)
         nearest = amounts_of(found)
         if nearest is not None:
             answer = max(answer, _moved(after, nearest[: len(old)]), key=_goodness)
@@ -150,11 +152,6 @@ def _moved(answer: StandingPlan, amounts: Sequence[Number]) -> StandingPlan:
         raise AssertionError(f"the nearest plan breaks {check.broken[0].name}")
     best = answer.exact_value == check.value
     return with_amounts(answer, amounts, check, outcome="optimal" if best else "within_gap")
-
-
-def _solve_extended(sheet: Sheet, **limits: object) -> StandingPlan:
-    """Solve an extended sheet."""
-    return solve(sheet, **limits)  # type: ignore[arg-type]
 
 
 def _extended(sheet: Sheet, old: Sequence[Number], allowed: Number, known: Number) -> Sheet:

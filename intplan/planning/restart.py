@@ -55,6 +55,42 @@ def restarted(
     return StandingPlan(changes.sheet, confirmed(changes.sheet, result))
 
 
+def extended(
+    standing: StandingPlan,
+    sheet: Sheet,
+    *,
+    time_limit: float | None = None,
+    node_limit: int | None = None,
+    stop: Callable[[], bool] | None = None,
+) -> StandingPlan:
+    """Solve a sheet that asks for another aim within what a standing plan's sheet allows.
+
+    What was closed by its bound is closed by the rule that holds the earlier aim now; ties and
+    near-ties that this rule lets through are opened again.
+
+    Parameters
+    ----------
+    standing : what was solved before
+    sheet : its columns are those of the problem of `standing.sheet`, bends as activities, and then
+        others; its rules are those, then one that holds that sheet's aim, and then others
+    """
+    import numpy as np
+
+    from intplan.search.carry import Places
+    from intplan.search.limits import Limits
+    from intplan.search.restart import restart
+
+    problem = standing.sheet.problem()
+    if not restartable(standing) or standing.proven_sheet is not standing.sheet:
+        return solve(sheet, time_limit=time_limit, node_limit=node_limit, stop=stop)
+    rules, columns = len(problem.rows), len(problem.cost)
+    aim_rule = rules if problem.exact_cost else None
+    places = Places(np.arange(rules), np.arange(columns), aim_rule, same_aim=False)
+    limits = Limits(time_limit, node_limit, stop, None)
+    result = restart(sheet.problem(), standing.kept, places, limits, at="leaves")
+    return StandingPlan(sheet, confirmed(sheet, result))
+
+
 def restartable(standing: StandingPlan) -> bool:
     """Tell whether a standing plan's tree is one that can be taken up with its sheet's aim."""
     result = standing.answer
