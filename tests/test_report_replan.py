@@ -622,10 +622,10 @@ def test_worths_that_are_not_settled():
     text = worths(BAKERY, some, ended_by="nodes")
     assert "Without oven: up to +5 EUR, not settled." in text
     assert "\n\nThe node limit came before every figure was settled.\n\n" in text
-    text = worths(BAKERY, some, ended_by="nodes", given_up=20_000)
+    text = worths(BAKERY, some, ended_by="nodes", given_up=True)
     assert text.split("\n\n")[-2] == (
-        "Some figures were given up after 20,000 nodes; `--time-limit` or `--node-limit` gives "
-        "them longer."
+        "Some figures took too long and were given up; `--time-limit` or `--node-limit` gives them "
+        "longer."
     )
     most = entry("oven", waived=None, at_most=None, unsettled=("waived",))
     assert "Without oven: +3 EUR or better, not settled." in worths(BAKERY, most)

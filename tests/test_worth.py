@@ -366,11 +366,11 @@ def test_limits_leave_figures_open_and_say_so():
 def test_figures_are_given_up_where_no_limit_was_asked_for(monkeypatch):
     standing = intplan.solve(Sheet.read("instances/demo/bakery.toml"))
     monkeypatch.setattr(intplan.planning.worth, "FIRST_NODES", (1, 0))
-    monkeypatch.setattr(intplan.planning.budget, "LAST_NODES", 1)
+    monkeypatch.setattr(intplan.planning.worth, "ALL_NODES", 3)
     table = worth(standing)
     assert any(entry.unsettled for entry in table)
-    assert (table.ended_by, table.given_up) == ("nodes", 1)
-    assert worth(standing, node_limit=3).given_up is None
+    assert (table.ended_by, table.given_up) == ("nodes", True)
+    assert not worth(standing, node_limit=3).given_up
 
 
 def test_time_that_is_up_is_told():

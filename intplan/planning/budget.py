@@ -58,11 +58,11 @@ class Budget:
         return LAST_NODES if self.unlimited else None
 
     @contextmanager
-    def ending(self) -> Iterator[None]:
+    def ending(self, nodes: int = ENDING_NODES) -> Iterator[None]:
         """Set an end to all searches within where no limit is given: some would go on for ever."""
         self.capped = self.unlimited
         if self.capped:
-            self.nodes = ENDING_NODES
+            self.nodes = nodes
         try:
             yield
         finally:

@@ -30,6 +30,7 @@ FLOOR: dict[Side, Number] = {"least": 0}
 # takes more waits until the others are settled, and is then looked at afresh: where loosening took
 # the cuts away that made the tree small, the kept tree is of no help.
 FIRST_NODES = 100, 2
+ALL_NODES = 20_000  # nodes for all these figures where no limit is given: some would never end
 NO_OPTIMUM = {
     "within_gap": "this one is within a gap; solve the sheet without one",
     "infeasible": "this sheet has no plan; ask which rules clash",
@@ -82,7 +83,7 @@ class WorthTable:
     floors : the names of bounds that keep an activity from falling below 0, and were left out
     ended_by : what left figures open: ``time``, ``nodes``, ``interrupt`` or ``range``; None where
         all are settled
-    given_up : where no limit was asked for, the nodes after which a figure was left open
+    given_up : figures that took long were left open although no limit was asked for
     """
 
     standing: StandingPlan
@@ -90,7 +91,7 @@ class WorthTable:
     others: tuple[str, ...]
     floors: tuple[str, ...]
     ended_by: str | None
-    given_up: int | None = None
+    given_up: bool = False
 
     def __iter__(self) -> Iterator[Worth]:
         return iter(self.entries)
@@ -112,9 +113,9 @@ def worth(
     standing : a plan that is proven optimal; it stays as it is
     below_zero : whether to weigh what keeps an activity from falling below 0 as well: a bound that
         few planners could do without, and few searches get through without
-    time_limit, node_limit : seconds and nodes for all searches together; with neither, a figure
-        is left open after `budget.LAST_NODES` nodes, since a sheet without one of its bounds may
-        be one that no search gets through
+    time_limit, node_limit : seconds and nodes for all searches together; with neither, figures
+        that take long are left open after `ALL_NODES` nodes, since a sheet without one of its
+        bounds may be one that no search gets through
     progress : called with the number of figures looked at and of those there are
     stop : polled; once it returns true, what is known is returned
 
@@ -152,7 +153,7 @@ def worth(
     prices = relaxation_prices(standing.sheet, stop)
     entries = sorted((item.worth(prices) for item in items), key=_rank)
     ended_by = weighing.ended_by if any(entry.unsettled for entry in entries) else None
-    given_up = budget.last_nodes if ended_by == "nodes" else None
+    given_up = ended_by == "nodes" and budget.unlimited
     return WorthTable(standing, tuple(entries), tuple(others), tuple(floors), ended_by, given_up)
 
 
@@ -289,12 +290,13 @@ class _Weighing:
         few, times = FIRST_NODES
         self.round(tasks, few + times * self.standing.search.nodes)
         hard = [task for task in tasks if task[0].gain(task[1]).ended_by in ("nodes", "time")]
-        self.round(hard, self.budget.last_nodes, afresh=True)
+        with self.budget.ending(ALL_NODES):
+            self.round(hard, None, afresh=True)
 
     def round(
         self, tasks: list[tuple[_Item, str]], most_nodes: int | None, afresh: bool = False
     ) -> None:
-        """Look once at each figure, within so many nodes and a fair share of the time."""
+        """Look once at each figure, within so many nodes and a fair share of what is left."""
         for done, (item, task) in enumerate(tasks):
             if self.progress is not None:
                 self.progress(done, len(tasks))
@@ -307,7 +309,8 @@ class _Weighing:
             changes = change_sheet(self.standing.sheet, **item.change(task))
             warm = partial(restarted, self.standing, changes)
             search = partial(solve, changes.sheet) if afresh else warm
-            gain = self.gain(search, most_nodes, len(tasks) - done)
+            nodes = self.budget.fair_nodes if most_nodes is None else most_nodes
+            gain = self.gain(search, nodes, len(tasks) - done)
             self.ended_by = gain.ended_by or self.ended_by
             item.gains[task] = item.gain(task).narrowed(gain)
 

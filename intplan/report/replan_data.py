@@ -162,7 +162,6 @@ def worth_data(table: WorthTable) -> Data:
     data: Data = {"title": standing.sheet.title, "outcome": standing.outcome}
     if table.ended_by is not None:
         data["ended_by"] = table.ended_by
-    if table.given_up is not None:
         data["given_up"] = table.given_up
     data |= exact_numbers(value=standing.exact_value)
     data["worth"] = {entry.name: _worth(entry) for entry in table.entries}

@@ -44,8 +44,8 @@ def worth_text(found: WorthTable) -> str:
         )
     if found.given_up:
         blocks.append(
-            f"Some figures were given up after {found.given_up:,} nodes; `--time-limit` or "
-            "`--node-limit` gives them longer."
+            "Some figures took too long and were given up; `--time-limit` or `--node-limit` gives "
+            "them longer."
         )
     elif found.ended_by:
         blocks.append(ENDED[found.ended_by])
