@@ -551,7 +551,7 @@ def test_worth_of_the_bakery():
     lines = paragraphs[1].split("\n")
     # By hand: one hour more of the oven saves an hour of overtime, 18 EUR; and no more than 2.2.
     oven = next(line for line in lines if line.startswith("Without oven:"))
-    assert oven == "Without oven: +39.60 EUR. One more: +18 EUR (18 a unit in fractions)."
+    assert oven == "Without oven: +39.60 EUR. One more: +18 EUR (18 per unit, of the relaxation)."
     data = worth_data(found)
     assert data["worth"]["oven"]["waived"] == 39.6 and data["worth"]["oven"]["unit"] == 18
     assert list(data["worth"]) == [entry.name for entry in found.entries]
@@ -596,13 +596,13 @@ def test_worths_of_every_kind():
         ended_by="time",
     )  # fmt: skip
     assert text.split("\n\n")[1:] == [
-        "Without oven: the aim has no limit. One more: +2 EUR (2.5 a unit in fractions).\n"
+        "Without oven: the aim has no limit. One more: +2 EUR (2.5 per unit, of the relaxation).\n"
         "Without mixer: from +1 EUR to +5 EUR, not settled. One more: +2 EUR (2.5 a unit in "
         "fractions).\n"
         "Without shelf: not settled. One less: not settled.\n"
         "Without loaf most: +1/3 EUR (about 0.333333). One more: nothing "
-        "(0.333333 a unit in fractions).\n"
-        "Without roll_tray least: +8 EUR. One less: +2 EUR (2.5 a unit in fractions).",
+        "(0.333333 per unit, of the relaxation).\n"
+        "Without roll_tray least: +8 EUR. One less: +2 EUR (2.5 per unit, of the relaxation).",
         "If an activity could fall below 0: loaf +7 EUR.",
         "overtime most and overtime least cost nothing.",
         "Not weighed: 2 bounds that keep activities from falling below 0; `--below-zero` weighs "
@@ -614,7 +614,7 @@ def test_worths_of_every_kind():
 
 def test_worths_where_less_is_better():
     text = worths(SOFT, entry("need", side="least", toward="least"))
-    assert "Without need: -3 h. One less: -2 h (2.5 a unit in fractions)." in text
+    assert "Without need: -3 h. One less: -2 h (2.5 per unit, of the relaxation)." in text
 
 
 def test_worths_that_are_not_settled():

@@ -109,7 +109,7 @@ def _price(sheet: Sheet, entry: Worth) -> str:
     """Write what a unit is worth where activities are divisible, to six digits."""
     if entry.price is None:
         return ""
-    return f" ({readable(Fraction(f'{entry.price:.6g}'))} a unit in fractions)"
+    return f" ({readable(Fraction(f'{entry.price:.6g}'))} per unit, of the relaxation)"
 
 
 def _idle_sentence(names: list[str], after_others: bool) -> str:
