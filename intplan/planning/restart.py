@@ -6,9 +6,10 @@ from collections.abc import Callable
 from fractions import Fraction
 from typing import TYPE_CHECKING
 
-from intplan.planning.standing import Progress, StandingPlan, confirmed, least_bends, solve
+from intplan.planning.standing import Progress, StandingPlan, confirmed, solve
 from intplan.sheet import Sheet
 from intplan.sheet.changes import SIDES, Changes
+from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number
 
 if TYPE_CHECKING:
@@ -124,9 +125,12 @@ def _plan(standing: StandingPlan, sheet: Sheet) -> list[Number] | None:
     if standing.answer.plan is None:
         return None
     amounts = standing.answer.plan[: len(sheet.activities)]
-    if not sheet.problem().bends:
-        return amounts
-    return [*amounts, *least_bends(sheet, sheet.check(amounts))]
+    bends: list[Number] = []
+    for bend in sheet.problem().bends:
+        rule = sheet.rules[bend.rule]
+        check = check_rule(rule, sheet.rule_value(rule, amounts))
+        bends.append(check.bend if check.side == bend.side else 0)
+    return [*amounts, *bends]
 
 
 def support(standing: StandingPlan, strictly: bool = True) -> set[str]:

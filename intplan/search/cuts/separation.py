@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from fractions import Fraction
 
 import numpy as np
 
@@ -41,11 +40,14 @@ class Separator:
         self.bounds = bounds
         self._aggregator = Aggregator(context.rows, context.record.rules, problem.whole)
         self._grain = _grain(problem)
-        rows, limits = context.rows, map(context.arithmetic.row_limits, range(len(problem.rows)))
-        self._rounded_rows = np.array(
-            [_off(low, rows.least.item(i)) or _off(high, rows.most.item(i))
-             for i, (low, high) in enumerate(limits)], bool,
-        )  # fmt: skip
+        self._rounded_rows = np.zeros(len(problem.rows), bool)
+        if not context.arithmetic.plain:
+            limits = enumerate(map(context.arithmetic.row_limits, range(len(problem.rows))))
+            rows = context.rows
+            self._rounded_rows[:] = [
+                _off(low, rows.least.item(i)) or _off(high, rows.most.item(i))
+                for i, (low, high) in limits
+            ]
         ends = zip(problem.exact_least, problem.exact_most, strict=True)
         self._rounded_columns = np.array(
             [_off(low, problem.least.item(j)) or _off(high, problem.most.item(j))
@@ -173,7 +175,7 @@ class Separator:
 
 def _off(exact: Number | None, double: float) -> bool:
     """Tell whether a limit is not quite the double that stands for it."""
-    return exact is not None and exact != Fraction(double)
+    return exact is not None and exact != double  # Python compares them exactly
 
 
 def _grain(problem: Problem) -> np.ndarray:
