@@ -222,7 +222,7 @@ class Search:
 
     def _solve_root(self, root: RootWork) -> Node | None:
         started = perf_counter()
-        self.context.nodes = 1
+        self.context.nodes += 1
         trials = self.context.pivots
         self._current = root
         split = self._develop_root(root)
@@ -315,8 +315,6 @@ class Search:
         if self.best.plan is not None:
             self.ended_by = None
             result = self._result()
-            if self.tree.nodes[0]["evidence"] is None:  # what its cuts used was not recorded
-                result.cuts = []
         else:
             result = find_plan(self.problem, self.limits)
             result.nodes += self.context.nodes
@@ -374,9 +372,11 @@ class Search:
         else:
             outcome = "unfinished"
         context = self.context
+        # Without evidence of the root what its cuts used was not recorded.
+        cuts = [] if self.tree.nodes[0]["evidence"] is None else context.record.cuts
         return SearchResult(
             outcome=outcome, ended_by=self.ended_by, plan=best.plan, value=value, bound=bound,
-            ray=None, tree=self.tree, cuts=context.record.cuts, nodes=context.nodes,
+            ray=None, tree=self.tree, cuts=cuts, nodes=context.nodes,
             pivots=context.pivots, seconds=self.limits.seconds(),
         )  # fmt: skip
 

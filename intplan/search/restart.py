@@ -220,9 +220,19 @@ class Restart(Search):
         self.held = np.arange(0)  # the rows that nodes hold
 
     def _result(self) -> SearchResult:
+        self._record_waiting()
         result = super()._result()
         result.reopened = self.reopened
         return result
+
+    def _record_waiting(self) -> None:
+        """Record what is proven of earlier nodes that a limit left waiting: the bound rests on it.
+
+        The node that was being solved then is among them.
+        """
+        for node in (*self.heap, self._current):
+            if isinstance(node, KeptNode) and self.tree.nodes[node.number]["outcome"] == "waiting":
+                self._record(node, "waiting")
 
     # ------------------------------------------------------------------ the root
 
