@@ -398,7 +398,7 @@ def test_warnings_of_a_sheet_go_to_stderr(call):
 def test_worth(call):
     status, out, err = call("worth", "bakery.json")
     assert (status, err) == (0, "")
-    assert "Without oven: +39.60 EUR. One more: +18 EUR (18 a unit in fractions)." in out
+    assert "Without oven: +39.60 EUR. One more: +18 EUR (18 per unit, of the relaxation)." in out
     status, out, _ = call("worth", "bakery.json", "--json")
     oven = json.loads(out)["worth"]["oven"]
     assert (status, oven["waived"], oven["unit"], oven["unsettled"]) == (0, 39.6, 18, [])

@@ -27,7 +27,7 @@ PAGE = page("docs/replan.md")
 COUNT, SECONDS = r"[\d,]+", r"(?:under )?[\d,.]+ s"
 VARYING = [
     rf"{COUNT} nodes?, with {COUNT} pivots? and {COUNT} cuts?, in {SECONDS}",
-    r"[\d,.]+(?= a unit in fractions)",
+    r"[\d,.]+(?= per unit, of the relaxation)",
     r"\d+(?= other rules and bounds cost nothing)",
     r"(?<=^Not weighed: )\d+ bounds?",
 ]

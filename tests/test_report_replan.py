@@ -597,8 +597,8 @@ def test_worths_of_every_kind():
     )  # fmt: skip
     assert text.split("\n\n")[1:] == [
         "Without oven: the aim has no limit. One more: +2 EUR (2.5 per unit, of the relaxation).\n"
-        "Without mixer: from +1 EUR to +5 EUR, not settled. One more: +2 EUR (2.5 a unit in "
-        "fractions).\n"
+        "Without mixer: from +1 EUR to +5 EUR, not settled. One more: +2 EUR (2.5 per "
+        "unit, of the relaxation).\n"
         "Without shelf: not settled. One less: not settled.\n"
         "Without loaf most: +1/3 EUR (about 0.333333). One more: nothing "
         "(0.333333 per unit, of the relaxation).\n"
