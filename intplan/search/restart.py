@@ -56,20 +56,42 @@ def restart(
     limits, gap : as in `intplan.search.branch_and_cut`
     plan : the earlier plan in the columns of `problem`; the first in hand if it still fits
     at : "root" to branch anew from the root's basis, "leaves" to take up the earlier tree; by
-        default the leaves where they are likely to pay, until they turn out not to
+        default the leaves where they are likely to pay, until they turn out not to, then the root,
+        and nothing where that turns out not to pay either
     """
+    size = len(kept.result.tree)
     leaves = leaves_pay(kept) if at is None else at == "leaves"
-    search = Restart(problem, gap, limits, False, kept, places, plan, leaves)
+    search: Search = Restart(problem, gap, limits, False, kept, places, plan, leaves)
+    ways = []
+    if at is None:
+        ways.append((size * OUTGROWN + MANY, lambda best: _afresh(problem, gap, limits, best)))
     if at is None and leaves:
-        search.most_nodes = len(kept.result.tree) * PATIENCE + FEW
-    try:
-        return search.run()
-    except _Outgrown:
-        spent = search
-    search = Restart(problem, gap, limits, False, kept, places, spent.best.plan or plan, False)
-    search.context.nodes, search.context.pivots = spent.context.nodes, spent.context.pivots
-    search.reopened = spent.reopened
+        ways.append(
+            (size * PATIENCE + FEW,
+             lambda best: Restart(problem, gap, limits, False, kept, places, best, False))
+        )  # fmt: skip
+    while ways and isinstance(search, Restart):
+        most, other = ways.pop()
+        search.most_nodes = search.context.nodes + most
+        try:
+            return search.run()
+        except _Outgrown:
+            spent, search = search, other(search.best.plan or plan)
+            context = search.context
+            context.nodes, context.pivots = spent.context.nodes, spent.context.pivots
+            if isinstance(search, Restart):
+                search.reopened = spent.reopened
     return search.run()
+
+
+def _afresh(
+    problem: Problem, gap: Fraction, limits: Limits, plan: Sequence[Number] | None
+) -> Search:
+    """Return a search from nothing but a plan."""
+    search = Search(problem, gap, limits)
+    if plan is not None and search.context.arithmetic.fits(plan):
+        search.best.offer(list(plan))
+    return search
 
 
 class _Outgrown(Exception):
@@ -105,6 +127,8 @@ def restart_for_any_plan(
 TRIED = 12  # pivots a node of the earlier tree from which its leaves are worth taking up
 PATIENCE = 0.5  # nodes next to the earlier tree's after which its leaves are given up
 FEW = 10  # nodes that the leaves are granted in any case
+OUTGROWN = 4  # nodes next to the earlier tree's after which its root is given up as well
+MANY = 400  # nodes that the root is granted in any case
 WORTHWHILE = 0.1  # share of the gap that a round of cuts must close to be followed by another
 
 
