@@ -19,6 +19,7 @@ from intplan import IntplanError, Sheet, load_standing, solve
 from intplan.planning import store
 from intplan.planning.encoding import Decoder, EncodingError, decode_number, encode
 from tests.bakery import ALL, BAKERY, CRATES, SOFT, split_evenly
+from tests.verify import verify_standing
 
 ROOT = Path(__file__).parent.parent
 
@@ -392,3 +393,23 @@ def test_a_kill_in_the_middle_of_saving_leaves_a_whole_file(tmp_path):
         os.kill(child.pid, signal.SIGKILL)
         child.communicate()
         assert load_standing(path).ended_by == "nodes"
+
+
+def test_a_file_of_format_1_is_read_and_can_be_replanned():
+    """Written by the program of that format: nodes have no basis, cuts lean on the cut-off."""
+    standing = load_standing(Path(__file__).with_name("standing_format_1.json"))
+    fresh = solve(standing.sheet)
+    assert (standing.outcome, standing.value) == ("optimal", fresh.value)
+    assert any(cut.leans for cut in standing.result.cuts)
+    assert all(basis is None for _, basis in standing.result.tree.nodes(data="basis"))
+    assert standing.result.reopened is None
+    verify_standing(standing)
+    binding = min(standing.check.rules, key=lambda rule: rule.spare)
+    for change in (
+        {"set": {binding.name: f"<= {binding.most - 9}"}},
+        {"set": {binding.name: f"<= {binding.most + 9}"}},
+        {"waive": [binding.name]},
+    ):
+        answer = standing.replan(**change)
+        assert answer.after.value == solve(answer.changes.sheet).value
+        verify_standing(answer.after)
