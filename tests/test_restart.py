@@ -1,12 +1,18 @@
-"""The kept tree taken up again under limits: what is proven stays with the tree."""
+"""The kept tree taken up again: under limits, and from files that say what no search says."""
 
 from __future__ import annotations
 
+import hashlib
+import json
+import tempfile
 from collections.abc import Callable
+from pathlib import Path
+from typing import Any
 
 import pytest
 
 import intplan
+from intplan.planning import store
 from intplan.planning.restart import restarted
 from intplan.search import restart as search
 from intplan.sheet.changes import Changes, change_sheet
@@ -88,3 +94,81 @@ def test_nodes_solved_before_the_leaves_are_given_up_count(
     own = sum(1 for _, node in root.tree.nodes(data=True) if node["pivots"])
     assert answer.search.nodes >= leaves.context.nodes + own
     verify_standing(answer)
+
+
+def forged(content: dict[str, Any], path: Path) -> Path:
+    """Write a file whose digest is right, whatever its content says."""
+    body = json.dumps(content).encode()
+    digest = hashlib.sha256(body).hexdigest()
+    head = json.dumps({"kind": store.KIND, "format": store.FORMAT, "sha256": digest})
+    path.write_bytes(head[:-1].encode() + b",\n" + store._CONTENT + body + store._END)
+    return path
+
+
+Forge = Callable[[dict[str, Any]], object]
+
+
+def root_evidence(result: dict[str, Any]) -> dict[str, Any]:
+    """Return the evidence of the root."""
+    return result["tree"]["nodes"][0]["evidence"]
+
+
+def child(result: dict[str, Any]) -> dict[str, Any]:
+    """Return the second node."""
+    return result["tree"]["nodes"][1]
+
+
+FORGERIES: dict[str, Forge] = {
+    "no steps": lambda result: root_evidence(result).pop("steps"),
+    "steps that are no list": lambda result: root_evidence(result).update(steps=True),
+    "a step that is no object": lambda result: root_evidence(result)["steps"].append("x"),
+    "a step of no activity": lambda result: root_evidence(result)["steps"].append(
+        {"by": "rule", "row": 0, "limit": 1, "leans": False, "changes": [[-1, 1, 0.0]]}
+    ),
+    "a step of an unknown rule": lambda result: root_evidence(result)["steps"].append(
+        {"by": "rule", "row": 999, "limit": 1, "leans": False, "changes": [[0, 1, 0.0]]}
+    ),
+    "a step without an end": lambda result: root_evidence(result)["steps"].append(
+        {"by": "rule", "row": 0, "limit": 1, "leans": False,
+         "changes": [[0, 1, {"$float": "nan"}]]}
+    ),
+    "no multipliers": lambda result: root_evidence(result)["closure"].pop("multipliers"),
+    "a multiplier short": lambda result: root_evidence(result)["closure"].update(
+        rows={"$array": "int64", "shape": [1], "values": [0]}
+    ),
+    "an unknown row": lambda result: root_evidence(result)["closure"].update(
+        rows={"$array": "int64", "shape": [1], "values": [-1]},
+        multipliers={"$array": "float64", "shape": [1], "values": [1.0]},
+    ),
+    "an amount left out": lambda result: child(result)["added"][0].__setitem__(2, -5.0),
+    "a branch on a cut": lambda result: child(result)["added"][0].__setitem__(0, "cut"),
+    "a branch that adds nothing": lambda result: child(result).update(added=[]),
+    "no nodes": lambda result: result["tree"].update(nodes=[]),
+    "a cut without premises": lambda result: result["cuts"][0]["evidence"].pop("box"),
+    "a cut of a later cut": lambda result: result["cuts"][0]["evidence"].update(row=999, rows=[0]),
+    "a cut without an end": lambda result: result["cuts"][0].update(least={"$float": "inf"}),
+}  # fmt: skip
+
+
+@pytest.fixture(scope="module")
+def content() -> str:
+    """What is in the file of a standing plan with branches and cuts, as JSON."""
+    standing, _ = standing_of(INSTANCES[2])
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder) / "standing.json"
+        standing.save(path)
+        return json.dumps(json.loads(path.read_text())["content"])
+
+
+@pytest.mark.parametrize("how", FORGERIES)
+def test_evidence_of_another_shape_is_refused_in_one_line(
+    how: str, content: str, tmp_path: Path
+) -> None:
+    """The digest guards against damage only, so a right digest proves no shape."""
+    record = json.loads(content)
+    path = forged(record, tmp_path / "forged.json")
+    assert intplan.load_standing(path).outcome == "optimal"
+    FORGERIES[how](record["result"])
+    with pytest.raises(intplan.IntplanError) as refused:
+        intplan.load_standing(forged(record, path))
+    assert "\n" not in str(refused.value)

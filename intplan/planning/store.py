@@ -25,6 +25,7 @@ import numpy as np
 from intplan.errors import IntplanError, PlanFileError
 from intplan.files import read_file, write_atomically
 from intplan.planning.encoding import Decoder, EncodingError, decode_number, encode
+from intplan.planning.shapes import Shapes
 from intplan.planning.standing import StandingPlan, confirmed, sheet_without
 from intplan.sheet import Sheet
 from intplan.sheet.numbers import fraction_text
@@ -248,13 +249,22 @@ def _read_result(record: dict[str, Any], sheet: Sheet) -> SearchResult:
         else:
             parts[name] = decoder.decode(value)
     proven = sheet_without(sheet, _left_out(record["tree"], sheet, decoder)).problem()
-    columns = len(proven.whole)
+    columns, rules = len(proven.whole), len(proven.rows)
     parts["cuts"] = _read_cuts(record["cuts"], columns, decoder)
-    places = columns, len(proven.rows), len(parts["cuts"])
-    parts["tree"] = _read_tree(record["tree"], *places, decoder)
+    parts["tree"] = _read_tree(record["tree"], columns, rules, len(parts["cuts"]), decoder)
+    _check_evidence(Shapes(proven.whole.tolist(), rules, len(parts["cuts"])), parts)
     result = SearchResult(**parts)
     _check_result(result, problem)
     return result
+
+
+def _check_evidence(shapes: Shapes, parts: dict[str, Any]) -> None:
+    """Check the evidence of a tree and its cuts."""
+    for number, cut in enumerate(parts["cuts"]):
+        shapes.check_cut(number, cut)
+    for node, attributes in parts["tree"].nodes(data=True):
+        shapes.check_node(node, attributes)
+    shapes.check_branchings(parts["tree"])
 
 
 def _left_out(tree: Any, sheet: Sheet, decoder: Decoder) -> tuple[str, ...]:
@@ -279,6 +289,10 @@ def _check_result(result: SearchResult, problem: Problem) -> None:
     """Check that outcome, plan, value and bound can stand together."""
     if not _is_among(result.outcome, OUTCOMES) or not _is_among(result.ended_by, ENDINGS):
         raise _Damage("its outcome is none that a search gives")
+    if type(result.any_plan) is not bool:
+        raise _Damage("it does not say what was looked for")
+    if result.outcome == "unbounded" and (result.plan is None or result.ray is None):
+        raise _Damage("its aim has no limit, but it lacks a plan or a direction")
     if (result.ended_by is None) != (result.outcome != "unfinished"):
         raise _Damage("its outcome does not fit what ended the search")
     has_plan = result.plan is not None
@@ -349,7 +363,7 @@ def _read_tree(
         _check_basis(node, attributes["basis"], columns, rules + cuts)
         tree.add_node(node, **attributes)
     tree.add_edges_from((parent, node) for node, parent in parents.items() if parent is not None)
-    if len(tree) != len(parents) or (parents and not nx.is_arborescence(tree)):
+    if not parents or len(tree) != len(parents) or not nx.is_arborescence(tree):
         raise _Damage("its nodes are not one tree")
     for parent, node in tree.edges():
         if tree.nodes[node]["depth"] != tree.nodes[parent]["depth"] + 1:
