@@ -140,7 +140,7 @@ class Shapes:
         _check_numbers(rows, self.rules + number)
         exact = isinstance(evidence["multipliers"], list)
         _check_multipliers(evidence["multipliers"], rows, exact)
-        _check_doubles(sides, len(rows))
+        _require(isinstance(sides, np.ndarray) and sides.shape == rows.shape)
         _require(bool(np.isin(sides, (-1, 0, 1)).all()))
         decode_number(evidence["plus"])
         limits = evidence.get("row_limits")
