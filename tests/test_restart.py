@@ -6,6 +6,7 @@ import hashlib
 import json
 import tempfile
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -93,6 +94,33 @@ def test_nodes_solved_before_the_leaves_are_given_up_count(
     assert leaves.context.nodes == 4
     own = sum(1 for _, node in root.tree.nodes(data=True) if node["pivots"])
     assert answer.search.nodes >= leaves.context.nodes + own
+    verify_standing(answer)
+
+
+BENDING = """
+[aim]
+maximize = "5*x + 4*y"
+[activities]
+x = { most = 9 }
+y = { most = 9 }
+[rules]
+oven = "3*x + 2*y <= 20"
+shelf = { rule = "x + 2*y <= 6", give = 1, give_most = 1 }
+"""
+
+
+@pytest.mark.parametrize(
+    "other", [{"give_most": 8}, {"give_most": None}, {"least": 4}, {"least": 4, "most": None}]
+)
+def test_a_soft_rule_may_be_replaced_by_one_of_the_same_terms(other: dict[str, Any]) -> None:
+    """Its bends are other columns then, or have other ends."""
+    standing = intplan.solve(intplan.Sheet.parse(BENDING))
+    shelf = replace(standing.sheet.rules[1], **other)
+    answer = standing.replan(waive=["shelf"], add={"shelf": shelf}).after
+    fresh = intplan.solve(replace(answer.sheet))
+    assert (answer.outcome, answer.exact_value) == (fresh.outcome, fresh.exact_value)
+    made, built = answer.sheet.problem(), fresh.sheet.problem()
+    assert (made.matrix == built.matrix).all() and (made.most == built.most).all()
     verify_standing(answer)
 
 

@@ -383,7 +383,11 @@ class Sheet:
 
 
 def _same_but_limits(rule: Rule, old: Rule | None) -> bool:
-    return old is not None and rule.terms is old.terms and rule.give == old.give
+    """Tell whether two rules differ in their limits alone, with the same bends if soft."""
+    if old is None or rule.terms is not old.terms or rule.give != old.give:
+        return False
+    sides = [(r.least is None, r.most is None, r.give_most) for r in (rule, old)]
+    return rule.give is None or sides[0] == sides[1]
 
 
 def _check_soft(sheet: Sheet, aim_terms: Terms) -> None:
