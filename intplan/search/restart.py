@@ -125,8 +125,8 @@ def restart_for_any_plan(
 
 
 TRIED = 12  # pivots a node of the earlier tree from which its leaves are worth taking up
-PATIENCE = 0.5  # nodes next to the earlier tree's after which its leaves are given up
-FEW = 10  # nodes that the leaves are granted in any case
+PATIENCE = 1.5  # nodes next to the earlier tree's after which its leaves are given up
+FEW = 30  # nodes that the leaves are granted in any case
 OUTGROWN = 4  # nodes next to the earlier tree's after which its root is given up as well
 MANY = 400  # nodes that the root is granted in any case
 WORTHWHILE = 0.1  # share of the gap that a round of cuts must close to be followed by another
@@ -201,9 +201,7 @@ class KeptRoot(RootWork):
         if not isinstance(proof, Proof) or self.context.best.value is not None:
             return proof
         self._dive()
-        if self.context.best.beats(proof.bound):
-            return self.close("beaten", proof)
-        return self.relax() if self.tighten(proof) else proof
+        return self.close("beaten", proof) if self.context.best.beats(proof.bound) else proof
 
     def _stalled(self, gain: float, total: float) -> bool:
         """Tell whether a round of cuts closed too little of the gap."""
@@ -272,6 +270,10 @@ class Restart(Search):
         if not self.leaves or self.earlier.out_degree(0) != 2:
             split = root.cut(proof)
             return split if split is not None or root.closed else root.develop()
+        if root.tighten(proof):
+            proof = root.relax()
+            if not isinstance(proof, Proof):
+                return proof
         root.keep_open(proof)
         root.note_held_cuts()
         self.held = root.dictionary.held_rows()
