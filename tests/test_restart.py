@@ -7,6 +7,7 @@ import json
 import tempfile
 from collections.abc import Callable
 from dataclasses import replace
+from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
@@ -122,6 +123,34 @@ def test_a_soft_rule_may_be_replaced_by_one_of_the_same_terms(other: dict[str, A
     made, built = answer.sheet.problem(), fresh.sheet.problem()
     assert (made.matrix == built.matrix).all() and (made.most == built.most).all()
     verify_standing(answer)
+
+
+CUT_FROM_A_BOUND = """
+[aim]
+maximize = "5*a + 5*b + 6*c + 4*d"
+[activities]
+a = { most = 5 }
+b = { most = 4 }
+c = { most = 4 }
+d = { most = 4, least = 1, whole = false }
+[rules]
+r0 = "7*a + 6*b + 8*c + 7*d <= 53"
+r1 = "10*a + 2*b + 1*c + 9*d <= 26"
+"""
+
+
+@pytest.mark.parametrize("at", ["root", "leaves"])
+def test_a_bound_that_gives_less_than_a_double_undoes_its_cuts(at: str) -> None:
+    """The exact bounds count; source: `tests.verify`."""
+    standing = intplan.solve(intplan.Sheet.parse(CUT_FROM_A_BOUND))
+    least_of_d = 2 * 3
+    assert any(least_of_d in cut.evidence["bounds"] for cut in standing.result.cuts)
+    hair = Fraction(1, 10**25)
+    assert float(1 - hair) == 1.0
+    answer = restarted(standing, change_sheet(standing.sheet, set={"d least": 1 - hair}), at=at)
+    verify_standing(answer)
+    assert answer.outcome == "optimal"
+    assert answer.exact_value == intplan.solve(answer.sheet).exact_value
 
 
 def forged(content: dict[str, Any], path: Path) -> Path:

@@ -353,11 +353,19 @@ class Carrier:
             places = wider[side].nonzero()[0]
             if (columns[places] < 0).any():
                 return None
+            if self._as_written(columns[places], side, bounds):
+                return None
             found = self._hold(2 * places + side, own[places], bounds)
             if found is None:
                 return None
             leans |= found
         return leans
+
+    def _as_written(self, columns: np.ndarray, side: int, bounds: Bounds) -> bool:
+        """Tell whether some bounds are the sheet's own; doubles may not show that they are wider."""
+        now = self.context.problem
+        written, present = (now.most, bounds.most) if side else (now.least, bounds.least)
+        return bool((written[columns] == present[columns]).any())
 
     def _hold(self, numbers: np.ndarray, values: np.ndarray, bounds: Bounds) -> bool | None:
         """Tell whether bounds lean on the cut-off, None where the present ones are wider."""
