@@ -532,3 +532,12 @@ def test_the_engine_takes_a_changed_sheet_as_if_it_were_read_anew(seed):
                 np.testing.assert_array_equal(ours, read, field.name)
             else:
                 assert ours == read, field.name
+
+
+def test_text_in_place_of_names_is_one_clear_line():
+    sheet = Sheet.parse('[activities]\na = { most = 3 }\n[rules]\nr = "a <= 2"')
+    for what in ("add", "set"):
+        with pytest.raises(SheetError) as caught:
+            change_sheet(sheet, **{what: "r <= 1"})
+        assert caught.value.where == what and "give names" in caught.value.message
+    assert change_sheet(sheet, waive=None).sheet.rules == sheet.rules

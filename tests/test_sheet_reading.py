@@ -330,3 +330,10 @@ def test_one_more_rule_in_the_names_of_a_sheet():
         sheet.rule_from_text("a b", "loaf <= 3")
     with pytest.raises(SheetError, match="rule flour: this rule is false"):
         sheet.rule_from_text("flour", "1 <= 0")
+
+
+def test_a_standing_plan_is_told_from_a_sheet():
+    with pytest.raises(SheetError) as caught:
+        Sheet.parse('{"kind": "intplan standing plan", "format": 2}', "week14.json")
+    assert caught.value.where == "week14.json"
+    assert "this is a standing plan, not a sheet" in caught.value.message

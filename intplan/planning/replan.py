@@ -45,8 +45,12 @@ class Replan:
 
     @property
     def exact_cost(self) -> Number | None:
-        """How much worse the aim got, negative if it got better; None without both values."""
-        if amounts_of(self.before) is None or amounts_of(self.after) is None:
+        """How much worse the aim got, negative if it got better; None without both values.
+
+        None as well where it is undecided what the best value is now.
+        """
+        pair = amounts_of(self.before), amounts_of(self.after)
+        if self.effect == "undecided" or None in pair:
             return None
         before, after = self.before.exact_value, self.after.exact_value
         maximize = self.after.sheet.aim.sense == "maximize"

@@ -194,7 +194,7 @@ def _limits(spoken: _Spoken, where: str) -> Limits:
 
 def _names(names: Iterable[str], what: str) -> list[str]:
     """Return names in normal form, with one space between their words."""
-    listed = [names] if isinstance(names, str) else list(names)
+    listed = [names] if isinstance(names, str) else list(names or ())
     for name in listed:
         if not isinstance(name, str):
             raise SheetError("a name is text", what)
@@ -203,6 +203,8 @@ def _names(names: Iterable[str], what: str) -> list[str]:
 
 def _pairs(named: Named | None, what: str) -> list[tuple[str, Any]]:
     """Return what is given by name as pairs."""
+    if isinstance(named, str):
+        raise SheetError('give names with what is meant of them, such as {"oven": "<= 14"}', what)
     pairs = list(named.items() if isinstance(named, Mapping) else named or ())
     names = _names([name for name, _ in pairs], what)
     return [(name, value) for name, (_, value) in zip(names, pairs, strict=True)]

@@ -20,6 +20,7 @@ MOST_BYTES = 32_000_000
 SHEET_KEYS = ("title", "measure", "aim", "activities", "rules")
 AIM_KEYS = ("maximize", "minimize")
 ACTIVITY_KEYS = ("least", "most", "whole", "unit")
+STANDING = '{"kind": "intplan standing plan"'  # how a file of another kind begins
 RULE_KEYS = ("rule", "note", "give", "give_most")
 
 _BRACKETED = re.compile(r"""^[ \t]*(?P<name>[^\s"'\[\]=#.]+\[[^\[\]"'=#]*\])[ \t]*=""")
@@ -81,6 +82,10 @@ def parse_toml(text: str, where: str) -> dict[str, Any]:
     try:
         return tomllib.loads(text, parse_float=DecimalText)
     except tomllib.TOMLDecodeError as problem:
+        if text.lstrip().startswith(STANDING):
+            raise SheetError(
+                "this is a standing plan, not a sheet; replan, worth, clash and tree read it", where
+            ) from None
         raise _toml_error(text, str(problem), where) from None
     except RecursionError:
         raise SheetError("tables or arrays are nested too deeply", where) from None
