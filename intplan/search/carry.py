@@ -362,7 +362,7 @@ class Carrier:
         return leans
 
     def _as_written(self, columns: np.ndarray, side: int, bounds: Bounds) -> bool:
-        """Tell whether some bounds are the sheet's own; doubles may not show that they are wider."""
+        """Tell whether some bounds are the sheet's own: doubles may not show them to be wider."""
         now = self.context.problem
         written, present = (now.most, bounds.most) if side else (now.least, bounds.least)
         return bool((written[columns] == present[columns]).any())
