@@ -16,6 +16,7 @@ import pytest
 import intplan
 from intplan.planning import store
 from intplan.planning.restart import restarted
+from intplan.relaxation.start import NoDualBasis
 from intplan.search import restart as search
 from intplan.sheet.changes import Changes, change_sheet
 from tests.families import Instance, covering, product_mix, selection
@@ -95,6 +96,28 @@ def test_nodes_solved_before_the_leaves_are_given_up_count(
     assert leaves.context.nodes == 4
     own = sum(1 for _, node in root.tree.nodes(data=True) if node["pivots"])
     assert answer.search.nodes >= leaves.context.nodes + own
+    verify_standing(answer)
+
+
+@pytest.mark.parametrize("instance", INSTANCES, ids=lambda instance: instance.family)
+def test_nodes_for_which_doubles_find_no_basis_start_from_the_slack_basis(
+    instance: Instance, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """As nodes of a search from nothing do; what follows is proven anyway."""
+    standing, changes = standing_of(instance)
+    expected = intplan.solve(changes.sheet).exact_value
+    refused = []
+    start = search.opened
+
+    def opened(context: Any, *where: Any) -> Any:
+        if context.nodes > 1:
+            refused.append(context.nodes)
+            raise NoDualBasis(context.problem.cost, 0)
+        return start(context, *where)
+
+    monkeypatch.setattr(search, "opened", opened)
+    answer = restarted(standing, changes, at="leaves")
+    assert refused and answer.outcome == "optimal" and answer.exact_value == expected
     verify_standing(answer)
 
 

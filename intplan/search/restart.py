@@ -23,7 +23,7 @@ from typing import Any
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary
-from intplan.relaxation.start import cold_start
+from intplan.relaxation.start import NoDualBasis, cold_start
 from intplan.search.carry import Carrier, Kept, Places
 from intplan.search.context import Context
 from intplan.search.develop import NodeWork, Split, rounded_down
@@ -406,7 +406,7 @@ class Restart(Search):
         context = self.context
         context.nodes += 1
         self.reopened += 1
-        dictionary = opened(context, self.carrier, node.basis, node.bounds, self.held)
+        dictionary = self._opened(node)
         total = context.pivots
         work = NodeWork(
             context, node.number, node.bound, self._closure(node), dictionary, node.bounds
@@ -418,6 +418,16 @@ class Restart(Search):
         entry["pivots"] = context.pivots - total
         entry["seconds"] = perf_counter() - started
         return None if split is None else self._branch(work, node.depth, split)
+
+    def _opened(self, node: KeptNode) -> Dictionary:
+        """Return a node's first dictionary: the slack basis where doubles find no better one."""
+        context, bounds = self.context, node.bounds
+        try:
+            return opened(context, self.carrier, node.basis, bounds, self.held)
+        except (NoDualBasis, np.linalg.LinAlgError):
+            return Dictionary.at_slack_basis(
+                context.rows, context.problem.cost, bounds.least, bounds.most, self.held
+            )
 
 
 def closed_by_crossing(
