@@ -133,19 +133,16 @@ def _plan(standing: StandingPlan, sheet: Sheet) -> list[Number] | None:
     return [*amounts, *bends]
 
 
-def support(standing: StandingPlan, strictly: bool = True) -> set[str]:
+def support(standing: StandingPlan) -> set[str]:
     """Return the rules and bounds (``loaf most``) that the kept tree rests on.
 
-    Parameters
-    ----------
-    standing : its tree is gone through
-    strictly : count also what closures use by no more than a rounding error, so that all else is
-        known to be of no account
+    What closures use by no more than a rounding error counts as well, so that all else is known to
+    be of no account.
     """
     from intplan.search.support import used_by_tree
 
     sheet = standing.proven_sheet
-    rules, bounds = used_by_tree(standing.kept, strictly)
+    rules, bounds = used_by_tree(standing.kept)
     names = {sheet.rules[i].name for i in rules}
     activities = len(sheet.activities)
     bends = sheet.problem().bends

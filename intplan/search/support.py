@@ -34,20 +34,19 @@ class _Fact:
     facts: Iterable[int] = ()
 
 
-def used_by_tree(kept: Kept, strictly: bool) -> tuple[set[int], set[tuple[int, int]]]:
+def used_by_tree(kept: Kept) -> tuple[set[int], set[tuple[int, int]]]:
     """Return the rules and bounds that the closures of a tree rest on.
 
     Parameters
     ----------
-    kept : the search
-    strictly : count also bounds that closures use by no more than a rounding error
+    kept : the search; bounds that closures use by no more than a rounding error count as well
 
     Returns
     -------
     rules, bounds
         Numbers of rules, and pairs (column, side) of finite bounds.
     """
-    walk = _Walk(kept, strictly)
+    walk = _Walk(kept)
     walk.through()
     return walk.collected()
 
@@ -91,7 +90,6 @@ class _Walk:
     """
 
     kept: Kept
-    strictly: bool
     facts: list[_Fact] = field(default_factory=list)
     closures: list[int] = field(default_factory=list)
     cuts: list[int] = field(default_factory=list)
@@ -203,9 +201,8 @@ class _Walk:
         reduced = (self.kept.problem.cost if closure["weight"] else 0.0) - parts
         error = ROUNDING * (1.0 + float(np.abs(values).sum()))
         least, most = reduced > error, reduced < -error
-        if self.strictly:
-            unclear = (np.abs(reduced) <= error) & self._filled(rows, closure["weight"])
-            least, most = least | unclear, most | unclear
+        unclear = (np.abs(reduced) <= error) & self._filled(rows, closure["weight"])
+        least, most = least | unclear, most | unclear
         numbers = np.concatenate((2 * least.nonzero()[0], 2 * most.nonzero()[0] + 1)).tolist()
         if moved is not None:
             column, side = moved
@@ -221,14 +218,13 @@ class _Walk:
         evidence = cut.evidence
         if cut.kind == "cover":
             row = evidence["row"]
-            items = np.array([j for j in self.touched[row]], int)
+            items = self.touched[row]
             numbers = np.concatenate((2 * items, 2 * items + 1))
             return self._premises([row], numbers, sources)
         rows = np.asarray(evidence["rows"], int)
         numbers = np.asarray(evidence["bounds"], int)
-        if self.strictly:
-            columns = (self.matrix[rows] != 0).any(axis=0).nonzero()[0]
-            numbers = np.union1d(numbers, np.concatenate((2 * columns, 2 * columns + 1)))
+        columns = (self.matrix[rows] != 0).any(axis=0).nonzero()[0]
+        numbers = np.union1d(numbers, np.concatenate((2 * columns, 2 * columns + 1)))
         return self._premises(rows, numbers, sources)
 
     def collected(self) -> tuple[set[int], set[tuple[int, int]]]:
