@@ -2,8 +2,13 @@
 
 from __future__ import annotations
 
+import contextlib
+import io
 import re
+import shlex
 from pathlib import Path
+
+from intplan.cli.app import run
 
 ROOT = Path(__file__).parent.parent
 
@@ -29,3 +34,13 @@ def table(text: str, heading: str) -> list[list[str]]:
     rows = re.search(rf"{head}((?:\|.*\n)+)", text, re.MULTILINE)
     assert rows, f"there is no table with the column {heading}"
     return [[cell.strip() for cell in row.strip("|").split("|")] for row in rows[1].splitlines()]
+
+
+def called(command: str) -> tuple[int, str]:
+    """Run a command line in this process; return its exit status and all that it prints."""
+    name, *arguments = shlex.split(command)
+    assert name == "intplan"
+    with io.StringIO() as both:
+        with contextlib.redirect_stdout(both), contextlib.redirect_stderr(both):
+            status = run(arguments)
+        return status, both.getvalue()

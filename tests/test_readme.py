@@ -22,10 +22,10 @@ import click
 import pytest
 
 import intplan
-from intplan.cli import app, commands, interrupts, run
+from intplan.cli import app, commands, interrupts
 from tests import bench
 from tests.families import index_of
-from tests.pages import ROOT, blocks, page, prose, table
+from tests.pages import ROOT, blocks, called, page, prose, table
 
 README = page("README.md")
 DEVELOPERS = page("DEVELOPERS.md")
@@ -68,16 +68,6 @@ def settled(output: str) -> str:
     for pattern in VARYING:
         output = re.sub(pattern, "<varies>", output, flags=re.MULTILINE)
     return output
-
-
-def called(command: str) -> tuple[int, str]:
-    """Run a command line in this process; return its exit status and all that it prints."""
-    name, *arguments = shlex.split(command)
-    assert name == "intplan"
-    with io.StringIO() as both:
-        with contextlib.redirect_stdout(both), contextlib.redirect_stderr(both):
-            status = run(arguments)
-        return status, both.getvalue()
 
 
 @pytest.fixture(scope="module")

@@ -17,9 +17,9 @@ import pytest
 
 import intplan
 import intplan.planning
-from intplan.cli import app, run
+from intplan.cli import app
 from intplan.planning import Worth
-from tests.pages import ROOT, blocks, page, table
+from tests.pages import ROOT, blocks, called, page, table
 
 PAGE = page("docs/replan.md")
 
@@ -50,16 +50,6 @@ def settled(output: str) -> str:
     for pattern in VARYING:
         output = re.sub(pattern, "<varies>", output, flags=re.MULTILINE)
     return output
-
-
-def called(command: str) -> tuple[int, str]:
-    """Run a command line in this process; return its exit status and all that it prints."""
-    name, *arguments = shlex.split(command)
-    assert name == "intplan"
-    with io.StringIO() as both:
-        with contextlib.redirect_stdout(both), contextlib.redirect_stderr(both):
-            status = run(arguments)
-        return status, both.getvalue()
 
 
 @pytest.fixture(scope="module")
