@@ -24,6 +24,8 @@ from intplan.search.cuts.distances import Limits, Rounding
 from intplan.search.cuts.gomory import gomory_cuts
 from intplan.search.cuts.integers import integer_gomory_cut
 from intplan.search.cuts.separation import Separator
+from intplan.search.evidence import Proof
+from intplan.search.root import RootWork
 from intplan.search.tightening import Bounds
 from intplan.sheet.problem import Problem
 from tests.families import Instance, assignment, build, index_of, lot_sizing, problem_of
@@ -477,3 +479,25 @@ def test_cuts_are_kept_as_the_rows_they_are(
             assert max(cut.columns) < len(problem.cost)
         held = [a for a in result.tree.nodes[0]["added"] if a.kind == "cut"]
         assert all(a.value == result.cuts[a.index].least for a in held)
+
+
+def test_cuts_that_lean_on_the_best_plan_are_proven(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Cuts are soon measured from bounds by cost; each must then say that it leans."""
+    leaning: Counter[str] = Counter()
+    prepared = RootWork._open_relaxation
+
+    def tightened(root: RootWork) -> Any:
+        """Open the root, tighten by cost, and let cuts be measured from that."""
+        proof = prepared(root)
+        if isinstance(proof, Proof) and root.tighten(proof):
+            proof = root.relax()
+        root.free = root.bounds
+        return proof
+
+    monkeypatch.setattr(RootWork, "_open_relaxation", tightened)
+    for instance in map(random_problem, range(160)):
+        problem = problem_of(instance)
+        result = branch_and_cut(problem)
+        verify(problem, result)
+        leaning.update(cut.kind for cut in result.cuts if cut.leans)
+    assert leaning["gomory"] > 5, leaning
