@@ -131,9 +131,9 @@ def closed_by_penalty(
     return closed
 
 
-def score(down: float, up: float) -> float:
+def score(down: np.ndarray | float, up: np.ndarray | float) -> np.ndarray | float:
     """Combine both sides' rises: their product, so that neither side is neglected."""
-    return max(down, SCORE_FLOOR) * max(up, SCORE_FLOOR)
+    return np.maximum(down, SCORE_FLOOR) * np.maximum(up, SCORE_FLOOR)
 
 
 def choose(
@@ -159,8 +159,7 @@ def choose(
     closed = closed_by_penalty(dictionary, rows, first, entering, spare)
     ceiling = min(spare, 1e6 * (1.0 + abs(dictionary.value)))
     gains = costs.estimate(columns, fractions, np.minimum(first, ceiling))
-    scores = np.maximum(gains[0], SCORE_FLOOR) * np.maximum(gains[1], SCORE_FLOOR)
-    best = (-scores).argsort(kind="stable")[:CANDIDATES]
+    best = (-score(*gains)).argsort(kind="stable")[:CANDIDATES]
     if closed:
         i = best.item(0)
         return Choice(

@@ -31,6 +31,7 @@ from intplan.search.diving import dive
 from intplan.search.engine import Search, as_any_plan, drawn_home
 from intplan.search.evidence import LEAST, MOST, Proof
 from intplan.search.limits import Limits
+from intplan.search.nearby import look_nearby
 from intplan.search.node import Node
 from intplan.search.result import SearchResult
 from intplan.search.root import RootWork
@@ -129,7 +130,7 @@ PATIENCE = 1.5  # nodes next to the earlier tree's after which its leaves are gi
 FEW = 30  # nodes that the leaves are granted in any case
 OUTGROWN = 4  # nodes next to the earlier tree's after which its root is given up as well
 MANY = 400  # nodes that the root is granted in any case
-WORTHWHILE = 0.1  # share of the gap that a round of cuts must close to be followed by another
+NEW_ROUNDS = 1  # rounds of new cuts at a root that has those of the earlier one
 
 
 @dataclass(slots=True)
@@ -165,7 +166,7 @@ class KeptNode:
 class KeptRoot(RootWork):
     """The root of a changed problem, from the basis and the cuts of the earlier root."""
 
-    patience = 1
+    rounds = NEW_ROUNDS
 
     def __init__(self, context: Context, carrier: Carrier, plan: Sequence[Number] | None) -> None:
         super().__init__(context)
@@ -196,26 +197,23 @@ class KeptRoot(RootWork):
         self.dictionary = opened(context, carrier, basis, self.bounds, held)
 
     def open_relaxation(self) -> Proof | Split | None:
-        """Solve the relaxation and find a first plan."""
+        """Solve the relaxation and look for a plan near the earlier one."""
         proof = self._open_relaxation()
-        if not isinstance(proof, Proof) or self.context.best.value is not None:
+        if not isinstance(proof, Proof) or not len(self.fractional_rows()):
             return proof
-        self._dive()
-        return self.close("beaten", proof) if self.context.best.beats(proof.bound) else proof
-
-    def _stalled(self, gain: float, total: float) -> bool:
-        """Tell whether a round of cuts closed too little of the gap."""
-        best = self.context.best
-        if best.value is None:
-            return super()._stalled(gain, total)
-        gap = best.threshold - (self.dictionary.value - gain)
-        return gain < WORTHWHILE * gap
-
-    def _dive(self) -> None:
-        """Look for a first plan near the earlier one."""
         context = self.context
-        if len(self.fractional_rows()) and context.time_to_dive():
+        if self.plan is not None:
+            look_nearby(context, self.dictionary, self.bounds, self.plan)
+        if context.best.value is None and context.time_to_dive():
             dive(context, self.dictionary, self.bounds, self.plan)
+        return self.close("beaten", proof) if context.best.beats(proof.bound) else proof
+
+    def cut(self, proof: Proof) -> Split | None:
+        """Add cuts as at any root, and look near the earlier plan again."""
+        split = super().cut(proof)
+        if split is None and self.plan is not None and not self.closed:
+            look_nearby(self.context, self.dictionary, self.bounds, self.plan, widen=False)
+        return split
 
 
 class Restart(Search):

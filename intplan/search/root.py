@@ -32,10 +32,10 @@ class RootWork(NodeWork):
     ----------
     free : the bounds that hold for every plan, not only for better ones than the best so far: cuts
         are measured from them at first, so that they do not lean on the cut-off
-    patience : stalled rounds of cuts in a row that end the cutting
+    rounds : rounds of cuts at most
     """
 
-    patience = PATIENCE
+    rounds = CUT_ROUNDS
 
     def __init__(self, context: Context) -> None:
         problem = context.problem
@@ -130,7 +130,7 @@ class RootWork(NodeWork):
     def _cut_in_rounds(self, proof: Proof | Split | None) -> Split | None:
         separator = Separator(self.context, self.free)
         started, stalled, tightened = self.dictionary.value, 0, False
-        for _ in range(CUT_ROUNDS):
+        for _ in range(self.rounds):
             rows = self.fractional_rows()
             if not len(rows) or self.context.limits.out_of_time():
                 return None
@@ -149,8 +149,8 @@ class RootWork(NodeWork):
                     self.tighten(proof)
             gain = self.dictionary.value - before
             total = self.dictionary.value - started
-            stalled = stalled + 1 if self._stalled(gain, total) else 0
-            if stalled < self.patience and len(numbers):
+            stalled = stalled + 1 if gain < STALL * max(total, 1e-9) else 0
+            if stalled < PATIENCE and len(numbers):
                 continue
             if tightened or not self.tighten(proof):
                 return None
@@ -159,10 +159,6 @@ class RootWork(NodeWork):
                 return proof
             separator.bounds, stalled, tightened = self.bounds, 0, True
         return None
-
-    def _stalled(self, gain: float, total: float) -> bool:
-        """Tell whether a round of cuts lifted the bound by too little."""
-        return gain < STALL * max(total, 1e-9)
 
     def _drop_slack_cuts(self) -> None:
         """Let cuts that do not bind leave the dictionary."""
