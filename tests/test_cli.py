@@ -11,7 +11,6 @@ from pathlib import Path
 import pytest
 
 from intplan import Sheet, load_standing
-from intplan.cli import run
 from intplan.cli.console import Console, OutputError
 from intplan.planning import compare as compare_module
 from tests.bakery import (
@@ -40,37 +39,6 @@ def folder(tmp_path, monkeypatch):
         (tmp_path / f"{name}.toml").write_text(text)
     monkeypatch.chdir(tmp_path)
     return tmp_path
-
-
-@pytest.fixture
-def call(folder, capsys):
-    """Run a command line; give its exit status, stdout and stderr."""
-
-    def call(*arguments: str) -> tuple[int, str, str]:
-        status = run(arguments)
-        out, err = capsys.readouterr()
-        return status, out, err
-
-    return call
-
-
-@pytest.fixture
-def failure(call):
-    """Run a command line that must fail as bad input; give its one line."""
-
-    def failure(*arguments: str) -> str:
-        before = {path: path.read_bytes() for path in Path().iterdir() if path.is_file()}
-        status, out, err = call(*arguments)
-        assert (status, out) == (2, "")
-        assert err.startswith("intplan: ") and err.count("\n") == 1 and err.endswith("\n")
-        status, out, json_err = call(*arguments[:1], "--json", *arguments[1:])
-        error = json.loads(out)["error"]
-        assert (status, json_err, set(error)) == (2, "", {"message", "where"})
-        assert error["message"] in err
-        assert {p: p.read_bytes() for p in Path().iterdir() if p.is_file()} == before
-        return err
-
-    return failure
 
 
 # ------------------------------------------------------------------------------ solve

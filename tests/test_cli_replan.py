@@ -37,40 +37,12 @@ def solved(tmp_path_factory):
 
 
 @pytest.fixture
-def call(solved, tmp_path, monkeypatch, capsys):
-    """Run a command line beside fresh links to the sheets; give exit status, stdout, stderr."""
+def folder(solved, tmp_path, monkeypatch):
+    """A folder with fresh copies of them, and the program started there."""
     for path in solved.iterdir():
         (tmp_path / path.name).write_bytes(path.read_bytes())
     monkeypatch.chdir(tmp_path)
-    capsys.readouterr()
-
-    def call(*arguments: str) -> tuple[int, str, str]:
-        status = run(arguments)
-        out, err = capsys.readouterr()
-        return status, out, err
-
-    return call
-
-
-@pytest.fixture
-def failure(call):
-    """Run a command line that must fail as bad input; give its one line."""
-
-    def failure(*arguments: str) -> str:
-        before = {path: path.read_bytes() for path in Path().iterdir() if path.is_file()}
-        status, out, err = call(*arguments)
-        assert (status, out) == (2, ""), out
-        assert err.startswith("intplan: ") and err.count("\n") == 1 and err.endswith("\n")
-        assert all(char.isprintable() for char in err[:-1])
-        assert "fault in intplan" not in err
-        status, out, json_err = call(*arguments[:1], "--json", *arguments[1:])
-        error = json.loads(out)["error"]
-        assert (status, json_err, set(error)) == (2, "", {"message", "where"})
-        assert error["message"] in err
-        assert {p: p.read_bytes() for p in Path().iterdir() if p.is_file()} == before
-        return err
-
-    return failure
+    return tmp_path
 
 
 # ------------------------------------------------------------------------------ replan
