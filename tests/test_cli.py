@@ -144,6 +144,28 @@ def test_targets_are_tried_before_the_work(option, failure, folder):
     os.symlink("even.toml", "link.json")
     assert "read by this command" in failure("solve", "even.toml", option, "link.json")
     assert "no folder" in failure("solve", "even.toml", option, "even.toml/x.json")
+    assert "ends in / is that of a folder" in failure("solve", "even.toml", option, "x/")
+    too_long = os.strerror(errno.ENAMETOOLONG)
+    assert f"made there ({too_long})" in failure("solve", "even.toml", option, "n" * 300)
+
+
+def test_folders_that_take_no_file(failure, monkeypatch):
+    def refuse(*_):
+        raise FileNotFoundError(errno.ENOENT, "No such file or directory")
+
+    monkeypatch.setattr(os, "open", refuse)
+    said = "this file cannot be written: no file can be made there (No such file or directory)"
+    for name in ("new.json", "soft.toml"):
+        assert said in failure("solve", "even.toml", "--save", name)
+
+
+def test_empty_names_of_files(failure):
+    Path("plan.csv").write_text("activity,amount\n")
+    reading = "the name of a file to read is empty"
+    for words in (["solve", ""], ["check", "", "plan.csv"], ["check", "bakery.toml", ""],
+                  ["compare", ""], ["tree", "", "--to", "t.dot"]):  # fmt: skip
+        assert reading in failure(*words)
+    assert "the name of a file to write is empty" in failure("tree", "s.json", "--to", "")
 
 
 @pytest.mark.skipif(os.name != "posix" or os.geteuid() == 0, reason="root may write anywhere")

@@ -221,6 +221,7 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--add", "c: loaf"], "a rule needs a relation"),
         (["--add", "c"], "a name, a colon and a rule"),
         (["--add", ""], "a name, a colon and a rule"),
+        (["--add", ": loaf <= 3"], "an empty name; a name is a letter"),
         (["--add", "c d: loaf <= 3"], "a name holds no spaces"),
         (["--add", "c: 1 <= 0"], "false whatever the activities"),
         (["--add", 'c: {rule = "loaf <= 3", giev = 2}'], 'did you mean "give"?'),
@@ -228,12 +229,15 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--add", "c: __import__('os') <= 3"], 'unknown name "__import__"'),
         (["--add", "\x1b[31m: loaf <= 3"], r"\x1b[31m"),
         (["--waive", "ovn"], 'did you mean "oven"?'),
+        (["--waive", ""], "waive: an empty name"),
         (["--waive", "loaf"], "its bounds are loaf least and loaf most"),
-        (["--waive", "oven", "--waive", "oven"], "waived twice"),
+        (["--waive", "oven", "--waive", "oven"], "oven is waived twice; say it once"),
         (["--waive", "oven most"], "oven is a rule"),
         (["--waive", "oven", "--set", "oven <= 14"], "waived and set"),
         (["--waive", "\x9bK"], r"\x9bK"),
-        (["--set", "oven >= 3"], "oven has no least"),
+        (["--set", "oven >= 3"], "oven has no least; it says"),
+        (["--set", "3 <= oven <= 9"], "add a rule of another name, such as oven_least: "),
+        (["--set", "loaf mst = 3"], 'did you mean "loaf most"?'),
         (["--set", "ovn <= 3"], 'did you mean "oven"?'),
         (["--set", "oven < 3"], "write <="),
         (["--set", "oven"], "a rule needs a relation"),
@@ -244,14 +248,20 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--set", "oven <= 3", "--set", "oven <= 4"], "set twice"),
         (["--set", "oven <= 1e999"], "doubles"),
         (["--set", ""], "such as oven <= 14"),
+        (["--freeze", ""], "freeze: an empty name"),
+        (["--freeze", "loaf", "--freeze", "loaf"], "loaf is frozen twice; say it once"),
         (["--freeze", "laof"], 'did you mean "loaf"?'),
         (["--freeze", "oven"], "oven is a rule"),
         (["--freeze", "loaf", "--set", "loaf <= 3"], "both set and frozen"),
+        (["--waive", "oven", "--may-bend", ""], "may_bend: an empty name"),
         (["--waive", "oven", "--may-bend", "mixr"], 'did you mean "mixer"?'),
         (["--waive", "oven", "--may-bend", "loaf most"], "only rules may bend"),
         (["--waive", "oven", "--may-bend", "oven"], 'unknown rule "oven"'),
         (["--waive", "oven", "--stay-close", "101"], "no percentage"),
         (["--waive", "oven", "--stay-close", "much"], "no percentage"),
+        (["--waive", "oven", "--stay-close", "-1"], "'--stay-close': '-1' is no percentage"),
+        (["--stay-close=-.5", "--waive", "oven"], "'--stay-close': '-.5' is no percentage"),
+        (["--waive", "oven", "--stay-close", "-x"], "No such option"),
         (["--waive", "oven", "--node-limit", "0"], "no whole number from 1"),
         (["--waive", "oven", "--gap", "x"], "no percentage"),
         (["--waive"], "--waive"),
@@ -276,6 +286,7 @@ def test_replan_reads_standing_plans_only(failure, call):
     Path("cut.json").write_bytes(Path("bakery.json").read_bytes()[:-90])
     assert "cut.json" in failure("replan", "cut.json", *change)
     assert "STANDING" in failure("replan", *change)
+    assert "name of a file to read is empty" in failure("replan", "", *change)
 
 
 @pytest.mark.parametrize("option", ["--save", "--plan-to"])
@@ -348,6 +359,8 @@ def test_clash_refuses(failure):
     assert "no such file" in failure("clash", "absent.toml")
     assert "no such file" in failure("clash", "absent.json")
     assert "no such file" in failure("clash", "absent")
+    assert "name of a file to read is empty" in failure("clash", "")
+    assert "may_bend: an empty name" in failure("clash", "infeasible.toml", "--may-bend", "")
     assert 'unknown rule "od"' in failure("clash", "infeasible.toml", "--may-bend", "od")
     Path("bad.toml").write_text("[activities\n")
     assert "line 1" in failure("clash", "bad.toml")
@@ -407,6 +420,7 @@ def test_worth_refuses(failure):
     assert "no limit" in failure("worth", "unbounded.json")
     assert "`intplan solve" in failure("worth", "bakery.toml")
     assert "STANDING" in failure("worth")
+    assert "name of a file to read is empty" in failure("worth", "")
 
 
 # ------------------------------------------------------------------------------ all three

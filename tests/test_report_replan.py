@@ -617,6 +617,13 @@ def test_worths_where_less_is_better():
     assert "Without need: -3 h. One less: -2 h (2.5 per unit, of the relaxation)." in text
 
 
+def test_worths_that_are_rounded():
+    text = worths(BAKERY, entry("oven", waived=Fraction(10**30, 7), unit=Fraction(10**30, 11)))
+    assert "Without oven: about +1.42857e29 EUR. One more: about +9.09091e28 EUR (" in text
+    text = worths(SOFT, entry("need", side="least", toward="least", waived=Fraction(10**30, 7)))
+    assert "Without need: about -1.42857e29 h." in text
+
+
 def test_worths_that_are_not_settled():
     some = entry("oven", waived=None, at_least=0, at_most=5, unsettled=("waived",))
     text = worths(BAKERY, some, ended_by="nodes")

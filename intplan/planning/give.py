@@ -72,6 +72,8 @@ def bendable_rules(sheet: Sheet, may_bend: Iterable[str] | None) -> tuple[str, .
         return tuple(rule.name for rule in sheet.rules)
     wanted = {may_bend} if isinstance(may_bend, str) else set(may_bend)
     for name in sorted(wanted - sheet.rule_index.keys()):
+        if not name.strip():
+            raise IntplanError("an empty name", "may_bend")
         activity, _, side = name.rpartition(" ")
         if side in ("least", "most") and activity in sheet.activity_index:
             raise IntplanError(f"{excerpt(name)} is a bound, and only rules may bend", "may_bend")
