@@ -340,6 +340,19 @@ def test_clash(call):
     assert data["give"] == {"odd": {"side": "most", "amount": 1}}
 
 
+def test_a_clash_under_a_limit_is_one_all_the_same(call):
+    call("replan", "bakery.json", "--add", "c: loaf + roll_tray >= 999", "--save", "s.json")
+    status, out, _ = call("clash", "s.json", "--time-limit", "0.000001")
+    assert status == 1 and " clash: no plan in whole units can meet them together." in out
+    assert "They are not yet the smallest set, as the time limit came first: some may" in out
+    status, out, _ = call("clash", "s.json", "--time-limit", "0.000001", "--json")
+    data = json.loads(out)
+    assert (status, data["smallest"], data["clash_ended_by"]) == (1, False, "time")
+    status, out, _ = call("clash", "s.json", "--json")
+    data = json.loads(out)
+    assert (status, data["smallest"], data["clash_ended_by"]) == (1, True, None)
+
+
 def test_clash_knows_a_standing_plan_by_its_content(call):
     Path("infeasible.json").rename("kept")
     assert call("clash", "kept")[0] == 1
