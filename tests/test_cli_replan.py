@@ -146,6 +146,25 @@ def test_notes_go_to_stderr_and_into_json(call):
     assert err == "" and "overtime may go below 0" in note
 
 
+def test_a_first_plan_has_nothing_to_be_compared_with(call):
+    change = ("replan", "infeasible.json", "--set", "odd = 6", "--stay-close")
+    status, out, _ = call(*change, "--json")
+    data = json.loads(out)
+    assert (status, data["effect"], data["before"], data["cost"]) == (0, "moved", None, None)
+    assert (data["plan"], data["moves"], data["at_limit"]) == ({"a": 3}, {}, [])
+    assert data["stay_close"]["reason"] == "there is no plan to stay close to"
+    assert "There is a plan now: odd exactly 6 makes room." in call(*change)[1]
+
+
+def test_the_cost_includes_what_staying_close_gives_up(call):
+    change = ("replan", "bakery.json", "--add", "c: loaf <= 800", "--json")
+    best = json.loads(call(*change)[1])
+    close = json.loads(call(*change, "--stay-close", "5")[1])
+    assert close["cost"] > best["cost"] > 0 and close["bound"] == best["value"]
+    cost, before, value = (Fraction(str(close[key])) for key in ("cost", "before", "value"))
+    assert cost == before - value
+
+
 @pytest.mark.parametrize(
     ("option", "percent"), [([], 0), (["2"], 2), (["0.5%"], 0.5), (["=3"], 3)]
 )
