@@ -351,9 +351,9 @@ def test_tree_refuses(failure, call):
     [
         (["slove", "bakery.toml"], "slove"),
         (["solve"], "SHEET"),
-        (["solve", "bakery.toml", "more"], "more"),
+        (["solve", "bakery.toml", "more"], "extra argument (more). Try `intplan solve --help`."),
         (["solve", "bakery.toml", "--jsn"], "--jsn"),
-        (["solve", "bakery.toml", "--save"], "--save"),
+        (["solve", "bakery.toml", "--save"], "'--save' requires an argument. Try `intplan solve"),
         (["solve", "bakery.toml", "--time-limit", "0"], "no number of seconds above 0"),
         (["solve", "bakery.toml", "--time-limit", "nan"], "no number of seconds"),
         (["solve", "bakery.toml", "--time-limit", "soon"], "no number of seconds"),

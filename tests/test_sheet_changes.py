@@ -595,4 +595,6 @@ def test_text_in_place_of_names_is_one_clear_line():
         with pytest.raises(SheetError) as caught:
             change_sheet(sheet, **{what: "r <= 1"})
         assert caught.value.where == what and "give names" in caught.value.message
+        with pytest.raises(SheetError, match="give names"):
+            change_sheet(sheet, **{what: ["r <= 1"]})
     assert change_sheet(sheet, waive=None).sheet.rules == sheet.rules

@@ -86,15 +86,37 @@ def change_sheet(
         not have, limits that contradict each other, or the same thing changed twice.
     """
     work = _Work(sheet)
-    for name in _names(waive, "waive"):
+    for name in read_names(waive, "waive"):
         work.waive(name)
     for name, value in _pairs(set, "set"):
         work.set(name, value)
-    for name in _names(freeze, "freeze"):
+    for name in read_names(freeze, "freeze"):
         work.freeze(name, plan)
     for name, value in _pairs(add, "add"):
         work.add(name, value)
     return work.done()
+
+
+def read_names(names: Iterable[str], what: str) -> list[str]:
+    """Return names in normal form, with one space between their words.
+
+    Parameters
+    ----------
+    names : of rules, activities or bounds; a text alone is one name
+    what : the argument that they are given for
+
+    Raises
+    ------
+    SheetError
+        One is no text, or empty.
+    """
+    listed = [names] if isinstance(names, str) else list(names or ())
+    for name in listed:
+        if not isinstance(name, str):
+            raise SheetError("a name is text", what)
+        if not name.strip():
+            raise SheetError("an empty name", what)
+    return [normal(" ".join(name.split())) for name in listed]
 
 
 def read_addition(text: str) -> tuple[str, Any]:
@@ -197,23 +219,13 @@ def _limits(spoken: _Spoken, where: str) -> Limits:
     raise SheetError(f"write the new limits as {name} <= 14 or 2 <= {name} <= 5", where)
 
 
-def _names(names: Iterable[str], what: str) -> list[str]:
-    """Return names in normal form, with one space between their words."""
-    listed = [names] if isinstance(names, str) else list(names or ())
-    for name in listed:
-        if not isinstance(name, str):
-            raise SheetError("a name is text", what)
-        if not name.strip():
-            raise SheetError("an empty name", what)
-    return [normal(" ".join(name.split())) for name in listed]
-
-
 def _pairs(named: Named | None, what: str) -> list[tuple[str, Any]]:
     """Return what is given by name as pairs."""
-    if isinstance(named, str):
-        raise SheetError('give names with what is meant of them, such as {"oven": "<= 14"}', what)
     pairs = list(named.items() if isinstance(named, Mapping) else named or ())
-    names = _names([name for name, _ in pairs], what)
+    paired = all(isinstance(pair, (tuple, list)) and len(pair) == 2 for pair in pairs)
+    if isinstance(named, str) or not paired:
+        raise SheetError('give names with what is meant of them, such as {"oven": "<= 14"}', what)
+    names = read_names([name for name, _ in pairs], what)
     return [(name, value) for name, (_, value) in zip(names, pairs, strict=True)]
 
 
