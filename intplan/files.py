@@ -27,6 +27,8 @@ def read_file(path: Path, limit: int, error: type[IntplanError] = IntplanError) 
         The file is missing, unreadable, a folder, or longer than `limit`.
     """
     where = os.fsdecode(path)
+    if not where:
+        raise error("the name of a file to read is empty")
     try:
         with open(path, "rb") as file:
             data = file.read(limit + 1)
@@ -70,22 +72,41 @@ def write_atomically(path: Path, data: bytes) -> None:
         The file cannot be written; what was there before is untouched.
     """
     where = os.fsdecode(path)
+    if not where:
+        raise IntplanError("the name of a file to write is empty")
     try:
         target = os.path.realpath(path)
         mode = _mode(target)
-        if mode is not None and stat.S_ISDIR(mode):
+        if where.endswith(os.sep) or (mode is not None and stat.S_ISDIR(mode)):
             raise IntplanError("this is a folder, not a file", where)
         if mode is not None and not stat.S_ISREG(mode):
             with open(target, "wb") as file:
                 file.write(data)
             return
         _replace(target, data, mode)
-    except FileNotFoundError:
-        raise IntplanError("the folder of this file does not exist", where) from None
     except PermissionError:
         raise IntplanError("the file may not be written (no permission)", where) from None
     except (OSError, ValueError) as problem:
+        lost = isinstance(problem, FileNotFoundError)
+        if lost and not os.path.isdir(os.path.dirname(where) or "."):
+            raise IntplanError("the folder of this file does not exist", where) from None
         raise IntplanError(f"the file cannot be written: {_reason(problem)}", where) from None
+
+
+def refusal(path: str) -> str | None:
+    """Return what the system says against a new file at a place, None if nothing.
+
+    A fresh file is made in the folder and taken away again: some folders that may be written to
+    take none all the same.
+    """
+    try:
+        _mode(path)
+        fresh, handle = _fresh_file(os.path.dirname(path))
+        os.close(handle)
+        os.unlink(fresh)
+    except OSError as problem:
+        return _reason(problem)
+    return None
 
 
 def _mode(target: str) -> int | None:
@@ -98,8 +119,7 @@ def _mode(target: str) -> int | None:
 def _replace(target: str, data: bytes, mode: int | None) -> None:
     """Write `data` beside `target`, to the disk, and move it into place."""
     folder = os.path.dirname(target)
-    fresh = os.path.join(folder, f".intplan-{secrets.token_hex(8)}.part")
-    handle = os.open(fresh, os.O_WRONLY | os.O_CREAT | os.O_EXCL, 0o666)
+    fresh, handle = _fresh_file(folder)
     try:
         with os.fdopen(handle, "wb") as file:
             file.write(data)
@@ -113,6 +133,12 @@ def _replace(target: str, data: bytes, mode: int | None) -> None:
             os.unlink(fresh)
         raise
     _sync_folder(folder)
+
+
+def _fresh_file(folder: str) -> tuple[str, int]:
+    """Make a file of a new name in a folder; return its path and an open handle."""
+    fresh = os.path.join(folder, f".intplan-{secrets.token_hex(8)}.part")
+    return fresh, os.open(fresh, os.O_WRONLY | os.O_CREAT | os.O_EXCL, 0o666)
 
 
 def _sync_folder(folder: str) -> None:

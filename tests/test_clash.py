@@ -157,6 +157,7 @@ def test_a_stop_in_the_middle_leaves_an_honest_clash():
     standing = solve(Sheet.parse(JOINERY))
     found = clash(standing, stop=lambda: True)
     assert not found.smallest and not found.give.proven
+    assert (found.ended_by, found.given_up) == ("interrupt", False)
     assert {"oak", "inn", "school"} <= set(found.names)
     assert found.needs_whole in (False, None)
 
@@ -166,6 +167,24 @@ def test_a_node_limit_leaves_an_honest_clash():
     found = clash(standing, node_limit=1)
     assert {"oak", "inn", "school"} <= set(found.names)
     assert found.smallest == (set(found.names) == set(found.witnesses))
+    assert (found.ended_by, found.given_up) == ("nodes", False)
+    found = clash(standing, time_limit=1e-6)
+    assert (found.smallest, found.ended_by, found.given_up) == (False, "time", False)
+    found = clash(standing, node_limit=1000)
+    assert (found.smallest, found.ended_by, found.given_up) == (True, None, False)
+
+
+def test_a_clash_that_is_given_up_says_so(monkeypatch):
+    @contextmanager
+    def soon(self):
+        self.capped, self.nodes = True, 1
+        yield
+        self.capped, self.nodes = False, None
+
+    monkeypatch.setattr(Budget, "ending", soon)
+    found = clash(solve(Sheet.parse(JOINERY)))
+    assert {"oak", "inn", "school"} <= set(found.names)
+    assert (found.smallest, found.ended_by, found.given_up) == (False, "nodes", True)
 
 
 def test_a_clash_cut_short_goes_on_after_the_give(monkeypatch):
@@ -191,7 +210,7 @@ def test_a_test_ended_by_the_time_is_not_the_end_of_the_filter(monkeypatch):
         return intplan.planning.clash._Test()
 
     monkeypatch.setattr(work, "_test", slow)
-    assert work.run() is False and not work.smallest
+    assert work.run() is False and not work.smallest and work.ended_by == "time"
 
 
 def test_tests_that_would_not_end_are_given_up(monkeypatch):

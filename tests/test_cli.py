@@ -11,7 +11,6 @@ from pathlib import Path
 import pytest
 
 from intplan import Sheet, load_standing
-from intplan.cli import run
 from intplan.cli.console import Console, OutputError
 from intplan.planning import compare as compare_module
 from tests.bakery import (
@@ -40,37 +39,6 @@ def folder(tmp_path, monkeypatch):
         (tmp_path / f"{name}.toml").write_text(text)
     monkeypatch.chdir(tmp_path)
     return tmp_path
-
-
-@pytest.fixture
-def call(folder, capsys):
-    """Run a command line; give its exit status, stdout and stderr."""
-
-    def call(*arguments: str) -> tuple[int, str, str]:
-        status = run(arguments)
-        out, err = capsys.readouterr()
-        return status, out, err
-
-    return call
-
-
-@pytest.fixture
-def failure(call):
-    """Run a command line that must fail as bad input; give its one line."""
-
-    def failure(*arguments: str) -> str:
-        before = {path: path.read_bytes() for path in Path().iterdir() if path.is_file()}
-        status, out, err = call(*arguments)
-        assert (status, out) == (2, "")
-        assert err.startswith("intplan: ") and err.count("\n") == 1 and err.endswith("\n")
-        status, out, json_err = call(*arguments[:1], "--json", *arguments[1:])
-        error = json.loads(out)["error"]
-        assert (status, json_err, set(error)) == (2, "", {"message", "where"})
-        assert error["message"] in err
-        assert {p: p.read_bytes() for p in Path().iterdir() if p.is_file()} == before
-        return err
-
-    return failure
 
 
 # ------------------------------------------------------------------------------ solve
@@ -176,6 +144,28 @@ def test_targets_are_tried_before_the_work(option, failure, folder):
     os.symlink("even.toml", "link.json")
     assert "read by this command" in failure("solve", "even.toml", option, "link.json")
     assert "no folder" in failure("solve", "even.toml", option, "even.toml/x.json")
+    assert "ends in / is that of a folder" in failure("solve", "even.toml", option, "x/")
+    too_long = os.strerror(errno.ENAMETOOLONG)
+    assert f"made there ({too_long})" in failure("solve", "even.toml", option, "n" * 300)
+
+
+def test_folders_that_take_no_file(failure, monkeypatch):
+    def refuse(*_):
+        raise FileNotFoundError(errno.ENOENT, "No such file or directory")
+
+    monkeypatch.setattr(os, "open", refuse)
+    said = "this file cannot be written: no file can be made there (No such file or directory)"
+    for name in ("new.json", "soft.toml"):
+        assert said in failure("solve", "even.toml", "--save", name)
+
+
+def test_empty_names_of_files(failure):
+    Path("plan.csv").write_text("activity,amount\n")
+    reading = "the name of a file to read is empty"
+    for words in (["solve", ""], ["check", "", "plan.csv"], ["check", "bakery.toml", ""],
+                  ["compare", ""], ["tree", "", "--to", "t.dot"]):  # fmt: skip
+        assert reading in failure(*words)
+    assert "the name of a file to write is empty" in failure("tree", "s.json", "--to", "")
 
 
 @pytest.mark.skipif(os.name != "posix" or os.geteuid() == 0, reason="root may write anywhere")
@@ -361,9 +351,9 @@ def test_tree_refuses(failure, call):
     [
         (["slove", "bakery.toml"], "slove"),
         (["solve"], "SHEET"),
-        (["solve", "bakery.toml", "more"], "more"),
+        (["solve", "bakery.toml", "more"], "extra argument (more). Try `intplan solve --help`."),
         (["solve", "bakery.toml", "--jsn"], "--jsn"),
-        (["solve", "bakery.toml", "--save"], "--save"),
+        (["solve", "bakery.toml", "--save"], "'--save' requires an argument. Try `intplan solve"),
         (["solve", "bakery.toml", "--time-limit", "0"], "no number of seconds above 0"),
         (["solve", "bakery.toml", "--time-limit", "nan"], "no number of seconds"),
         (["solve", "bakery.toml", "--time-limit", "soon"], "no number of seconds"),

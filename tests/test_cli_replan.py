@@ -37,40 +37,12 @@ def solved(tmp_path_factory):
 
 
 @pytest.fixture
-def call(solved, tmp_path, monkeypatch, capsys):
-    """Run a command line beside fresh links to the sheets; give exit status, stdout, stderr."""
+def folder(solved, tmp_path, monkeypatch):
+    """A folder with fresh copies of them, and the program started there."""
     for path in solved.iterdir():
         (tmp_path / path.name).write_bytes(path.read_bytes())
     monkeypatch.chdir(tmp_path)
-    capsys.readouterr()
-
-    def call(*arguments: str) -> tuple[int, str, str]:
-        status = run(arguments)
-        out, err = capsys.readouterr()
-        return status, out, err
-
-    return call
-
-
-@pytest.fixture
-def failure(call):
-    """Run a command line that must fail as bad input; give its one line."""
-
-    def failure(*arguments: str) -> str:
-        before = {path: path.read_bytes() for path in Path().iterdir() if path.is_file()}
-        status, out, err = call(*arguments)
-        assert (status, out) == (2, ""), out
-        assert err.startswith("intplan: ") and err.count("\n") == 1 and err.endswith("\n")
-        assert all(char.isprintable() for char in err[:-1])
-        assert "fault in intplan" not in err
-        status, out, json_err = call(*arguments[:1], "--json", *arguments[1:])
-        error = json.loads(out)["error"]
-        assert (status, json_err, set(error)) == (2, "", {"message", "where"})
-        assert error["message"] in err
-        assert {p: p.read_bytes() for p in Path().iterdir() if p.is_file()} == before
-        return err
-
-    return failure
+    return tmp_path
 
 
 # ------------------------------------------------------------------------------ replan
@@ -174,6 +146,25 @@ def test_notes_go_to_stderr_and_into_json(call):
     assert err == "" and "overtime may go below 0" in note
 
 
+def test_a_first_plan_has_nothing_to_be_compared_with(call):
+    change = ("replan", "infeasible.json", "--set", "odd = 6", "--stay-close")
+    status, out, _ = call(*change, "--json")
+    data = json.loads(out)
+    assert (status, data["effect"], data["before"], data["cost"]) == (0, "moved", None, None)
+    assert (data["plan"], data["moves"], data["at_limit"]) == ({"a": 3}, {}, [])
+    assert data["stay_close"]["reason"] == "there is no plan to stay close to"
+    assert "There is a plan now: odd exactly 6 makes room." in call(*change)[1]
+
+
+def test_the_cost_includes_what_staying_close_gives_up(call):
+    change = ("replan", "bakery.json", "--add", "c: loaf <= 800", "--json")
+    best = json.loads(call(*change)[1])
+    close = json.loads(call(*change, "--stay-close", "5")[1])
+    assert close["cost"] > best["cost"] > 0 and close["bound"] == best["value"]
+    cost, before, value = (Fraction(str(close[key])) for key in ("cost", "before", "value"))
+    assert cost == before - value
+
+
 @pytest.mark.parametrize(
     ("option", "percent"), [([], 0), (["2"], 2), (["0.5%"], 0.5), (["=3"], 3)]
 )
@@ -249,6 +240,7 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--add", "c: loaf"], "a rule needs a relation"),
         (["--add", "c"], "a name, a colon and a rule"),
         (["--add", ""], "a name, a colon and a rule"),
+        (["--add", ": loaf <= 3"], "an empty name; a name is a letter"),
         (["--add", "c d: loaf <= 3"], "a name holds no spaces"),
         (["--add", "c: 1 <= 0"], "false whatever the activities"),
         (["--add", 'c: {rule = "loaf <= 3", giev = 2}'], 'did you mean "give"?'),
@@ -256,12 +248,15 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--add", "c: __import__('os') <= 3"], 'unknown name "__import__"'),
         (["--add", "\x1b[31m: loaf <= 3"], r"\x1b[31m"),
         (["--waive", "ovn"], 'did you mean "oven"?'),
+        (["--waive", ""], "waive: an empty name"),
         (["--waive", "loaf"], "its bounds are loaf least and loaf most"),
-        (["--waive", "oven", "--waive", "oven"], "waived twice"),
+        (["--waive", "oven", "--waive", "oven"], "oven is waived twice; say it once"),
         (["--waive", "oven most"], "oven is a rule"),
         (["--waive", "oven", "--set", "oven <= 14"], "waived and set"),
         (["--waive", "\x9bK"], r"\x9bK"),
-        (["--set", "oven >= 3"], "oven has no least"),
+        (["--set", "oven >= 3"], "oven has no least; it says"),
+        (["--set", "3 <= oven <= 9"], "add a rule of another name, such as oven_least: "),
+        (["--set", "loaf mst = 3"], 'did you mean "loaf most"?'),
         (["--set", "ovn <= 3"], 'did you mean "oven"?'),
         (["--set", "oven < 3"], "write <="),
         (["--set", "oven"], "a rule needs a relation"),
@@ -272,14 +267,20 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--set", "oven <= 3", "--set", "oven <= 4"], "set twice"),
         (["--set", "oven <= 1e999"], "doubles"),
         (["--set", ""], "such as oven <= 14"),
+        (["--freeze", ""], "freeze: an empty name"),
+        (["--freeze", "loaf", "--freeze", "loaf"], "loaf is frozen twice; say it once"),
         (["--freeze", "laof"], 'did you mean "loaf"?'),
         (["--freeze", "oven"], "oven is a rule"),
         (["--freeze", "loaf", "--set", "loaf <= 3"], "both set and frozen"),
+        (["--waive", "oven", "--may-bend", ""], "may_bend: an empty name"),
         (["--waive", "oven", "--may-bend", "mixr"], 'did you mean "mixer"?'),
         (["--waive", "oven", "--may-bend", "loaf most"], "only rules may bend"),
-        (["--waive", "oven", "--may-bend", "oven"], 'unknown rule "oven"'),
+        (["--waive", "oven", "--may-bend", "oven"], '"oven" is waived, so that it'),
         (["--waive", "oven", "--stay-close", "101"], "no percentage"),
         (["--waive", "oven", "--stay-close", "much"], "no percentage"),
+        (["--waive", "oven", "--stay-close", "-1"], "'--stay-close': '-1' is no percentage"),
+        (["--stay-close=-.5", "--waive", "oven"], "'--stay-close': '-.5' is no percentage"),
+        (["--waive", "oven", "--stay-close", "-x"], "No such option"),
         (["--waive", "oven", "--node-limit", "0"], "no whole number from 1"),
         (["--waive", "oven", "--gap", "x"], "no percentage"),
         (["--waive"], "--waive"),
@@ -304,6 +305,7 @@ def test_replan_reads_standing_plans_only(failure, call):
     Path("cut.json").write_bytes(Path("bakery.json").read_bytes()[:-90])
     assert "cut.json" in failure("replan", "cut.json", *change)
     assert "STANDING" in failure("replan", *change)
+    assert "name of a file to read is empty" in failure("replan", "", *change)
 
 
 @pytest.mark.parametrize("option", ["--save", "--plan-to"])
@@ -357,6 +359,19 @@ def test_clash(call):
     assert data["give"] == {"odd": {"side": "most", "amount": 1}}
 
 
+def test_a_clash_under_a_limit_is_one_all_the_same(call):
+    call("replan", "bakery.json", "--add", "c: loaf + roll_tray >= 999", "--save", "s.json")
+    status, out, _ = call("clash", "s.json", "--time-limit", "0.000001")
+    assert status == 1 and " clash: no plan in whole units can meet them together." in out
+    assert "They are not yet the smallest set, as the time limit came first: some may" in out
+    status, out, _ = call("clash", "s.json", "--time-limit", "0.000001", "--json")
+    data = json.loads(out)
+    assert (status, data["smallest"], data["clash_ended_by"]) == (1, False, "time")
+    status, out, _ = call("clash", "s.json", "--json")
+    data = json.loads(out)
+    assert (status, data["smallest"], data["clash_ended_by"]) == (1, True, None)
+
+
 def test_clash_knows_a_standing_plan_by_its_content(call):
     Path("infeasible.json").rename("kept")
     assert call("clash", "kept")[0] == 1
@@ -376,6 +391,8 @@ def test_clash_refuses(failure):
     assert "no such file" in failure("clash", "absent.toml")
     assert "no such file" in failure("clash", "absent.json")
     assert "no such file" in failure("clash", "absent")
+    assert "name of a file to read is empty" in failure("clash", "")
+    assert "may_bend: an empty name" in failure("clash", "infeasible.toml", "--may-bend", "")
     assert 'unknown rule "od"' in failure("clash", "infeasible.toml", "--may-bend", "od")
     Path("bad.toml").write_text("[activities\n")
     assert "line 1" in failure("clash", "bad.toml")
@@ -435,6 +452,7 @@ def test_worth_refuses(failure):
     assert "no limit" in failure("worth", "unbounded.json")
     assert "`intplan solve" in failure("worth", "bakery.toml")
     assert "STANDING" in failure("worth")
+    assert "name of a file to read is empty" in failure("worth", "")
 
 
 # ------------------------------------------------------------------------------ all three

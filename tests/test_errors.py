@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import stat
 import sys
@@ -9,7 +10,7 @@ import sys
 import pytest
 
 from intplan.errors import IntplanError, PlanFileError, SheetError, nearest, printable, unknown
-from intplan.files import read_file, write_atomically
+from intplan.files import read_file, refusal, write_atomically
 
 as_root = hasattr(os, "geteuid") and os.geteuid() == 0
 
@@ -66,6 +67,12 @@ def test_files_that_are_not_there(tmp_path, name):
     with pytest.raises(PlanFileError) as caught:
         read_file(os.path.join(tmp_path, name) if name else "", 10, PlanFileError)
     assert "\n" not in str(caught.value)
+
+
+def test_an_empty_name_is_that_of_no_file():
+    with pytest.raises(PlanFileError) as caught:
+        read_file("", 10, PlanFileError)
+    assert str(caught.value) == "the name of a file to read is empty"
 
 
 def test_a_folder_is_no_file_and_a_slip_gets_the_nearest_name(tmp_path):
@@ -139,5 +146,23 @@ def test_places_that_cannot_be_written(tmp_path):
         write_atomically(tmp_path, b"")
     with pytest.raises(IntplanError, match="the folder of this file does not exist"):
         write_atomically(tmp_path / "no" / "week.json", b"")
+    with pytest.raises(IntplanError, match="folder, not a file"):
+        write_atomically(f"{tmp_path}/week.json{os.sep}", b"")
+    with pytest.raises(IntplanError, match="the name of a file to write is empty"):
+        write_atomically("", b"")
     write_atomically(os.devnull, b"to nowhere")
     assert not stat.S_ISREG(os.stat(os.devnull).st_mode)
+
+
+def test_a_folder_in_which_no_file_can_be_made(tmp_path, monkeypatch):
+    assert refusal(f"{tmp_path}/week.json") is None
+    assert os.listdir(tmp_path) == []
+    assert refusal(f"{tmp_path}/{'n' * 5000}") == os.strerror(errno.ENAMETOOLONG)
+
+    def refuse(*_):
+        raise FileNotFoundError(errno.ENOENT, "No such file or directory")
+
+    monkeypatch.setattr(os, "open", refuse)
+    assert refusal(f"{tmp_path}/week.json") == "No such file or directory"
+    with pytest.raises(IntplanError, match="cannot be written: No such file or directory"):
+        write_atomically(tmp_path / "week.json", b"")

@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 
 import intplan.planning.give
-from intplan import Sheet, solve
+from intplan import IntplanError, Sheet, solve
 from intplan.planning.budget import Budget
 from intplan.planning.clash import clash
 from intplan.planning.directions import widest
@@ -81,6 +81,28 @@ def test_only_what_may_bend_does():
     nothing = give_of(JOINERY, may_bend=[])
     assert nothing.least is None and nothing.proven
     assert bendable_rules(Sheet.parse(JOINERY), "oak") == ("oak",)
+
+
+@pytest.mark.parametrize(
+    ("may_bend", "line"),
+    [
+        ([""], "may_bend: an empty name"),
+        ([3], "may_bend: a name is text"),
+        (["ok"], 'may_bend: unknown rule "ok"; did you mean "oak"?'),
+        (["inn"], 'may_bend: "inn" is waived, so that it cannot bend'),
+    ],
+)
+def test_names_of_no_rule_are_one_clear_line(may_bend, line):
+    sheet = Sheet.parse(JOINERY)
+    rest = replace(sheet, rules=tuple(rule for rule in sheet.rules if rule.name != "inn"))
+    with pytest.raises(IntplanError) as caught:
+        bendable_rules(rest, may_bend, waived=("inn",))
+    assert str(caught.value) == line
+
+
+def test_rules_that_may_bend_are_named_in_any_form():
+    sheet = Sheet.parse('[activities]\na = {}\n[rules]\n"caf\u00e9" = "a <= 3"')
+    assert bendable_rules(sheet, ["cafe\u0301"]) == ("caf\u00e9",)
 
 
 def test_a_soft_rule_bends_further_at_its_price():

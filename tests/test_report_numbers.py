@@ -5,7 +5,7 @@ from fractions import Fraction
 import pytest
 
 from intplan.planning.numbers import has_short_decimal, nearest
-from intplan.report.numbers import amount, bound_text, brief, readable, rounded_outward
+from intplan.report.numbers import amount, bound_text, brief, readable, rounded_outward, signed
 from intplan.sheet import Sheet
 from tests.bakery import BAKERY, SOFT
 
@@ -64,6 +64,18 @@ def test_readable_beyond_what_str_takes():
 )
 def test_amounts_of_money_have_two_places(number, measure, text):
     assert amount(number, measure) == text
+
+
+@pytest.mark.parametrize(
+    ("number", "text"),
+    [
+        (Fraction(5, 2), "+2.50 EUR"),
+        (Fraction(1, 3), "+1/3 EUR (about 0.333333)"),
+        (Fraction(10**30, 7), "about +1.42857e29 EUR"),
+    ],
+)
+def test_a_gain_has_its_plus_before_its_digits(number, text):
+    assert signed(amount(number, "EUR")) == text
 
 
 def test_nearest_numbers_for_readers_of_json():

@@ -453,6 +453,30 @@ def wide(rules: int = 1, activities: int = 9) -> Sheet:
     return Sheet.parse("\n".join(["[activities]", *lines, "[rules]", *says]))
 
 
+@pytest.mark.parametrize(
+    ("ended", "sentences"),
+    [
+        ({"ended_by": "time"}, "set, as the time limit came first: some may not be needed."),
+        ({"ended_by": "nodes"}, "set, as the node limit came first: some may not be needed."),
+        ({"ended_by": "interrupt"}, "set, as the search was interrupted: some may"),
+        ({"ended_by": "range"}, "set, as a whole activity grew too large to go on with: some may"),
+        (
+            {"ended_by": "nodes", "given_up": True},
+            "set, as telling took too long and was given up: some may not be needed. "
+            "`--time-limit` or `--node-limit` gives it longer.",
+        ),
+    ],
+)
+def test_a_clash_that_is_not_yet_the_smallest_says_why(ended, sentences):
+    clash = Clash(two_loaves(), MEMBERS, True, False, {}, None, **ended)
+    assert clash_blocks(clash)[0].startswith(
+        "These 3 rules clash: no plan in whole units can meet them together. "
+        f"They are not yet the smallest {sentences}"
+    )
+    data = clash_members(clash)
+    assert (data["smallest"], data["clash_ended_by"]) == (False, ended["ended_by"])
+
+
 def test_bounds_of_a_large_clash_share_lines():
     sheet = wide()
     names = ("r0", *(f"a{k} {s}" for k in range(9) for s in ("least", "most")), "b least", "b most")
@@ -615,6 +639,13 @@ def test_worths_of_every_kind():
 def test_worths_where_less_is_better():
     text = worths(SOFT, entry("need", side="least", toward="least"))
     assert "Without need: -3 h. One less: -2 h (2.5 per unit, of the relaxation)." in text
+
+
+def test_worths_that_are_rounded():
+    text = worths(BAKERY, entry("oven", waived=Fraction(10**30, 7), unit=Fraction(10**30, 11)))
+    assert "Without oven: about +1.42857e29 EUR. One more: about +9.09091e28 EUR (" in text
+    text = worths(SOFT, entry("need", side="least", toward="least", waived=Fraction(10**30, 7)))
+    assert "Without need: about -1.42857e29 h." in text
 
 
 def test_worths_that_are_not_settled():

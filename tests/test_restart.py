@@ -11,6 +11,7 @@ from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 
 import intplan
@@ -117,6 +118,25 @@ def test_nodes_for_which_doubles_find_no_basis_start_from_the_slack_basis(
 
     monkeypatch.setattr(search, "opened", opened)
     answer = restarted(standing, changes, at="leaves")
+    assert refused and answer.outcome == "optimal" and answer.exact_value == expected
+    verify_standing(answer)
+
+
+@pytest.mark.parametrize("instance", INSTANCES, ids=lambda instance: instance.family)
+def test_a_kept_root_that_is_singular_in_doubles_starts_from_the_slack_basis(
+    instance: Instance, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The cuts that were taken over stay; what follows is proven anyway."""
+    standing, changes = standing_of(instance)
+    expected = intplan.solve(changes.sheet).exact_value
+    refused = []
+
+    def singular(context: Any, *_: Any) -> None:
+        refused.append(context.nodes)
+        raise np.linalg.LinAlgError("Singular matrix")
+
+    monkeypatch.setattr(search, "opened", singular)
+    answer = restarted(standing, changes, at="root")
     assert refused and answer.outcome == "optimal" and answer.exact_value == expected
     verify_standing(answer)
 

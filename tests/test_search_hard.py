@@ -7,12 +7,14 @@ import random
 from collections import Counter
 from dataclasses import replace
 from fractions import Fraction
+from typing import Any
 
 import numpy as np
+import pytest
 
 import intplan
 from intplan.planning.compare import compare
-from intplan.search import branch_and_cut
+from intplan.search import branch_and_cut, develop, root
 from intplan.sheet.problem import Problem
 from tests.families import lot_sizing, problem_of
 from tests.generators import random_problem
@@ -71,6 +73,24 @@ def test_a_start_that_is_singular_in_doubles_goes_to_rationals() -> None:
     result = branch_and_cut(sheet.problem())
     verify(sheet.problem(), result)
     assert (result.outcome, result.value) == ("optimal", 0)
+
+
+@pytest.mark.parametrize("seed", range(11))
+def test_a_root_whose_first_basis_is_singular_starts_from_the_slack_basis(
+    seed: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """As the nodes below it do, though that basis may not be dual feasible."""
+    problem = problem_of(random_problem(seed))
+    expected = branch_and_cut(problem)
+
+    def singular(*_: Any, **__: Any) -> None:
+        raise np.linalg.LinAlgError("Singular matrix")
+
+    monkeypatch.setattr(root, "cold_start", singular)
+    monkeypatch.setattr(develop, "cold_start", singular)
+    result = branch_and_cut(problem)
+    verify(problem, result)
+    assert (result.outcome, result.value) == (expected.outcome, expected.value)
 
 
 def test_derived_bounds_of_divisible_activities_are_no_tighter_than_their_rule() -> None:

@@ -282,10 +282,31 @@ def test_a_rule_of_a_program_is_checked():
             "waive oven most: oven is a rule, not an activity; write oven alone",
         ),
         ({"waive": [3]}, "waive: a name is text"),
-        ({"waive": ["oven", "oven"]}, "waive oven: the least of oven is waived twice; say it once"),
-        ({"set": {"oven": ">= 3"}}, "set oven: oven has no least; it says ... <= 16"),
-        ({"set": {"oven": "= 3"}}, "set oven: oven has no least; it says ... <= 16"),
-        ({"set": {"shelf": (None, 3)}}, "set shelf: shelf has no most; it says ... >= 0"),
+        ({"waive": [""]}, "waive: an empty name"),
+        ({"waive": ["oven", "oven"]}, "waive oven: oven is waived twice; say it once"),
+        (
+            {"waive": ["loaf most", "loaf  most"]},
+            "waive loaf most: the most of loaf is waived twice; say it once",
+        ),
+        (
+            {"set": {"oven": ">= 3"}},
+            "set oven: oven has no least; it says 0.02*loaf + 0.05*roll_tray - overtime <= 16;"
+            " for that side add a rule of another name, such as"
+            " oven_least: 0.02*loaf + 0.05*roll_tray - overtime >= 3",
+        ),
+        ({"set": {"oven": "= 3"}}, "set oven: oven has no least; it says 0.02*loaf"),
+        (
+            {"set": {"shelf": (None, 3)}},
+            "set shelf: shelf has no most; it says loaf - 3*roll_tray >= 0;"
+            " for that side add a rule of another name, such as"
+            " shelf_most: loaf - 3*roll_tray <= 3",
+        ),
+        ({"set": {" ": "<= 3"}}, "set: an empty name"),
+        (
+            {"set": {"roll_tray mst": "<= 3"}},
+            'set roll_tray mst: unknown rule, activity or bound "roll_tray mst";'
+            ' did you mean "roll_tray most"?',
+        ),
         (
             {"set": {"roll_try": "<= 3"}},
             'set roll_try: unknown rule, activity or bound "roll_try"; did you mean "roll_tray"?',
@@ -324,17 +345,22 @@ def test_a_rule_of_a_program_is_checked():
         ),
         (
             {"waive": ["oven"], "set": {"oven": "<= 14"}},
-            "set oven: the most of oven is both waived and set; say it once",
+            "set oven: oven is both waived and set; say it once",
         ),
         (
             {"waive": ["loaf most"], "set": {"loaf most": "<= 14"}},
             "set loaf most: the most of loaf is both waived and set; say it once",
         ),
         (
+            {"set": [("mixer", "6 <= mixer <= 9"), ("mixer", (7, 8))]},
+            "set mixer: mixer is set twice; say it once",
+        ),
+        (
             {"set": {"idle": (None, -1)}},
             "set idle: the rule would be false whatever the activities",
         ),
         ({"freeze": ["loaf"]}, "freeze loaf: there is no plan whose amount it could keep"),
+        ({"freeze": [""], "plan": PLAN}, "freeze: an empty name"),
         ({"freeze": ["loaf"], "plan": {}}, "freeze loaf: the plan has no amount of it"),
         (
             {"freeze": ["mixer"], "plan": PLAN},
@@ -346,17 +372,31 @@ def test_a_rule_of_a_program_is_checked():
         ),
         (
             {"freeze": ["debt", "debt"], "plan": PLAN},
-            "freeze debt: the least of debt is frozen twice; say it once",
+            "freeze debt: debt is frozen twice; say it once",
         ),
         (
             {"freeze": ["debt"], "plan": PLAN, "set": {"debt": "<= 3"}},
             "freeze debt: the most of debt is both set and frozen; say it once",
         ),
         (
+            {"freeze": ["roll_tray"], "plan": PLAN, "set": {"roll_tray": (25, 30)}},
+            "freeze roll_tray: roll_tray is both set and frozen; say it once",
+        ),
+        (
+            {
+                "freeze": ["roll_tray"],
+                "plan": PLAN,
+                "set": {"roll_tray": ">= 3"},
+                "waive": ["roll_tray most"],
+            },
+            "freeze roll_tray: the least of roll_tray is both set and frozen; say it once",
+        ),
+        (
             {"add": {"oven": "loaf <= 3"}},
             "add oven: the sheet has a rule oven already; waive it too, to replace it",
         ),
         ({"add": [("a", "loaf <= 3"), ("a", "loaf <= 3")]}, "add a: the rule a is added twice"),
+        ({"add": {"": "loaf <= 3"}}, "add: an empty name"),
         (
             {"add": {"a": "laof <= 3"}},
             'add a: column 1: unknown name "laof"; did you mean "loaf"? (at "laof <= 3")',
@@ -380,6 +420,18 @@ def test_a_long_name_does_not_flood_the_line():
     assert len(refused(add={"x" * 100_000: "loaf <= 3"})) < 250
 
 
+def test_a_long_rule_does_not_flood_the_line():
+    whole = " + ".join(f"step_{k}" for k in range(30))
+    activities = "\n".join(f"step_{k} = {{}}" for k in range(30))
+    sheet = Sheet.parse(f'[activities]\n{activities}\n[rules]\n"day[mon,1]" = "{whole} <= 9"')
+    with pytest.raises(SheetError) as caught:
+        change_sheet(sheet, set={"day[mon,1]": (2, 5)})
+    assert str(caught.value) == (
+        "set day[mon,1]: day[mon,1] has no least; it says ... <= 9; for that side add a rule of"
+        " another name, such as day_least[mon,1]: ... >= 2"
+    )
+
+
 @pytest.mark.parametrize(
     ("text", "expected"),
     [
@@ -394,6 +446,7 @@ def test_a_long_name_does_not_flood_the_line():
         ("loaf[mon] least >= -2", ("loaf[mon] least", (-2, None))),
         ("most <= 3", ("most", (None, 3))),
         ("most most <= 3", ("most most", (None, 3))),
+        ("loaf mst = 3", ("loaf mst", (3, 3))),
     ],
 )
 def test_a_setting_is_read(text, expected):
@@ -405,6 +458,8 @@ def test_a_setting_is_read(text, expected):
     [
         ("", 'set "": new limits are those of one rule, activity or bound, such as oven <= 14'),
         ("oven + mixer <= 3", 'set "oven + mixer <= 3": new limits are those of one rule'),
+        ("oven mixer <= 3", 'set "oven mixer <= 3": new limits are those of one rule'),
+        ("oven + mst <= 3", 'set "oven + mst <= 3": new limits are those of one rule'),
         ("2*oven <= 3", "set oven: write the new limits as oven <= 14 or 2 <= oven <= 5"),
         ("oven", "set oven: column 5: a rule needs a relation"),
         ("oven < 3", 'set oven: column 6: "<" is not a relation of rules; write <='),
@@ -435,7 +490,7 @@ def test_an_addition_is_read():
     [
         ("flour loaf <= 3", 'add "flour loaf <= 3": write a name, a colon and a rule'),
         ("flour:", 'add "flour:": write a name, a colon and a rule'),
-        (": loaf <= 3", 'add ": loaf <= 3": "": an empty name'),
+        (": loaf <= 3", 'add ": loaf <= 3": an empty name; a name is a letter or _'),
         ("the flour: loaf <= 3", 'add "the flour: loaf <= 3": "the flour": a name holds no spaces'),
         ('a: {rule = "loaf <= 3", give}', "add a: column 29: not TOML"),
         ('a: "loaf <= 3"\nb = 4', "add a: more than one rule in a text"),
@@ -540,4 +595,6 @@ def test_text_in_place_of_names_is_one_clear_line():
         with pytest.raises(SheetError) as caught:
             change_sheet(sheet, **{what: "r <= 1"})
         assert caught.value.where == what and "give names" in caught.value.message
+        with pytest.raises(SheetError, match="give names"):
+            change_sheet(sheet, **{what: ["r <= 1"]})
     assert change_sheet(sheet, waive=None).sheet.rules == sheet.rules

@@ -97,9 +97,7 @@ def _guarded(arguments: Sequence[str], console: Console, interrupts: Interrupts)
     except click.exceptions.Exit as end:
         return end.exit_code
     except click.UsageError as error:
-        path = error.ctx.command_path if error.ctx else "intplan"
-        where = path.removeprefix("intplan").strip() or None
-        console.error(f"{printable(error.format_message())} Try `{path} --help`.", where)
+        console.error(*_usage(error, arguments))
         return BAD_INPUT
     except IntplanError as error:
         console.error(error.message, error.where)
@@ -123,3 +121,15 @@ def _guarded(arguments: Sequence[str], console: Console, interrupts: Interrupts)
             None,
         )
         return BAD_INPUT
+
+
+def _usage(error: click.UsageError, arguments: Sequence[str]) -> tuple[str, str | None]:
+    """Return what is wrong with a command line, and the command."""
+    from intplan.errors import printable
+
+    # What the parser itself finds comes without a context.
+    known = arguments[:1] if arguments and arguments[0] in group.commands else ()
+    path = error.ctx.command_path if error.ctx else " ".join(["intplan", *known])
+    message = printable(error.format_message())
+    stop = "" if message.endswith((".", "?")) else "."
+    return f"{message}{stop} Try `{path} --help`.", path.removeprefix("intplan").strip() or None

@@ -156,8 +156,8 @@ def tree_command(
     from intplan.report.treefile import tree_writer, write_tree
 
     session.console.quiet = quiet
-    tree_writer(target)
     check_targets([target], [standing_file])
+    tree_writer(target)
     standing = load_standing(standing_file)
     write_tree(standing, target)
     session.console.answer(tree_text(standing, target), tree_data(standing, target))

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Callable
 from decimal import Decimal, InvalidOperation
 from fractions import Fraction
-from typing import Any, TypeVar
+from itertools import pairwise
+from typing import Any, NoReturn, TypeVar
 
 import click
 
@@ -45,8 +47,30 @@ class Percent(click.ParamType):
         except InvalidOperation:
             percent = Decimal(-1)
         if not (percent.is_finite() and 0 <= percent <= 100 and abs(percent.adjusted()) < 300):
-            self.fail(f"{value!r} is no percentage from 0 to 100, such as 0.5.", param, ctx)
+            self.refuse(value, param, ctx)
         return Fraction(percent)
+
+    def refuse(
+        self, value: Any, param: click.Parameter | None, ctx: click.Context | None
+    ) -> NoReturn:
+        """Say that a text is no percentage."""
+        self.fail(f"{value!r} is no percentage from 0 to 100, such as 0.5.", param, ctx)
+
+
+class ChangeCommand(click.Command):
+    """A command that has ``--stay-close``, whose number may be left out.
+
+    What begins with a minus would be taken for the next option, and refused as such.
+    """
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        """Read the words of a command line."""
+        words = [word for arg in args for word in re.split("(?<=^--stay-close)=", arg)]
+        for option, value in pairwise(words):
+            if option == "--stay-close" and re.match(r"-[.\d]", value):
+                param = next(param for param in self.params if option in param.opts)
+                Percent().refuse(value, param, ctx)
+        return super().parse_args(ctx, args)
 
 
 class Count(click.ParamType):

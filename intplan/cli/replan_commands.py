@@ -12,6 +12,7 @@ import click
 from intplan.cli.answers import NO, STATUS_OF, YES, give_and_keep, read_sheet, shown_progress
 from intplan.cli.app import BAD_INPUT, UNFINISHED, Session, group
 from intplan.cli.options import (
+    ChangeCommand,
     bend_option,
     change_options,
     limit_options,
@@ -25,7 +26,9 @@ if TYPE_CHECKING:
     from intplan.sheet import Sheet
 
 
-@group.command("replan", short_help="What a change of rules does to a standing plan.")
+@group.command(
+    "replan", cls=ChangeCommand, short_help="What a change of rules does to a standing plan."
+)
 @click.argument("standing_file", metavar="STANDING")
 @change_options
 @bend_option

@@ -38,6 +38,9 @@ class Clash:
     smallest : whether no member can be left out: there is a witness for each
     witnesses : for a member, exact amounts in whole units that meet all the others
     give : how far rules would have to bend for a plan to exist
+    ended_by : what left it open whether a member can be left out: ``time``, ``nodes``,
+        ``interrupt`` or ``range``; None where it is the smallest
+    given_up : tests that took long were left open although no limit was asked for
     """
 
     sheet: Sheet
@@ -46,6 +49,8 @@ class Clash:
     smallest: bool
     witnesses: dict[str, dict[str, Number]]
     give: Give | None
+    ended_by: str | None = None
+    given_up: bool = False
 
 
 class Verdict(NamedTuple):
@@ -219,6 +224,7 @@ def find_clash(
         if not needs_whole and work.names != names:  # what fits a set fits any part of it
             needs_whole = _needs_whole(sheet, work.members, budget)
     alone = {name: bending for name, bending in give.alone.items() if name in work.members}
+    ended_by = None if work.smallest else work.ended_by
     return Clash(
         sheet=sheet,
         names=work.names,
@@ -226,6 +232,8 @@ def find_clash(
         smallest=work.smallest,
         witnesses={name: work.witness(name) for name in work.names if name in work.witnesses},
         give=replace(give, alone=alone),
+        ended_by=ended_by,
+        given_up=ended_by == "nodes" and budget.unlimited,
     )
 
 
@@ -290,6 +298,7 @@ class _Filter:
     ----------
     members : no plan meets them all
     witnesses : for a member, amounts that meet all others
+    ended_by : what left the last test open
     """
 
     def __init__(
@@ -307,6 +316,7 @@ class _Filter:
         same = standing.sheet.activities == sheet.activities  # unlike those of a bounded form
         self.proof = standing if same else None
         self.witnesses: dict[str, Sequence[Number]] = {}
+        self.ended_by: str | None = None
         endless = {r.name for r in self.sheet.rules if r.give is not None and r.give_most is None}
         names = [name for name in member_names(self.sheet) if name not in endless]
         late = set(last)
@@ -340,16 +350,22 @@ class _Filter:
             for name in self.order:
                 if name not in self.members or name in self.witnesses:
                     continue
-                if self.budget.ended_by() is not None:
+                if self._ended():
                     return False
                 self._try_without(name, self.budget.fair_nodes if hard else FIRST_NODES)
-            if self.budget.ended_by() is not None:
+            if self._ended():
                 return self.smallest
             if len(self.members) == before:
                 if hard:
                     return True
                 hard = True
         return True
+
+    def _ended(self) -> bool:
+        """Tell whether a limit is reached, and note which."""
+        ended_by = self.budget.ended_by()
+        self.ended_by = ended_by or self.ended_by
+        return ended_by is not None
 
     def _try_without(self, name: str, most_nodes: int | None) -> None:
         """Drop a member if no plan meets the others, else keep the plan that does."""
@@ -373,6 +389,7 @@ class _Filter:
         if found.amounts is not None:
             return _Test(amounts=found.amounts)
         if found.search.outcome != "infeasible":
+            self.ended_by = found.search.ended_by
             return _Test()
         if found.search.sheet is sheet:
             self.proof = found.search

@@ -14,6 +14,7 @@ from intplan.planning.budget import Budget
 from intplan.planning.directions import any_plan, widest
 from intplan.planning.standing import Progress, StandingPlan, solve
 from intplan.sheet import Activity, Aim, Rule, Sheet
+from intplan.sheet.changes import read_names
 from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number, lowest
 
@@ -60,18 +61,28 @@ class Give:
     proven: bool
 
 
-def bendable_rules(sheet: Sheet, may_bend: Iterable[str] | None) -> tuple[str, ...]:
+def bendable_rules(
+    sheet: Sheet, may_bend: Iterable[str] | None, waived: Sequence[str] = ()
+) -> tuple[str, ...]:
     """Return the rules that may bend, in sheet order; every rule where `may_bend` is None.
+
+    Parameters
+    ----------
+    sheet : its rules are the ones there are
+    may_bend : the names of those that may bend
+    waived : what a change has taken out of the sheet
 
     Raises
     ------
     IntplanError
-        A name is none of a rule.
+        A name is no text, or none of a rule.
     """
     if may_bend is None:
         return tuple(rule.name for rule in sheet.rules)
-    wanted = {may_bend} if isinstance(may_bend, str) else set(may_bend)
+    wanted = set(read_names(may_bend, "may_bend"))
     for name in sorted(wanted - sheet.rule_index.keys()):
+        if name in waived:
+            raise IntplanError(f"{excerpt(name)} is waived, so that it cannot bend", "may_bend")
         activity, _, side = name.rpartition(" ")
         if side in ("least", "most") and activity in sheet.activity_index:
             raise IntplanError(f"{excerpt(name)} is a bound, and only rules may bend", "may_bend")

@@ -151,7 +151,9 @@ def replan(
     share = exact_percent(gap)
     plan = standing.exact_plan if freeze else None
     changes = change_sheet(standing.sheet, add=add, waive=waive, set=set, freeze=freeze, plan=plan)
-    bendable = None if may_bend is None else bendable_rules(changes.sheet, may_bend)
+    bendable = None
+    if may_bend is not None:
+        bendable = bendable_rules(changes.sheet, may_bend, changes.waived)
     after = _answer(standing, changes, share, budget, progress)
     closeness = None
     if percent is not None:

@@ -16,6 +16,12 @@ from intplan.sheet.numbers import Number
 BENDS_NAMED = 6  # rules that may bend; more of them are counted
 RULES_SHOWN = 20  # rules of a clash, and rules that free it alone; more of them are counted
 ALIKE = 3  # bounds of a clash at the same number share a line from so many on
+NOT_SMALLEST = {
+    "time": "as the time limit came first",
+    "nodes": "as the node limit came first",
+    "interrupt": "as the search was interrupted",
+    "range": "as a whole activity grew too large to go on with",
+}
 FEW = 6  # members of a clash; of more it is told how many are rules
 
 
@@ -61,12 +67,25 @@ def _clash_sentences(clash: Clash) -> str:
         if clash.smallest:
             sentences.append("Without any one of them there is a plan.")
         else:
-            sentences.append("They are not yet the smallest set: some may not be needed.")
+            sentences += _open_sentences(clash)
     if whole and clash.needs_whole:
         sentences.append("Fractions would have fitted.")
     elif whole and clash.needs_whole is not None:
         sentences.append("Fractions would not fit either.")
     return " ".join(sentences)
+
+
+def _open_sentences(clash: Clash) -> list[str]:
+    """Say why a clash is not yet the smallest set."""
+    if clash.given_up:
+        why = "as telling took too long and was given up"
+    else:
+        why = NOT_SMALLEST.get(clash.ended_by or "", "")
+    reason = f", {why}" if why else ""
+    sentences = [f"They are not yet the smallest set{reason}: some may not be needed."]
+    if clash.given_up:
+        sentences.append("`--time-limit` or `--node-limit` gives it longer.")
+    return sentences
 
 
 def _counted(clash: Clash) -> str:

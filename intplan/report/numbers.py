@@ -47,6 +47,11 @@ def brief(number: Number) -> str:
     return f"about {_rounded(number)}" if "/" in text else text
 
 
+def signed(text: str) -> str:
+    """Put a plus before the digits of a number that is written out: ``about +1.5e30``."""
+    return f"about +{text.removeprefix('about ')}" if text.startswith("about ") else f"+{text}"
+
+
 def amount(number: Number, measure: str = "") -> str:
     """Write a number with its unit; money gets two digits after the point where it has any."""
     places = 2 if CURRENCY.fullmatch(measure) else 0

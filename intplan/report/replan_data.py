@@ -119,6 +119,7 @@ def clash_members(clash: Clash) -> Data:
         "clash_rules": {name: algebra(clash.sheet, name) for name in clash.names},
         "needs_whole": clash.needs_whole,
         "smallest": clash.smallest,
+        "clash_ended_by": clash.ended_by,
         "witnesses": {name: plan_data(plan) for name, plan in clash.witnesses.items()},
     }
     return data if clash.give is None else data | give_data(clash.give)

@@ -8,7 +8,7 @@ from intplan.errors import printable
 from intplan.planning import Replan
 from intplan.report.change_words import Change, Subject, changes_of, changes_table, subject_of
 from intplan.report.clash_text import clash_blocks
-from intplan.report.numbers import brief, readable, value_text
+from intplan.report.numbers import brief, readable, signed, value_text
 from intplan.report.phrases import CAUTION, ENDED, count, title_line
 from intplan.report.replan_data import given_up, had_plan, searched
 from intplan.report.tables import limits_phrase, plan_table, rule_tables, table
@@ -209,8 +209,7 @@ def moves_table(change: Replan) -> str:
 
 def _signed(step: Number) -> str:
     """Write a step with its sign, also a positive one."""
-    about = "about " if brief(step).startswith("about ") else ""
-    return f"{about}{'+' if step > 0 else ''}{brief(step).removeprefix(about)}"
+    return signed(brief(step)) if step > 0 else brief(step)
 
 
 def _bend_sentences(change: Replan) -> list[str]:

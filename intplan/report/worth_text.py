@@ -6,7 +6,7 @@ from fractions import Fraction
 
 from intplan.planning import Worth, WorthTable
 from intplan.report.change_words import limit_of
-from intplan.report.numbers import readable, value_text
+from intplan.report.numbers import readable, signed, value_text
 from intplan.report.phrases import CAUTION, count, listing, title_line
 from intplan.sheet import Sheet
 from intplan.sheet.numbers import Number
@@ -102,7 +102,8 @@ def _step(sheet: Sheet, gain: Number) -> str:
     if not gain:
         return "nothing"
     step = gain if sheet.aim.sense == "maximize" else -gain
-    return ("+" if step > 0 else "") + value_text(sheet, step)
+    text = value_text(sheet, step)
+    return signed(text) if step > 0 else text
 
 
 def _price(sheet: Sheet, entry: Worth) -> str:

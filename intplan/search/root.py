@@ -56,7 +56,10 @@ class RootWork(NodeWork):
             return False
         self.context.prover.set_box(self.bounds.least, self.bounds.most)
         self.free = self.bounds.copy()
-        self.start_from_nothing()
+        try:
+            self.start_from_nothing()
+        except np.linalg.LinAlgError:
+            self._start_from_slacks()
         return True
 
     def start_from_nothing(self) -> None:
@@ -66,6 +69,16 @@ class RootWork(NodeWork):
             context.rows, context.problem.cost, self.bounds.least, self.bounds.most,
             stop=context.limits.out_of_time,
         )  # fmt: skip
+
+    def _start_from_slacks(self) -> None:
+        """Make the first dictionary where the better basis is singular in doubles.
+
+        It need not be dual feasible; what it leads to is believed only with a proof.
+        """
+        context = self.context
+        self.dictionary = Dictionary.at_slack_basis(
+            context.rows, context.problem.cost, self.bounds.least, self.bounds.most
+        )
 
     def start_from_basis(self, basis: list[int]) -> None:
         """Make the first dictionary at a basis that exact arithmetic found dual feasible."""

@@ -8,7 +8,7 @@ from fractions import Fraction
 from itertools import count
 from typing import Any, NamedTuple
 
-from intplan.errors import SheetError, excerpt, unknown
+from intplan.errors import SheetError, excerpt, nearest, unknown
 from intplan.sheet.algebra import parse_rule, tokens, write_rule
 from intplan.sheet.model import Activity, Rule, Sheet, check_bounds
 from intplan.sheet.names import name_problem, normal
@@ -19,6 +19,7 @@ Limits = tuple[Number | None, Number | None]
 Named = Mapping[str, Any] | Iterable[tuple[str, Any]]
 
 SIDES = ("least", "most")
+LONGEST_RULE = 72  # characters of a rule in a message; a longer one is told by its limits alone
 
 
 @dataclass(frozen=True)
@@ -85,15 +86,37 @@ def change_sheet(
         not have, limits that contradict each other, or the same thing changed twice.
     """
     work = _Work(sheet)
-    for name in _names(waive, "waive"):
+    for name in read_names(waive, "waive"):
         work.waive(name)
     for name, value in _pairs(set, "set"):
         work.set(name, value)
-    for name in _names(freeze, "freeze"):
+    for name in read_names(freeze, "freeze"):
         work.freeze(name, plan)
     for name, value in _pairs(add, "add"):
         work.add(name, value)
     return work.done()
+
+
+def read_names(names: Iterable[str], what: str) -> list[str]:
+    """Return names in normal form, with one space between their words.
+
+    Parameters
+    ----------
+    names : of rules, activities or bounds; a text alone is one name
+    what : the argument that they are given for
+
+    Raises
+    ------
+    SheetError
+        One is no text, or empty.
+    """
+    listed = [names] if isinstance(names, str) else list(names or ())
+    for name in listed:
+        if not isinstance(name, str):
+            raise SheetError("a name is text", what)
+        if not name.strip():
+            raise SheetError("an empty name", what)
+    return [normal(" ".join(name.split())) for name in listed]
 
 
 def read_addition(text: str) -> tuple[str, Any]:
@@ -120,7 +143,7 @@ def read_addition(text: str) -> tuple[str, Any]:
     plain = normal(name.strip())
     problem = name_problem(plain)
     if problem:
-        raise SheetError(f"{excerpt(plain)}: {problem}", shown)
+        raise SheetError(f"{excerpt(plain)}: {problem}" if plain else problem, shown)
     if value.lstrip()[0] not in "{\"'":
         return plain, value.strip()
     try:
@@ -169,10 +192,14 @@ class _Spoken(NamedTuple):
 
 
 def _spoken(text: str) -> _Spoken | None:
-    """Find the one name in a text of limits, a bound's second word blanked; None if not one."""
+    """Find the one name in a text of limits, a bound's second word blanked; None if not one.
+
+    A second word that is nearly one of a bound is taken as written: no bound is called so, and the
+    error about that has the right name.
+    """
     text = normal(text)
     names = [token for token in tokens(text) if token.kind == "name"]
-    if len(names) == 2 and names[1].text in SIDES:
+    if len(names) == 2 and nearest(names[1].text, SIDES):
         first, side = names
         if text[first.place + len(first.text) : side.place].isspace():
             end = side.place + len(side.text)
@@ -192,21 +219,13 @@ def _limits(spoken: _Spoken, where: str) -> Limits:
     raise SheetError(f"write the new limits as {name} <= 14 or 2 <= {name} <= 5", where)
 
 
-def _names(names: Iterable[str], what: str) -> list[str]:
-    """Return names in normal form, with one space between their words."""
-    listed = [names] if isinstance(names, str) else list(names or ())
-    for name in listed:
-        if not isinstance(name, str):
-            raise SheetError("a name is text", what)
-    return [normal(" ".join(name.split())) for name in listed]
-
-
 def _pairs(named: Named | None, what: str) -> list[tuple[str, Any]]:
     """Return what is given by name as pairs."""
-    if isinstance(named, str):
-        raise SheetError('give names with what is meant of them, such as {"oven": "<= 14"}', what)
     pairs = list(named.items() if isinstance(named, Mapping) else named or ())
-    names = _names([name for name, _ in pairs], what)
+    paired = all(isinstance(pair, (tuple, list)) and len(pair) == 2 for pair in pairs)
+    if isinstance(named, str) or not paired:
+        raise SheetError('give names with what is meant of them, such as {"oven": "<= 14"}', what)
+    names = read_names([name for name, _ in pairs], what)
     return [(name, value) for name, (_, value) in zip(names, pairs, strict=True)]
 
 
@@ -273,13 +292,16 @@ class _Work:
 
     def touch(self, what: tuple[str, str], sides: Iterable[str], how: str, where: str) -> None:
         """Note what is done to the sides of a rule or activity, unless something was before."""
-        for side in sides:
-            key = f"{what[0]} {what[1]} {side}"
-            if key in self.touched:
-                before = self.touched[key]
-                told = f"{how} twice" if before == how else f"both {before} and {how}"
-                raise SheetError(f"the {side} of {what[1]} is {told}; say it once", where)
-            self.touched[key] = how
+        keys = {side: f"{what[0]} {what[1]} {side}" for side in sides}
+        earlier = {side: self.touched[key] for side, key in keys.items() if key in self.touched}
+        if earlier:
+            side, before = next(iter(earlier.items()))
+            whole = len(earlier) == len(SIDES) and len(set(earlier.values())) == 1
+            whole = whole or (what[0], before) == ("rule", "waived")
+            told = f"{how} twice" if before == how else f"both {before} and {how}"
+            whose = what[1] if whole else f"the {side} of {what[1]}"
+            raise SheetError(f"{whose} is {told}; say it once", where)
+        self.touched |= dict.fromkeys(keys.values(), how)
 
     def set(self, name: str, value: Any) -> None:
         """Give a rule, an activity or a bound new limits."""
@@ -302,12 +324,25 @@ class _Work:
         old = self.sheet.rules[i]
         sides = {s: v for s, v in zip(SIDES, (least, most), strict=True) if v is not None}
         self.touch(("rule", old.name), sides, "set", where)
-        for side in sides:
+        for side, limit in sides.items():
             if getattr(old, side) is None:
-                says = write_rule(((0, 1),), old.least, old.most, ("...",))
-                raise SheetError(f"{old.name} has no {side}; it says {says}", where)
+                says = self.shown(old)
+                other = replace(old, name=_beside(old.name, side), least=None, most=None)
+                hint = f"{other.name}: {self.shown(replace(other, **{side: limit}))}"
+                raise SheetError(
+                    f"{old.name} has no {side}; it says {says}; for that side add a rule of another"
+                    f" name, such as {hint}",
+                    where,
+                )
         if sides:
             self.rules[i] = replace(self.rules.get(i) or old, **sides, text="")
+
+    def shown(self, rule: Rule) -> str:
+        """Write a rule for a message; where it is long, dots for all but its limits."""
+        whole = self.sheet.show_rule(rule)
+        if len(whole) <= LONGEST_RULE:
+            return whole
+        return write_rule(((0, 1),), rule.least, rule.most, ("...",))
 
     def set_activity(
         self, j: int, least: Number | None, most: Number | None, how: str, where: str
@@ -468,6 +503,12 @@ def _one_side(
         owner, relation = name[: -len(side) - 1], ">=" if side == "least" else "<="
         raise SheetError(f"write {name} = 14, or {owner} {relation} 14", where)
     return (here, None) if side == "least" else (None, here)
+
+
+def _beside(name: str, side: str) -> str:
+    """Return a name for a rule that has the other side: ``oven_least`` beside ``oven``."""
+    stem, bracket, index = name.partition("[")
+    return f"{stem}_{side}{bracket}{index}"
 
 
 def _place(what: str, name: str) -> str:
