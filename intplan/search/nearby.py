@@ -50,7 +50,7 @@ def look_nearby(
     start: Dictionary,
     bounds: Bounds,
     plan: Sequence[Number],
-    widen: bool = True,
+    widen: bool,
 ) -> bool:
     """Look for a better plan near an earlier one; tell whether one was found.
 

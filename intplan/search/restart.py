@@ -202,8 +202,8 @@ class KeptRoot(RootWork):
         if not isinstance(proof, Proof) or not len(self.fractional_rows()):
             return proof
         context = self.context
-        if self.plan is not None:
-            look_nearby(context, self.dictionary, self.bounds, self.plan)
+        if self.branched:
+            self._look_nearby(widen=True)
         if context.best.value is None and context.time_to_dive():
             dive(context, self.dictionary, self.bounds, self.plan)
         return self.close("beaten", proof) if context.best.beats(proof.bound) else proof
@@ -211,9 +211,18 @@ class KeptRoot(RootWork):
     def cut(self, proof: Proof) -> Split | None:
         """Add cuts as at any root, and look near the earlier plan again."""
         split = super().cut(proof)
-        if split is None and self.plan is not None and not self.closed:
-            look_nearby(self.context, self.dictionary, self.bounds, self.plan, widen=False)
+        if split is None and not self.closed:
+            self._look_nearby(widen=not self.branched)
         return split
+
+    @property
+    def branched(self) -> bool:
+        """Whether the earlier tree has more than its root: else cuts are likely to settle it."""
+        return len(self.carrier.kept.result.tree) > 1
+
+    def _look_nearby(self, widen: bool) -> None:
+        if self.plan is not None:
+            look_nearby(self.context, self.dictionary, self.bounds, self.plan, widen)
 
 
 class Restart(Search):
