@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from fractions import Fraction
 from typing import TYPE_CHECKING
 
@@ -14,6 +14,7 @@ from intplan.sheet.numbers import Number
 
 if TYPE_CHECKING:
     from intplan.search.carry import Places
+    from intplan.sheet.problem import Problem
 
 
 def restarted(
@@ -89,6 +90,43 @@ def extended(
     places = Places(np.arange(rules), np.arange(columns), aim_rule, same_aim=False)
     limits = Limits(time_limit, node_limit, stop, None)
     result = restart(sheet.problem(), standing.kept, places, limits, at="leaves")
+    return StandingPlan(sheet, confirmed(sheet, result))
+
+
+def freed(
+    standing: StandingPlan,
+    sheet: Sheet,
+    problem: Problem,
+    plan: Sequence[Number],
+    *,
+    time_limit: float | None = None,
+    node_limit: int | None = None,
+    stop: Callable[[], bool] | None = None,
+    at: str | None = None,
+) -> StandingPlan:
+    """Solve a sheet in which rules may bend at a price, from a tree that shows that they must.
+
+    Parameters
+    ----------
+    standing : infeasible, of a sheet with the same activities
+    sheet : has the rules of that sheet by their names, and activities that let some of them bend
+        after the others; its aim is what these cost
+    problem : of `sheet`, or one that allows more
+    plan : of `problem`, the first in hand
+    """
+    import numpy as np
+
+    from intplan.search.carry import Places
+    from intplan.search.limits import Limits
+    from intplan.search.restart import restart
+
+    before, index = standing.proven_sheet, sheet.rule_index
+    columns = np.full(len(before.problem().cost), -1)  # what bent before is held by wider limits
+    columns[: len(before.activities)] = np.arange(len(before.activities))
+    rules = np.array([index[rule.name] for rule in before.rules], int)
+    places = Places(rules, columns, same_aim=False)
+    limits = Limits(time_limit, node_limit, stop, None)
+    result = restart(problem, standing.kept, places, limits, plan=plan, at=at)
     return StandingPlan(sheet, confirmed(sheet, result))
 
 
