@@ -94,7 +94,7 @@ def extended(
 
 
 def freed(
-    standing: StandingPlan,
+    standing: StandingPlan | None,
     sheet: Sheet,
     problem: Problem,
     plan: Sequence[Number],
@@ -108,26 +108,37 @@ def freed(
 
     Parameters
     ----------
-    standing : infeasible, of a sheet with the same activities
+    standing : infeasible, of a sheet with the same activities; None to start from nothing
     sheet : has the rules of that sheet by their names, and activities that let some of them bend
         after the others; its aim is what these cost
     problem : of `sheet`, or one that allows more
     plan : of `problem`, the first in hand
     """
-    import numpy as np
-
-    from intplan.search.carry import Places
+    from intplan.search.engine import Search
     from intplan.search.limits import Limits
     from intplan.search.restart import restart
 
-    before, index = standing.proven_sheet, sheet.rule_index
-    columns = np.full(len(before.problem().cost), -1)  # what bent before is held by wider limits
-    columns[: len(before.activities)] = np.arange(len(before.activities))
-    rules = np.array([index[rule.name] for rule in before.rules], int)
-    places = Places(rules, columns, same_aim=False)
     limits = Limits(time_limit, node_limit, stop, None)
-    result = restart(problem, standing.kept, places, limits, plan=plan, at=at)
+    if standing is None:
+        search = Search(problem, Fraction(0), limits)
+        search.best.offer(list(plan))
+        result = search.run()
+    else:
+        places = _places_of_bending(standing.proven_sheet, sheet)
+        result = restart(problem, standing.kept, places, limits, plan=plan, at=at)
     return StandingPlan(sheet, confirmed(sheet, result))
+
+
+def _places_of_bending(before: Sheet, now: Sheet) -> Places:
+    """Return where rules and columns are in a sheet that has other bends."""
+    import numpy as np
+
+    from intplan.search.carry import Places
+
+    columns = np.full(len(before.problem().cost), -1)
+    columns[: len(before.activities)] = np.arange(len(before.activities))
+    rules = np.array([now.rule_index[rule.name] for rule in before.rules], int)
+    return Places(rules, columns, same_aim=False)
 
 
 def restartable(standing: StandingPlan) -> bool:
