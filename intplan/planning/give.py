@@ -7,7 +7,7 @@ from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
 from itertools import count
-from typing import Any, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 from intplan.errors import IntplanError, excerpt, unknown
 from intplan.planning.budget import Budget
@@ -16,6 +16,9 @@ from intplan.planning.standing import Progress, StandingPlan, solve
 from intplan.sheet import Activity, Aim, Rule, Sheet
 from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number, lowest
+
+if TYPE_CHECKING:
+    from intplan.sheet.problem import Problem
 
 
 class Bending(NamedTuple):
@@ -279,11 +282,15 @@ def _solve_elastic(
     """
     from intplan.planning.restart import freed
 
+    return freed(proof, sheet, _relaxed(sheet), _bent_plan(sheet, amounts), **limits)
+
+
+def _relaxed(sheet: Sheet) -> Problem:
+    """Return the problem of an elastic sheet with divisible bends."""
     problem = sheet.problem()
-    priced = [column for column, _ in sheet.aim.terms]
     whole = problem.whole.copy()
-    whole[priced] = False
-    return freed(proof, sheet, replace(problem, whole=whole), _bent_plan(sheet, amounts), **limits)
+    whole[[column for column, _ in sheet.aim.terms]] = False
+    return replace(problem, whole=whole)
 
 
 def _bent_plan(sheet: Sheet, amounts: Sequence[Number]) -> list[Number]:

@@ -102,17 +102,18 @@ def freed(
     time_limit: float | None = None,
     node_limit: int | None = None,
     stop: Callable[[], bool] | None = None,
-    at: str | None = None,
 ) -> StandingPlan:
     """Solve a sheet in which rules may bend at a price, from a tree that shows that they must.
+
+    What showed that a node of that tree is empty bounds what bending costs there.
 
     Parameters
     ----------
     standing : infeasible, of a sheet with the same activities; None to start from nothing
-    sheet : has the rules of that sheet by their names, and activities that let some of them bend
-        after the others; its aim is what these cost
+    sheet : has the rules of that sheet by their names and, after the activities, others that let
+        some of the rules bend; its aim is what these cost
     problem : of `sheet`, or one that allows more
-    plan : of `problem`, the first in hand
+    plan : the first in hand if it fits `problem`
     """
     from intplan.search.engine import Search
     from intplan.search.limits import Limits
@@ -121,11 +122,12 @@ def freed(
     limits = Limits(time_limit, node_limit, stop, None)
     if standing is None:
         search = Search(problem, Fraction(0), limits)
-        search.best.offer(list(plan))
+        if search.context.arithmetic.fits(plan):
+            search.best.offer(list(plan))
         result = search.run()
     else:
         places = _places_of_bending(standing.proven_sheet, sheet)
-        result = restart(problem, standing.kept, places, limits, plan=plan, at=at)
+        result = restart(problem, standing.kept, places, limits, plan=plan, at="leaves")
     return StandingPlan(sheet, confirmed(sheet, result))
 
 
