@@ -6,6 +6,7 @@ import math
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
+from functools import cached_property
 from itertools import count
 from typing import TYPE_CHECKING, Any, NamedTuple
 
@@ -206,6 +207,12 @@ class _Bending:
             if bounds.check(amounts).good
         ]
 
+    @cached_property
+    def branched(self) -> StandingPlan | None:
+        """The proof if it has branches: the basis and cuts of a root are no help to find a plan."""
+        proof = self.proof
+        return None if proof is None or len(proof.result.tree) == 1 else proof
+
     def least(
         self, bending: Sequence[str], blamed: Sequence[str], most_nodes: int | None = None
     ) -> _Found:
@@ -247,7 +254,7 @@ class _Bending:
             return min(known, key=lambda pair: pair[0])[1], True
         others = tuple(rule for rule in self.wide if rule.name not in may)
         asked = replace(self.sheet, aim=Aim(), rules=others)
-        some = any_plan(asked, self.budget, self.proof, most_nodes)
+        some = any_plan(asked, self.budget, self.branched, most_nodes)
         return some.amounts, some.amounts is not None or some.search.outcome == "infeasible"
 
 

@@ -3,8 +3,8 @@
 Nothing is taken over on trust.  Row multipliers prove some bound whatever the rows' limits are, so
 those of a closed node are weighed again over the changed limits and bounds.  Cuts and tightened
 bounds are taken over where everything they were derived from still holds: always, unless they lean
-on the cut-off or on a rule or bound that now allows more; those that do are proven again or
-undone.
+on the cut-off or on a rule or bound that now allows more, as a rule with new columns does; those
+that do are proven again or undone.
 
 Reference: A. M. Geoffrion, R. Nauss, Parametric and postoptimality analysis in integer linear
 programming, Management Science 23:453-466, 1977.
@@ -169,6 +169,7 @@ class Carrier:
         """Return an earlier closure's multipliers by the present rows; None if it has none.
 
         Where the earlier aim is now a rule, a bound on it becomes a contradiction with that rule.
+        A contradiction that new columns of its rules may undo becomes a bound on their cost.
         """
         if closure is None or "rows" not in closure:
             return None
