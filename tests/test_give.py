@@ -1,29 +1,43 @@
 """The least give: hand-made ones, and random ones against the reference."""
 
+from collections.abc import Iterator
 from dataclasses import replace
 from fractions import Fraction
 
+import networkx as nx
 import numpy as np
 import pytest
 
 import intplan.planning.give
-from intplan import IntplanError, Sheet, solve
+from intplan import IntplanError, Sheet, StandingPlan, solve
 from intplan.planning.budget import Budget
-from intplan.planning.clash import clash
-from intplan.planning.directions import widest
+from intplan.planning.clash import clash, settle
+from intplan.planning.directions import any_plan, widest
 from intplan.planning.give import (
     Bending,
     Give,
+    _bendings,
+    _elastic,
+    _relaxed,
+    _solve_elastic,
     _step,
+    _total,
     bendable_rules,
     bent,
     find_give,
 )
+from intplan.planning.replan import replan
+from intplan.planning.restart import restarted
+from intplan.sheet.changes import change_sheet
 from intplan.sheet.model import Aim, Rule
-from tests.families import Instance, build, instance_of
+from intplan.sheet.problem import Problem
+from tests.changes import random_change
+from tests.families import Instance, build, covering, instance_of, product_mix, selection
 from tests.reference import INFEASIBLE as REFUSED
 from tests.reference import OPTIMAL, reference_milp
 from tests.test_clash import FAR, JOINERY, is_refused, random_clashing
+from tests.test_replan_random import random_sheet
+from tests.verify import Checker, check_plan, cost_of
 
 CARTS = """
 measure = "EUR"
@@ -229,8 +243,8 @@ def test_that_bending_frees_nothing_is_asked_first(monkeypatch):
 def test_without_the_least_give_one_is_known(monkeypatch):
     plain = intplan.planning.give._solve_elastic
 
-    def stopped(sheet, **limits):
-        return plain(sheet, **{**limits, "stop": lambda: True})
+    def stopped(*what, **limits):
+        return plain(*what, **{**limits, "stop": lambda: True})
 
     monkeypatch.setattr(intplan.planning.give, "_solve_elastic", stopped)
     give = give_of(JOINERY)
@@ -315,6 +329,112 @@ def test_every_give_is_the_least():
             amounts = list(give.plan.exact_plan.values())
             assert moved.check(amounts).good and not sheet.check(amounts).good
     assert gives > 40
+
+
+# ------------------------------------------------------------------------------ from the kept tree
+
+
+def promised(instance: Instance) -> Iterator[StandingPlan]:
+    """Yield proofs that the best value cannot be passed by one: from a kept tree, and from none."""
+    standing = solve(Sheet.from_arrays(**instance.arrays()))
+    sense = ">=" if standing.sheet.aim.sense == "maximize" else "<="
+    goal = standing.exact_value + (1 if sense == ">=" else -1)
+    names = [activity.name for activity in standing.sheet.activities]
+    aim = " + ".join(f"{c}*{names[j]}" for j, c in standing.sheet.aim.terms)
+    changes = change_sheet(standing.sheet, add={"goal": f"{aim} {sense} {goal}"})
+    yield restarted(standing, changes)
+    yield solve(changes.sheet)
+
+
+def refuted(count: int) -> Iterator[StandingPlan]:
+    """Yield infeasible standing plans with trees and cuts, and some with soft rules."""
+    yield from promised(selection(5, 20, 1))
+    for seed in range(count):
+        yield from promised(product_mix(3, 6, seed, scarce=2))
+        yield from promised(selection(2, 8, seed))
+        yield from promised(covering(6, 9, 0.3, seed))
+    for seed in range(5 * count):
+        standing = settle(random_clashing(seed), may_bend=()).standing
+        if standing.outcome == "infeasible" and standing.proven_sheet is standing.sheet:
+            yield standing
+
+
+def freed_ways(
+    proof: StandingPlan, bending: tuple[str, ...]
+) -> Iterator[tuple[Problem, StandingPlan]]:
+    """Search for the least bendings from the kept tree, then from nothing but the same plan."""
+    sheet = proof.sheet
+    others = tuple(widest(rule) for rule in sheet.rules if rule.name not in bending)
+    some = any_plan(replace(sheet, aim=Aim(), rules=others), Budget(), proof)
+    if some.amounts is None:
+        return
+    wide = tuple(map(widest, sheet.rules))
+    enough = _total(sheet, _bendings(sheet, wide, some.amounts))
+    form = _elastic(sheet, bending, bending, enough)
+    for start in (proof, None):
+        yield _relaxed(form), _solve_elastic(form, start, some.amounts)
+
+
+def prove(problem: Problem, standing: StandingPlan) -> None:
+    """Prove a tree again; the sheet's aim comes in steps although the problem's does not."""
+    result = standing.result
+    assert check_plan(problem, result.plan) == result.value == result.bound
+    checker = Checker(problem, result.tree, result.cuts, cost_of(problem, result.plan))
+    checker.step = problem.cost_step
+    checker.walk()
+
+
+def closed_again(tree: nx.DiGraph) -> int:
+    """Count nodes that were closed unsolved by what is proven of them alone."""
+    count = 0
+    for number, node in tree.nodes(data=True):
+        if node["outcome"] == "beaten" and not node["pivots"] and number:
+            (above,) = tree.predecessors(number)
+            closure = node["evidence"]["closure"]
+            count += closure is not tree.nodes[above]["evidence"]["closure"]
+    return count
+
+
+def test_the_kept_tree_gives_what_a_search_from_nothing_gives():
+    """Values against the search from nothing, and whole trees in rationals.
+
+    No cut may outlive that a rule of it can bend now.
+    """
+    compared = cuts = closed = 0
+    for proof in refuted(8):
+        names = tuple(rule.name for rule in proof.sheet.rules)
+        for bending in (names, names[-1:], names[:1]):
+            ways = list(freed_ways(proof, bending))
+            if not ways:
+                continue
+            (problem, warm), (_, fresh) = ways
+            assert warm.outcome == fresh.outcome == "optimal"
+            assert warm.exact_value == fresh.exact_value, (proof.sheet, bending)
+            prove(problem, warm)
+            compared += 1
+            cuts += bool(proof.result.cuts)
+            closed += closed_again(warm.result.tree)
+    assert compared > 150 and cuts > 80 and closed > 20, (compared, cuts, closed)
+
+
+def test_gives_along_chains_of_changes_are_the_least():
+    """The trees are carried over, translated, and speak of sheets without some soft rules."""
+    gives = 0
+    for seed in range(60):
+        standing = solve(random_sheet(seed))
+        rng = np.random.default_rng([seed, 99])
+        for _ in range(3):
+            change = random_change(standing.sheet, standing.exact_plan, rng)
+            answer = replan(standing, **change.arguments)
+            if answer.effect == "impossible":
+                gives += 1
+                weights = answer.give.weighted
+                assert answer.give.proven
+                assert agrees(answer.give.total, least_by_reference(change.sheet, weights)), seed
+            if answer.after.outcome not in ("optimal", "infeasible"):
+                break
+            standing = answer.after
+    assert gives > 30, gives
 
 
 @pytest.mark.parametrize(

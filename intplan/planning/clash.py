@@ -218,7 +218,10 @@ def find_clash(
     with budget.halved(), budget.ending():
         complete = work.run()
     needs_whole, names = _needs_whole(sheet, work.members, budget), work.names
-    give = find_give(sheet, names, may_bend, budget, progress)
+    give = find_give(
+        sheet, names, may_bend, budget, progress,
+        proof=work.refuted, known=(*known, *work.witnesses.values()),
+    )  # fmt: skip
     if not complete and not budget.unlimited:
         work.run()
         if not needs_whole and work.names != names:  # what fits a set fits any part of it
@@ -314,7 +317,7 @@ class _Filter:
         self.sheet = sheet
         self.budget = budget
         same = standing.sheet.activities == sheet.activities  # unlike those of a bounded form
-        self.proof = standing if same else None
+        self.refuted = self.proof = standing if same else None
         self.witnesses: dict[str, Sequence[Number]] = {}
         self.ended_by: str | None = None
         endless = {r.name for r in self.sheet.rules if r.give is not None and r.give_most is None}

@@ -6,8 +6,9 @@ import math
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
+from functools import cached_property
 from itertools import count
-from typing import Any, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 from intplan.errors import IntplanError, excerpt, unknown
 from intplan.planning.budget import Budget
@@ -17,6 +18,9 @@ from intplan.sheet import Activity, Aim, Rule, Sheet
 from intplan.sheet.changes import read_names
 from intplan.sheet.checking import check_rule
 from intplan.sheet.numbers import Number, lowest
+
+if TYPE_CHECKING:
+    from intplan.sheet.problem import Problem
 
 
 class Bending(NamedTuple):
@@ -96,6 +100,9 @@ def find_give(
     may_bend: tuple[str, ...],
     budget: Budget,
     progress: Progress | None = None,
+    *,
+    proof: StandingPlan | None = None,
+    known: Sequence[Sequence[Number]] = (),
 ) -> Give:
     """Find the least give that leaves a plan, and what each clashing rule would have to give.
 
@@ -106,21 +113,26 @@ def find_give(
     may_bend : the rules that may bend, from `bendable_rules`
     budget : the limits, shared with what came before
     progress : told of the search under the bent limits
+    proof : shows that the sheet has no plan, for the same activities; its tree is taken up
+    known : plans in whole units, of the activities, that meet most of the sheet
 
     Notes
     -----
     The rules that may bend become soft without limit at their weights, and the prices are the
     only aim: the elastic form of a problem (J. W. Chinneck, Feasibility and Infeasibility in
     Optimization: Algorithms and Computational Methods, Springer, 2008). What a soft rule may bend
-    anyway costs nothing here.
+    anyway costs nothing here. No rule alone gives less than what all of them do together.
     """
+    work = _Bending(sheet, proof, known, budget)
     weighted = {r.name: _weight(r) for r in sheet.rules if r.name in may_bend}
     blamed = tuple(name for name in clashing if name in weighted)
     least = plan = None
     proven = not blamed
     if blamed and budget.ended_by() is None:
         with budget.halved(), budget.ending():
-            least, proven = _least_bendings(sheet, may_bend, blamed, budget)
+            least, proven = work.least(may_bend, blamed)
+        if proven and least is not None:
+            work.floor = _total(sheet, least)
     if least is not None:
         with budget.halved(), budget.ending():
             plan = budget.run(solve, bent(sheet, least), progress=progress)
@@ -130,7 +142,7 @@ def find_give(
             if budget.ended_by() is not None:
                 proven = False
                 break
-            found = _least_bendings(sheet, (name,), (name,), budget, budget.fair_nodes)
+            found = work.least((name,), (name,), budget.fair_nodes)
             if found.proven:
                 alone[name] = found.bendings[0] if found.bendings else None
             proven = proven and found.proven
@@ -175,33 +187,86 @@ class _Found(NamedTuple):
     proven: bool
 
 
-def _least_bendings(
-    sheet: Sheet,
-    bending: Sequence[str],
-    blamed: Sequence[str],
-    budget: Budget,
-    most_nodes: int | None = None,
-) -> _Found:
-    """Find the least bendings of these rules that leave a plan.
+class _Bending:
+    """Finds the least bendings.
 
-    First comes the question whether the others leave one at all. The search for the least could
-    not tell: without a limit to the bends it would go on for ever.
+    Parameters
+    ----------
+    sheet, proof, known, budget : as for `find_give`
+
+    Attributes
+    ----------
+    floor : no bendings that leave a plan have a weighted sum below it
     """
-    wide = tuple(map(widest, sheet.rules))
-    others = tuple(rule for rule in wide if rule.name not in bending)
-    some = any_plan(replace(sheet, aim=Aim(), rules=others), budget, None, most_nodes)
-    if some.amounts is None:
-        return _Found(None, some.search.outcome == "infeasible")
-    known = _bendings(sheet, wide, some.amounts)
-    if budget.ended_by() is not None:
-        return _Found(known, False)
-    elastic = _elastic(sheet, bending, blamed, _total(sheet, known))
-    freed = budget.run(_solve_elastic, elastic, most_nodes=most_nodes)
-    if freed.answer.plan is None:
-        return _Found(known, False)
-    found = _bendings(sheet, wide, freed.answer.plan)
-    least = min((known, found), key=lambda bendings: _total(sheet, bendings))
-    return _Found(least, _total(sheet, least) == freed.exact_bound)
+
+    def __init__(
+        self,
+        sheet: Sheet,
+        proof: StandingPlan | None,
+        known: Sequence[Sequence[Number]],
+        budget: Budget,
+    ) -> None:
+        self.sheet = sheet
+        self.wide = tuple(map(widest, sheet.rules))
+        self.proof = proof
+        self.budget = budget
+        self.floor: Number = 0
+        bounds = replace(sheet, aim=Aim(), rules=())
+        self.known = [
+            (amounts, _bendings(sheet, self.wide, amounts))
+            for amounts in known
+            if bounds.check(amounts).good
+        ]
+
+    @cached_property
+    def branched(self) -> StandingPlan | None:
+        """The proof if it has branches: the basis and cuts of a root are no help to find a plan."""
+        proof = self.proof
+        return None if proof is None or len(proof.result.tree) == 1 else proof
+
+    def least(
+        self, bending: Sequence[str], blamed: Sequence[str], most_nodes: int | None = None
+    ) -> _Found:
+        """Find the least bendings of these rules that leave a plan.
+
+        First comes the question whether the others leave one at all. The search for the least
+        could not tell: without a limit to the bends it would go on for ever.
+        """
+        amounts, settled = self.some_plan(bending, most_nodes)
+        if amounts is None:
+            return _Found(None, settled)
+        first = _bendings(self.sheet, self.wide, amounts)
+        total = _total(self.sheet, first)
+        if total <= self.floor:
+            return _Found(first, True)
+        if self.budget.ended_by() is not None:
+            return _Found(first, False)
+        elastic = _elastic(self.sheet, bending, blamed, total)
+        freed = self.budget.run(
+            _solve_elastic, elastic, self.proof, amounts, most_nodes=most_nodes
+        )
+        if freed.answer.plan is None:
+            return _Found(first, False)
+        found = _bendings(self.sheet, self.wide, freed.answer.plan)
+        least = min((first, found), key=lambda bendings: _total(self.sheet, bendings))
+        return _Found(least, _total(self.sheet, least) == freed.exact_bound)
+
+    def some_plan(
+        self, bending: Sequence[str], most_nodes: int | None
+    ) -> tuple[Sequence[Number] | None, bool]:
+        """Return a plan that meets all other rules, and whether it is settled if there is one."""
+        may = set(bending)
+        known = [
+            (_total(self.sheet, bendings), amounts)
+            for amounts, bendings in self.known
+            if may.issuperset(bending.name for bending in bendings)
+        ]
+        if known:
+            return min(known, key=lambda pair: pair[0])[1], True
+        others = tuple(rule for rule in self.wide if rule.name not in may)
+        asked = replace(self.sheet, aim=Aim(), rules=others)
+        some = any_plan(asked, self.budget, self.branched, most_nodes)
+        return some.amounts, some.amounts is not None or some.search.outcome == "infeasible"
 
 
 def _bendings(
@@ -218,20 +283,46 @@ def _total(sheet: Sheet, bendings: Iterable[Bending]) -> Number:
     return lowest(sum(b.amount * _weight(rules[index[b.name]]) for b in bendings))
 
 
-def _solve_elastic(sheet: Sheet, **limits: Any) -> StandingPlan:
+def _solve_elastic(
+    sheet: Sheet, proof: StandingPlan | None, amounts: Sequence[Number], **limits: Any
+) -> StandingPlan:
     """Solve an elastic sheet.
 
     The bends that are whole by themselves once the activities are, at the least that these need,
     go into the search as divisible, so that it branches on activities alone. That the aim comes
     in steps still holds for the plans that matter.
-    """
-    from intplan.search import branch_and_cut
 
+    Parameters
+    ----------
+    sheet : from `_elastic`
+    proof : as for `find_give`
+    amounts : of the activities: a plan that meets the rules that cannot bend
+    """
+    from intplan.planning.restart import freed
+
+    return freed(proof, sheet, _relaxed(sheet), _bent_plan(sheet, amounts), **limits)
+
+
+def _relaxed(sheet: Sheet) -> Problem:
+    """Return the problem of an elastic sheet with divisible bends."""
     problem = sheet.problem()
-    priced = [column for column, _ in sheet.aim.terms]
     whole = problem.whole.copy()
-    whole[priced] = False
-    return StandingPlan(sheet, branch_and_cut(replace(problem, whole=whole), **limits))
+    whole[[column for column, _ in sheet.aim.terms]] = False
+    return replace(problem, whole=whole)
+
+
+def _bent_plan(sheet: Sheet, amounts: Sequence[Number]) -> list[Number]:
+    """Return the amounts with the bends that they need in an elastic sheet."""
+    plan = [*amounts, *[0] * (len(sheet.activities) - len(amounts))]
+    for rule in sheet.rules:
+        value = sheet.rule_value(rule, plan)
+        bends = [(column, size) for column, size in rule.terms if column >= len(amounts)]
+        if len(bends) == len(rule.terms):  # that some rule must bend
+            continue
+        for column, size in bends:
+            limit = rule.least if size > 0 else rule.most
+            plan[column] = lowest(max(Fraction(limit - value) / size, Fraction(0)))
+    return plan
 
 
 def _elastic(

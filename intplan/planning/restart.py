@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from fractions import Fraction
 from typing import TYPE_CHECKING
 
@@ -14,6 +14,7 @@ from intplan.sheet.numbers import Number
 
 if TYPE_CHECKING:
     from intplan.search.carry import Places
+    from intplan.sheet.problem import Problem
 
 
 def restarted(
@@ -90,6 +91,56 @@ def extended(
     limits = Limits(time_limit, node_limit, stop, None)
     result = restart(sheet.problem(), standing.kept, places, limits, at="leaves")
     return StandingPlan(sheet, confirmed(sheet, result))
+
+
+def freed(
+    standing: StandingPlan | None,
+    sheet: Sheet,
+    problem: Problem,
+    plan: Sequence[Number],
+    *,
+    time_limit: float | None = None,
+    node_limit: int | None = None,
+    stop: Callable[[], bool] | None = None,
+) -> StandingPlan:
+    """Solve a sheet in which rules may bend at a price, from a tree that shows that they must.
+
+    What showed that a node of that tree is empty bounds what bending costs there.
+
+    Parameters
+    ----------
+    standing : infeasible, of a sheet with the same activities; None to start from nothing
+    sheet : has the rules of that sheet by their names and, after the activities, others that let
+        some of the rules bend; its aim is what these cost
+    problem : of `sheet`, or one that allows more
+    plan : the first in hand if it fits `problem`
+    """
+    from intplan.search.engine import Search
+    from intplan.search.limits import Limits
+    from intplan.search.restart import restart
+
+    limits = Limits(time_limit, node_limit, stop, None)
+    if standing is None:
+        search = Search(problem, Fraction(0), limits)
+        if search.context.arithmetic.fits(plan):
+            search.best.offer(list(plan))
+        result = search.run()
+    else:
+        places = _places_of_bending(standing.proven_sheet, sheet)
+        result = restart(problem, standing.kept, places, limits, plan=plan, at="leaves")
+    return StandingPlan(sheet, confirmed(sheet, result))
+
+
+def _places_of_bending(before: Sheet, now: Sheet) -> Places:
+    """Return where rules and columns are in a sheet that has other bends."""
+    import numpy as np
+
+    from intplan.search.carry import Places
+
+    columns = np.full(len(before.problem().cost), -1)
+    columns[: len(before.activities)] = np.arange(len(before.activities))
+    rules = np.array([now.rule_index[rule.name] for rule in before.rules], int)
+    return Places(rules, columns, same_aim=False)
 
 
 def restartable(standing: StandingPlan) -> bool:

@@ -3,8 +3,8 @@
 Nothing is taken over on trust.  Row multipliers prove some bound whatever the rows' limits are, so
 those of a closed node are weighed again over the changed limits and bounds.  Cuts and tightened
 bounds are taken over where everything they were derived from still holds: always, unless they lean
-on the cut-off or on a rule or bound that now allows more; those that do are proven again or
-undone.
+on the cut-off or on a rule or bound that now allows more, as a rule with new columns does; those
+that do are proven again or undone.
 
 Reference: A. M. Geoffrion, R. Nauss, Parametric and postoptimality analysis in integer linear
 programming, Management Science 23:453-466, 1977.
@@ -26,7 +26,7 @@ from intplan.search.context import Context
 from intplan.search.evidence import LEAST, MOST, Proof
 from intplan.search.result import Cut, SearchResult
 from intplan.search.tightening import Bounds
-from intplan.sheet.problem import Number, Problem
+from intplan.sheet.problem import ExactRow, Number, Problem
 
 FINE = 52  # bits of a cut's doubles up to which it is known in integers
 
@@ -121,6 +121,8 @@ class Carrier:
     Attributes
     ----------
     shrunk : nothing is allowed that was not allowed before
+    fresh : the columns that the earlier problem had not
+    freed : some earlier rules have such columns now
     row_map : (rows,) the present number of each earlier row, -1 where it is gone
     """
 
@@ -135,6 +137,11 @@ class Carrier:
         self.same_columns = bool((places.columns == np.arange(len(places.columns))).all())
         self.same_rules = bool((places.rules == np.arange(self.rules)).all())
         self.changed_rules, self.wider_rules = _compare_rules(before, now, places.rules)
+        self.fresh = np.setdiff1d(np.arange(len(now.cost)), places.columns)
+        others = _other_rules(before, now, places, set(self.fresh.tolist()))
+        self.changed_rules |= others
+        self.wider_rules |= others
+        self.freed = bool(others.any())
         self.wider_bounds = _wider_bounds(before, now, places.columns)
         self.shrunk = not (self.wider_rules.any() or self.wider_bounds.any())
         self.scale = Fraction(1)
@@ -162,6 +169,7 @@ class Carrier:
         """Return an earlier closure's multipliers by the present rows; None if it has none.
 
         Where the earlier aim is now a rule, a bound on it becomes a contradiction with that rule.
+        A contradiction that new columns of its rules may undo becomes a bound on their cost.
         """
         if closure is None or "rows" not in closure:
             return None
@@ -176,13 +184,42 @@ class Carrier:
         there = numbers >= 0
         if not there.all():
             numbers, values = numbers[there], values[there]
+        if self.freed:
+            values = values * self._units[rows[there]]
         if weight and places.same_aim and self.scale != 1:
             values = values * float(self.scale)
         if weight and not places.same_aim:
             numbers = np.append(numbers, places.aim_rule)
             values = np.append(values, -float(self.scale))
             weight = 0
+        if self.freed and not weight:
+            return self._priced(numbers, values)
         return Weighed(weight, Multipliers(numbers, values))
+
+    @cached_property
+    def _units(self) -> np.ndarray:
+        """What multipliers of earlier rows are to be multiplied by, (rows,).
+
+        A rule with other columns may have been scaled otherwise.
+        """
+        units = np.ones(len(self.row_map))
+        before, now = self.kept.problem.rows, self.context.problem.rows
+        for i, place in enumerate(self.places.rules.tolist()):
+            if place >= 0:
+                units[i] = _unit(before[i]) / _unit(now[place])
+        return units
+
+    def _priced(self, numbers: np.ndarray, values: np.ndarray) -> Weighed:
+        """Return the multipliers of a contradiction, which new columns may undo, at their price.
+
+        As large as no new column is worth its cost, they bound what undoing it costs.
+        """
+        pull = values @ self.context.rows.matrix[numbers][:, self.fresh]
+        undoing = pull > 0
+        if not undoing.any():
+            return Weighed(0, Multipliers(numbers, values))
+        times = (self.context.problem.cost[self.fresh][undoing] / pull[undoing]).min()
+        return Weighed(1, Multipliers(numbers, values * times))
 
     def weigh_exactly(self, closure: dict[str, Any]) -> dict[int, Fraction] | None:
         """Return an exact closure's multipliers by the present rows; None if it is not exact."""
@@ -536,6 +573,22 @@ def _compare_rules(
     return changed, wider
 
 
+def _other_rules(
+    before: Problem, now: Problem, places: Places, fresh: set[int]
+) -> np.ndarray:
+    """Tell which earlier rules have new columns now, or are scaled otherwise, (rules,).
+
+    What makes up for the others in a rule lets them be what they could not be before.
+    """
+    others = np.zeros(len(places.rules), bool)
+    for i, place in enumerate(places.rules.tolist()):
+        if place < 0 or before.rows[i] is now.rows[place]:
+            continue
+        row = now.rows[place]
+        others[i] = row.factor != before.rows[i].factor or not fresh.isdisjoint(row.columns)
+    return others
+
+
 def _wider_bounds(before: Problem, now: Problem, places: np.ndarray) -> np.ndarray:
     """Tell which bounds of earlier columns allow more now, (2, columns)."""
     wider = np.zeros((2, len(places)), bool)
@@ -544,6 +597,11 @@ def _wider_bounds(before: Problem, now: Problem, places: np.ndarray) -> np.ndarr
             wider[LEAST, j] = _lower(now.exact_least[place], before.exact_least[j])
             wider[MOST, j] = _higher(now.exact_most[place], before.exact_most[j])
     return wider
+
+
+def _unit(row: ExactRow) -> float:
+    """Return by what a written rule is multiplied in the row store."""
+    return float(Fraction(row.factor) / (1 << row.shift))
 
 
 def _lower(new: Number | None, old: Number | None) -> bool:
