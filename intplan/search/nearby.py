@@ -30,7 +30,6 @@ from intplan.sheet.problem import Number
 
 NODES = 100  # most relaxations of one look around a plan
 PIVOTS_A_NODE = 60
-ROUNDED = 3  # nodes of a search at which rounding is tried as well
 LIVELY = 0.1  # share of the gap below which a reduced cost lets its activity go
 AGREE = 1e-6  # distance at which two amounts count as the same
 POINTS = 3  # points with divisible amounts that are tried as plans
@@ -50,7 +49,6 @@ def look_nearby(
     start: Dictionary,
     bounds: Bounds,
     plan: Sequence[Number],
-    widen: bool,
 ) -> bool:
     """Look for a better plan near an earlier one; tell whether one was found.
 
@@ -58,12 +56,11 @@ def look_nearby(
     ----------
     start, bounds : an optimal relaxation and its bounds, left unchanged
     plan : the earlier plan, whether or not it still fits
-    widen : search a wider neighbourhood as well where the first is done soon
     """
     search = _Nearby(context, start, bounds)
     held, costs = _held(context, start, bounds, plan)
     found = search.run(held)
-    if not (widen and search.exhausted) or start.value > context.best.cutoff:
+    if not search.exhausted or start.value > context.best.cutoff:
         return found
     if context.best.value is None:
         few = held[(-costs).argsort(kind="stable")[: len(held) // 2]]
@@ -107,7 +104,7 @@ class _Nearby:
         dictionary = self.start.copy()
         dictionary.set_bounds(held.tolist(), bounds.least, bounds.most)
         waiting = [_Open(dictionary, bounds, None)]
-        found, rounded = False, ROUNDED
+        found = False
         self.points.clear()
         while waiting and self.left and not context.limits.out_of_time():
             node = waiting.pop()
@@ -115,14 +112,10 @@ class _Nearby:
             if not self._solve(node):
                 continue
             rows = fractional_rows(node.dictionary, context.problem.whole)
-            if not len(rows):
+            if len(rows):
+                waiting.extend(self._children(node, rows))
+            else:
                 found |= self._take(node.dictionary)
-                continue
-            if rounded:
-                rounded -= 1
-                found |= context.round_to_plan(node.dictionary.activities(), node.bounds)
-                self.cutoff = min(self.cutoff, context.best.cutoff)
-            waiting.extend(self._children(node, rows))
         self.exhausted = not waiting
         return self._take_points() or found
 

@@ -203,16 +203,16 @@ class KeptRoot(RootWork):
             return proof
         context = self.context
         if self.branched:
-            self._look_nearby(widen=True)
+            self._look_nearby()
         if context.best.value is None and context.time_to_dive():
             dive(context, self.dictionary, self.bounds, self.plan)
         return self.close("beaten", proof) if context.best.beats(proof.bound) else proof
 
     def cut(self, proof: Proof) -> Split | None:
-        """Add cuts as at any root, and look near the earlier plan again."""
+        """Add cuts as at any root, and look near the earlier plan if that is still to be done."""
         split = super().cut(proof)
-        if split is None and not self.closed:
-            self._look_nearby(widen=not self.branched)
+        if split is None and not self.closed and not self.branched:
+            self._look_nearby()
         return split
 
     @property
@@ -220,9 +220,9 @@ class KeptRoot(RootWork):
         """Whether the earlier tree has more than its root: else cuts are likely to settle it."""
         return len(self.carrier.kept.result.tree) > 1
 
-    def _look_nearby(self, widen: bool) -> None:
+    def _look_nearby(self) -> None:
         if self.plan is not None:
-            look_nearby(self.context, self.dictionary, self.bounds, self.plan, widen)
+            look_nearby(self.context, self.dictionary, self.bounds, self.plan)
 
 
 class Restart(Search):
