@@ -125,7 +125,7 @@ def restart_for_any_plan(
     return as_any_plan(problem, search.run())
 
 
-TRIED = 12  # pivots a node of the earlier tree from which its leaves are worth taking up
+TRIED = 24  # pivots a node of the earlier tree from which its leaves are worth taking up
 PATIENCE = 1.5  # nodes next to the earlier tree's after which its leaves are given up
 FEW = 30  # nodes that the leaves are granted in any case
 OUTGROWN = 4  # nodes next to the earlier tree's after which its root is given up as well
