@@ -401,7 +401,7 @@ def test_the_kept_tree_gives_what_a_search_from_nothing_gives():
     No cut may outlive that a rule of it can bend now.
     """
     compared = cuts = closed = 0
-    for proof in refuted(8):
+    for proof in refuted(3):
         names = tuple(rule.name for rule in proof.sheet.rules)
         for bending in (names, names[-1:], names[:1]):
             ways = list(freed_ways(proof, bending))
@@ -414,13 +414,13 @@ def test_the_kept_tree_gives_what_a_search_from_nothing_gives():
             compared += 1
             cuts += bool(proof.result.cuts)
             closed += closed_again(warm.result.tree)
-    assert compared > 150 and cuts > 80 and closed > 20, (compared, cuts, closed)
+    assert compared > 50 and cuts > 25 and closed > 5, (compared, cuts, closed)
 
 
 def test_gives_along_chains_of_changes_are_the_least():
     """The trees are carried over, translated, and speak of sheets without some soft rules."""
     gives = 0
-    for seed in range(60):
+    for seed in range(25):
         standing = solve(random_sheet(seed))
         rng = np.random.default_rng([seed, 99])
         for _ in range(3):
@@ -434,7 +434,7 @@ def test_gives_along_chains_of_changes_are_the_least():
             if answer.after.outcome not in ("optimal", "infeasible"):
                 break
             standing = answer.after
-    assert gives > 30, gives
+    assert gives > 12, gives
 
 
 @pytest.mark.parametrize(
