@@ -131,9 +131,15 @@ def closed_by_penalty(
     return closed
 
 
-def score(down: np.ndarray | float, up: np.ndarray | float) -> np.ndarray | float:
+def score(down: float, up: float) -> float:
     """Combine both sides' rises: their product, so that neither side is neglected."""
-    return np.maximum(down, SCORE_FLOOR) * np.maximum(up, SCORE_FLOOR)
+    return max(down, SCORE_FLOOR) * max(up, SCORE_FLOOR)
+
+
+def scores(gains: np.ndarray) -> np.ndarray:
+    """Return the scores of several activities, (k,), from both sides' rises, (2, k)."""
+    floored = np.maximum(gains, SCORE_FLOOR)
+    return floored[0] * floored[1]
 
 
 def choose(
@@ -159,7 +165,7 @@ def choose(
     closed = closed_by_penalty(dictionary, rows, first, entering, spare)
     ceiling = min(spare, 1e6 * (1.0 + abs(dictionary.value)))
     gains = costs.estimate(columns, fractions, np.minimum(first, ceiling))
-    best = (-score(*gains)).argsort(kind="stable")[:CANDIDATES]
+    best = (-scores(gains)).argsort(kind="stable")[:CANDIDATES]
     if closed:
         i = best.item(0)
         return Choice(

@@ -22,7 +22,7 @@ from typing import NamedTuple
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary, Status
-from intplan.search.branching import penalties, score
+from intplan.search.branching import penalties, scores
 from intplan.search.context import Context
 from intplan.search.diving import fractional_rows
 from intplan.search.tightening import Bounds
@@ -141,8 +141,7 @@ class _Nearby:
         gains, _ = penalties(dictionary, rows, values - np.floor(values))
         spare = self.cutoff - dictionary.value
         most = min(spare, WIDEST * (1.0 + abs(dictionary.value)))
-        capped = np.minimum(gains, most)
-        i = score(*capped).argmax().item()
+        i = scores(np.minimum(gains, most)).argmax().item()
         column, floor = dictionary.basic.item(rows[i]), np.floor(values.item(i))
         sides = [
             (gains.item(0, i), (column, bounds.least.item(column), floor)),
