@@ -100,6 +100,18 @@ def test_the_relaxation_and_its_bounds_are_left_as_they_are() -> None:
         np.testing.assert_array_equal(one, other)
 
 
+def test_amounts_that_doubles_do_not_hold_are_not_held() -> None:
+    """An earlier plan may bend a rule further, in the units of the rule, than doubles go."""
+    problem = problem_of(assignment(4, 10, 2))
+    root = open_root(problem)
+    assert root is not None
+    huge = [10**400, Fraction(-(10**400), 3)] * len(problem.cost)
+    held, costs = nearby._held(
+        root.context, root.dictionary, root.bounds, huge[: len(problem.cost)]
+    )
+    assert not len(held) and not len(costs)
+
+
 @pytest.mark.parametrize("most", [0, 1, 5])
 def test_it_solves_no_more_relaxations_than_it_may(
     most: int, monkeypatch: pytest.MonkeyPatch

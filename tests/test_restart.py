@@ -17,6 +17,7 @@ import pytest
 import intplan
 from intplan.planning import store
 from intplan.planning.restart import restarted
+from intplan.relaxation.dictionary import Stopped
 from intplan.relaxation.start import NoDualBasis
 from intplan.search import restart as search
 from intplan.sheet.changes import Changes, change_sheet
@@ -63,6 +64,23 @@ def test_earlier_nodes_that_a_limit_leaves_waiting_keep_their_evidence(
         assert again.outcome == "optimal"
         assert again.exact_value == intplan.solve(changes.sheet).exact_value
     assert kept, "no limit left an earlier node waiting"
+
+
+def test_an_interrupt_before_the_first_basis_proves_nothing(monkeypatch) -> None:
+    """The old plan fits and is in hand by then, but a better one may exist: here one does."""
+    def stopped(*args: Any) -> None:
+        raise Stopped
+
+    standing = intplan.solve(intplan.Sheet.from_arrays(**selection(5, 30, 2).arrays()))
+    changes = change_sheet(
+        standing.sheet, waive=[rule.name for rule in standing.sheet.rules[1:]]
+    )
+    assert restarted(standing, changes).exact_value > standing.exact_value
+    monkeypatch.setattr(search, "opened", stopped)
+    answer = restarted(standing, changes)
+    assert (answer.outcome, answer.exact_bound) == ("unfinished", None)
+    assert answer.exact_value == standing.exact_value
+    verify_standing(answer)
 
 
 @pytest.mark.parametrize("instance", INSTANCES, ids=lambda instance: instance.family)

@@ -170,6 +170,7 @@ class Search:
         self.context.record.open(0, None, 0, ())
         self.numbered = 1
         root = self._root()
+        self._current = root
         try:
             try:
                 open_root = root.prepare()
@@ -178,6 +179,7 @@ class Search:
                 if ray is not None:
                     return self._unbounded(ray)
                 open_root = True
+            self._current = None
             if open_root:
                 self._explore(self._solve_root(root))
         except NoLimit as found:

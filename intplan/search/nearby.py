@@ -76,9 +76,11 @@ def _held(
 
     These are the whole activities that the relaxation has where the plan has them.
     """
-    amounts = np.array([float(amount) for amount in plan])
-    same = np.abs(start.activities() - amounts) < AGREE
-    held = (context.problem.whole & same & (bounds.least < bounds.most)).nonzero()[0]
+    point = start.activities()
+    free = (context.problem.whole & (bounds.least < bounds.most)).nonzero()[0]
+    pairs = ((x, plan[j]) for j, x in zip(free.tolist(), point[free].tolist(), strict=True))
+    same = [x - AGREE < amount < x + AGREE for x, amount in pairs]  # doubles need not hold it
+    held = free[np.array(same, bool)]
     places = start.place[held]
     costs = np.where(places < 0, np.abs(start.reduced[np.minimum(places, -1) * -1 - 1]), 0.0)
     return held, costs
