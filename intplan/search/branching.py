@@ -22,6 +22,7 @@ CANDIDATES = 8  # most activities to try at a node
 LOOKAHEAD = 3  # tries without a better score before the rest is left alone
 TRIAL_PIVOTS = 12  # most dual pivots of one trial
 SCORE_FLOOR = 1e-6
+WIDEST = 1e6  # a rise counts at most so many times the value, where there is no plan to bound it
 
 
 class Closed(NamedTuple):
@@ -136,6 +137,11 @@ def score(down: float, up: float) -> float:
     return max(down, SCORE_FLOOR) * max(up, SCORE_FLOOR)
 
 
+def highest_rise(dictionary: Dictionary, spare: float) -> float:
+    """Return the rise at which a child counts as closed: `spare` if that is finite."""
+    return min(spare, WIDEST * (1.0 + abs(dictionary.value)))
+
+
 def scores(gains: np.ndarray) -> np.ndarray:
     """Return the scores of several activities, (k,), from both sides' rises, (2, k)."""
     floored = np.maximum(gains, SCORE_FLOOR)
@@ -163,7 +169,7 @@ def choose(
     first, entering = penalties(dictionary, rows, fractions)
     spare = max(cutoff - dictionary.value, 0.0)
     closed = closed_by_penalty(dictionary, rows, first, entering, spare)
-    ceiling = min(spare, 1e6 * (1.0 + abs(dictionary.value)))
+    ceiling = highest_rise(dictionary, spare)
     gains = costs.estimate(columns, fractions, np.minimum(first, ceiling))
     best = (-scores(gains)).argsort(kind="stable")[:CANDIDATES]
     if closed:

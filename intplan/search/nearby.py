@@ -22,7 +22,7 @@ from typing import NamedTuple
 import numpy as np
 
 from intplan.relaxation.dictionary import Dictionary, Status
-from intplan.search.branching import penalties, scores
+from intplan.search.branching import highest_rise, penalties, scores
 from intplan.search.context import Context
 from intplan.search.diving import fractional_rows
 from intplan.search.tightening import Bounds
@@ -33,7 +33,6 @@ PIVOTS_A_NODE = 60
 LIVELY = 0.1  # share of the gap below which a reduced cost lets its activity go
 AGREE = 1e-6  # distance at which two amounts count as the same
 POINTS = 3  # points with divisible amounts that are tried as plans
-WIDEST = 1e6  # units of the value's size that a rise counts at most without a cutoff
 
 
 class _Open(NamedTuple):
@@ -142,8 +141,7 @@ class _Nearby:
         values = dictionary.values[rows]
         gains, _ = penalties(dictionary, rows, values - np.floor(values))
         spare = self.cutoff - dictionary.value
-        most = min(spare, WIDEST * (1.0 + abs(dictionary.value)))
-        i = scores(np.minimum(gains, most)).argmax().item()
+        i = scores(np.minimum(gains, highest_rise(dictionary, spare))).argmax().item()
         column, floor = dictionary.basic.item(rows[i]), np.floor(values.item(i))
         sides = [
             (gains.item(0, i), (column, bounds.least.item(column), floor)),
