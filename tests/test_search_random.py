@@ -231,7 +231,7 @@ def test_progress_is_reported_in_units_of_the_aim() -> None:
 
 def test_a_gap_is_a_percentage_of_the_value() -> None:
     """Within the gap of the true best, and the bound is true as well."""
-    for instance in (*map(random_problem, range(0, 240)), HARD):
+    for instance in (*map(random_problem, range(0, 240, 2)), HARD):
         best = branch_and_cut(problem_of(instance))
         if best.outcome != "optimal":
             continue
