@@ -477,3 +477,13 @@ def test_help_of_the_commands(call):
         status, text, _ = call(command, "--help")
         assert status == 0 and "Exit status: 0" in text
     assert "--stay-close [PERCENT]" in call("replan", "--help")[1]
+
+
+def test_costs_past_all_doubles_are_refused_in_one_line(folder, failure):
+    """Bends of some 1e9 units at 1e299 each come to more than the search can take."""
+    Path("vast.toml").write_text(
+        "[activities]\n"
+        + "".join(f"{name} = {{ whole = false, most = 9e9 }}\n" for name in "ab")
+        + '[rules]\nr = "1e299*a - 1e299*b >= 1e299"\ns = "b >= a + 8e9"\n'
+    )
+    assert "passes 1.8e308" in failure("clash", "vast.toml")

@@ -15,6 +15,7 @@ from intplan.search.context import Context
 from intplan.search.diving import dive, fractional_rows
 from intplan.search.evidence import LEAST, MOST, Proof
 from intplan.search.exact import ExactAnswer
+from intplan.search.incumbent import in_doubles
 from intplan.search.node import Branch
 from intplan.search.tightening import Bounds, tighten_by_cost
 from intplan.sheet.problem import Number, lowest
@@ -514,7 +515,7 @@ class NodeWork:
 
 def rounded_down(value: Fraction) -> float:
     """Return a double that is at most an exact value."""
-    nearest = float(value)
+    nearest = in_doubles(value)
     return nearest if Fraction(nearest) <= value else math.nextafter(nearest, -math.inf)
 
 

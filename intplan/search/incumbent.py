@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from fractions import Fraction
 
+from intplan.errors import IntplanError
 from intplan.sheet.problem import Number, Problem
 
 
@@ -47,7 +48,7 @@ class Incumbent:
         self.target = value - max(self.step, allowance)
         if self.least_target is None or self.target < self.least_target:
             self.least_target = self.target
-        size = 1.0 + abs(float(value))
+        size = 1.0 + abs(in_doubles(value))
         self.threshold = math.nextafter(float(self.target), math.inf)
         margin = max(1e-11 * size, 1e-6 * float(self.step))
         self.cutoff = self.threshold + margin
@@ -90,3 +91,20 @@ class Incumbent:
         """Return a bound in the engine's cost, lifted to the next cost a plan can have."""
         exact = Fraction(bound)
         return math.ceil(exact / self.step) * self.step if self.step else exact
+
+
+def in_doubles(cost: Fraction) -> float:
+    """Return the double nearest to a cost.
+
+    Raises
+    ------
+    IntplanError
+        There is none.
+    """
+    try:
+        return float(cost)
+    except OverflowError:
+        raise IntplanError(
+            "what a plan comes to here passes 1.8e308, the largest number the search can take;"
+            " larger units make it smaller"
+        ) from None
