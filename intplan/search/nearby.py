@@ -94,7 +94,7 @@ class _Nearby:
         self.bounds = bounds
         self.left = NODES
         self.exhausted = False  # whether the last search came to its end
-        self.cutoff = context.best.cutoff
+        self.cutoff = np.inf
         self.points: list[np.ndarray] = []
 
     def run(self, held: np.ndarray) -> bool:
@@ -105,8 +105,9 @@ class _Nearby:
         dictionary = self.start.copy()
         dictionary.set_bounds(held.tolist(), bounds.least, bounds.most)
         waiting = [_Open(dictionary, bounds, None)]
-        found = False
+        self.cutoff = context.best.cutoff
         self.points.clear()
+        found = False
         while waiting and self.left and not context.limits.out_of_time():
             node = waiting.pop()
             self.left -= 1
