@@ -279,6 +279,7 @@ def test_the_answer_outlives_a_failure_to_keep_it(call, monkeypatch):
         (["--waive", "oven", "--stay-close", "101"], "no percentage"),
         (["--waive", "oven", "--stay-close", "much"], "no percentage"),
         (["--waive", "oven", "--stay-close", "-1"], "'--stay-close': '-1' is no percentage"),
+        (["--waive", "oven", "--stay-close", "-inf"], "'--stay-close': '-inf' is no percentage"),
         (["--stay-close=-.5", "--waive", "oven"], "'--stay-close': '-.5' is no percentage"),
         (["--waive", "oven", "--stay-close", "-x"], "No such option"),
         (["--waive", "oven", "--node-limit", "0"], "no whole number from 1"),

@@ -67,7 +67,7 @@ class ChangeCommand(click.Command):
         """Read the words of a command line."""
         words = [word for arg in args for word in re.split("(?<=^--stay-close)=", arg)]
         for option, value in pairwise(words):
-            if option == "--stay-close" and re.match(r"-[.\d]", value):
+            if option == "--stay-close" and re.match(r"-(?:[.\d]|inf|nan)", value):
                 param = next(param for param in self.params if option in param.opts)
                 Percent().refuse(value, param, ctx)
         return super().parse_args(ctx, args)
