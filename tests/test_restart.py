@@ -119,42 +119,34 @@ def test_nodes_solved_before_the_leaves_are_given_up_count(
 
 
 @pytest.mark.parametrize("instance", INSTANCES, ids=lambda instance: instance.family)
-def test_nodes_for_which_doubles_find_no_basis_start_from_the_slack_basis(
-    instance: Instance, monkeypatch: pytest.MonkeyPatch
+@pytest.mark.parametrize(
+    ("at", "solved", "error"),
+    [
+        ("leaves", 2, NoDualBasis(np.zeros(1), 0)),
+        ("root", 0, np.linalg.LinAlgError("Singular matrix")),
+    ],
+    ids=["nodes", "root"],
+)
+def test_where_doubles_find_no_basis_the_slack_basis_is_the_first(
+    instance: Instance, at: str, solved: int, error: Exception, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    """As nodes of a search from nothing do; what follows is proven anyway."""
+    """As in a search from nothing; the cuts stay, and what follows is proven anyway.
+
+    Refused are the bases from some number of solved nodes on: of the root too, or of nodes below.
+    """
     standing, changes = standing_of(instance)
     expected = intplan.solve(changes.sheet).exact_value
     refused = []
     start = search.opened
 
     def opened(context: Any, *where: Any) -> Any:
-        if context.nodes > 1:
+        if context.nodes >= solved:
             refused.append(context.nodes)
-            raise NoDualBasis(context.problem.cost, 0)
+            raise error
         return start(context, *where)
 
     monkeypatch.setattr(search, "opened", opened)
-    answer = restarted(standing, changes, at="leaves")
-    assert refused and answer.outcome == "optimal" and answer.exact_value == expected
-    verify_standing(answer)
-
-
-@pytest.mark.parametrize("instance", INSTANCES, ids=lambda instance: instance.family)
-def test_a_kept_root_that_is_singular_in_doubles_starts_from_the_slack_basis(
-    instance: Instance, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    """The cuts that were taken over stay; what follows is proven anyway."""
-    standing, changes = standing_of(instance)
-    expected = intplan.solve(changes.sheet).exact_value
-    refused = []
-
-    def singular(context: Any, *_: Any) -> None:
-        refused.append(context.nodes)
-        raise np.linalg.LinAlgError("Singular matrix")
-
-    monkeypatch.setattr(search, "opened", singular)
-    answer = restarted(standing, changes, at="root")
+    answer = restarted(standing, changes, at=at)
     assert refused and answer.outcome == "optimal" and answer.exact_value == expected
     verify_standing(answer)
 

@@ -29,7 +29,7 @@ from intplan.search.tightening import Bounds
 from intplan.sheet.problem import Number
 
 NODES = 100  # most relaxations of one look around a plan
-PIVOTS_A_NODE = 60
+PIVOTS_A_NODE = 60  # most dual pivots of one of them
 LIVELY = 0.1  # share of the gap below which a reduced cost lets its activity go
 AGREE = 1e-6  # distance at which two amounts count as the same
 POINTS = 3  # points with divisible amounts that are tried as plans
